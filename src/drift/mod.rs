@@ -1,0 +1,4 @@
+//! The mathematics of one window: slices in, values out. Knows no channel, no clock, no unit name.
+
+pub mod family;
+pub mod structure;

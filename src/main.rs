@@ -1,0 +1,2 @@
+//! argv → command → exit code.
+fn main() {}
