@@ -1,4 +1,11 @@
 //! The watch over channels: a deterministic state machine; `now` is an argument.
+//!
+//! The road of a reading through this floor: [`reading`] → [`engine`] → [`channel`] → [`window`]
+//! → (when due) a curve, its residuals examined, how far it may be trusted → [`finding`] → [`alert`],
+//! worded by [`wording`].
 
+pub mod limits;
+pub mod reading;
 pub mod settings;
 pub mod time;
+pub mod window;

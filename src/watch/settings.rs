@@ -50,3 +50,34 @@ pub enum Statement {
     /// On that day.
     NextVisit(EventTime),
 }
+
+#[cfg(test)]
+pub(crate) mod tests {
+    use super::*;
+
+    /// Plain settings for tests: no bins, no lateness, a year's span, daily refits.
+    pub(crate) fn watch_settings() -> WatchSettings {
+        WatchSettings {
+            unit: "bar".to_owned(),
+            tolerance: None,
+            window_span: Span::from_days(400.0),
+            window_points: 512,
+            bin: None,
+            refit_every: Span::from_days(1.0),
+            lateness: Span(0),
+            families: vec![Family::Logarithmic, Family::Power, Family::Linear],
+            statement: None,
+            calibrated: None,
+            silent_after: Span::from_days(3.0),
+        }
+    }
+
+    /// A site of one watch with these settings.
+    pub(crate) fn site_settings(watch: WatchSettings) -> SiteSettings {
+        SiteSettings {
+            site: "saltmarsh".to_owned(),
+            false_alerts_per_year: 12.0,
+            watches: vec![watch],
+        }
+    }
+}
