@@ -71,13 +71,4 @@ pub(crate) mod tests {
             silent_after: Span::from_days(3.0),
         }
     }
-
-    /// A site of one watch with these settings.
-    pub(crate) fn site_settings(watch: WatchSettings) -> SiteSettings {
-        SiteSettings {
-            site: "saltmarsh".to_owned(),
-            false_alerts_per_year: 12.0,
-            watches: vec![watch],
-        }
-    }
 }
