@@ -3,4 +3,5 @@
 pub mod broker;
 pub mod intake;
 pub mod settings;
+pub mod shown;
 pub mod store;
