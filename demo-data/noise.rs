@@ -107,7 +107,8 @@ mod tests {
             let n = e.len() as f64;
             let mean = e.iter().sum::<f64>() / n;
             let variance = e.iter().map(|v| (v - mean).powi(2)).sum::<f64>() / n;
-            let lag1 = e.windows(2).map(|w| (w[0] - mean) * (w[1] - mean)).sum::<f64>() / n / variance;
+            let lag1 =
+                e.windows(2).map(|w| (w[0] - mean) * (w[1] - mean)).sum::<f64>() / n / variance;
             assert!((variance - 1.0).abs() < 0.04, "seed 7, phi {phi}: variance {variance}");
             assert!((lag1 - phi).abs() < 0.01, "seed 7, phi {phi}: lag-1 correlation {lag1}");
         }

@@ -202,7 +202,9 @@ fn readings(place: usize, instrument: &Instrument) -> Vec<Row> {
     let mut rows = Vec::new();
     while time_s <= last {
         let garbage = match instrument.story {
-            Story::Garbage { one_in } if random.below(one_in) == 0 => Some(random.below(5) as usize),
+            Story::Garbage { one_in } if random.below(one_in) == 0 => {
+                Some(random.below(5) as usize)
+            }
             _ => None,
         };
         let y = deviation(instrument, time_s, age_zero, &mut noise);

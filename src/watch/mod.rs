@@ -4,8 +4,10 @@
 //! → (when due) a curve, its residuals examined, how far it may be trusted → [`finding`] → [`alert`],
 //! worded by [`wording`].
 
+pub mod alert;
 pub mod limits;
 pub mod reading;
 pub mod settings;
 pub mod time;
 pub mod window;
+pub mod wording;
