@@ -1,4 +1,5 @@
 //! The mathematics of one window: slices in, values out. Knows no channel, no clock, no unit name.
 
 pub mod family;
+pub mod serial;
 pub mod structure;
