@@ -5,3 +5,4 @@ pub mod family;
 pub mod fit;
 pub mod serial;
 pub mod structure;
+pub mod tails;
