@@ -3,6 +3,7 @@
 //! Each kind yields one score q = −log10 p of its best candidate. How large a score must be to count
 //! is not decided here but by the budget for false alerts, one floor up.
 
+pub mod baseline;
 pub mod bend;
 pub mod confirm;
 pub mod dependence;
