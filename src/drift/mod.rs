@@ -3,6 +3,7 @@
 pub mod choose;
 pub mod family;
 pub mod fit;
+pub mod forecast;
 pub mod serial;
 pub mod structure;
 pub mod tails;

@@ -66,7 +66,7 @@ pub fn examine(window: &Whitened, familiar: f64) -> Examination {
 }
 
 #[cfg(test)]
-mod tests {
+pub(crate) mod tests {
     use super::*;
     use crate::drift::family::Family;
     use crate::drift::fit::{FitOutcome, fit};
