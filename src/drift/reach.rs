@@ -127,6 +127,11 @@ impl Reach {
     }
 }
 
+/// Returns the largest share of its span that a window of `n` points may be carried past its newest.
+pub fn cap(n: usize) -> f64 {
+    if n < POINTS_FOR_FULL_CAP { CAP_OF_SHORT_WINDOWS } else { HORIZONS[HORIZONS.len() - 1] }
+}
+
 /// Assesses how far a window supports statements.
 ///
 /// # Arguments
@@ -162,7 +167,7 @@ pub fn assess(x: &[f64], y: &[f64], families: &[Family], phi: f64) -> Reach {
             }
         }
     }
-    let cap = if n < POINTS_FOR_FULL_CAP { CAP_OF_SHORT_WINDOWS } else { 0.6 };
+    let cap = cap(n);
     let mut widening = Vec::new();
     let mut factor: f64 = 1.0;
     let mut limit = Limit::Cap { share: cap, span_d: span };

@@ -90,6 +90,18 @@ impl Budget {
             + score.rise() * (pace.phi - 0.3)
     }
 
+    /// Returns the score that keeps an open alert open: [`NEAR`] below the threshold, but not so low
+    /// that an honest window would reach it by chance within twice its length; else an alert under
+    /// a generous budget would never close.
+    pub fn keeps_open(&self, score: Score, pace: &Pace) -> f64 {
+        let threshold = self.threshold(score, pace);
+        let stride = if score == Score::Shift { 1.0 } else { pace.stride.max(1.0) };
+        let by_chance = (2.0 * count(pace.points) / stride).max(1.0).log10()
+            + score.search(pace.points)
+            + score.rise() * (pace.phi - 0.3);
+        (threshold - NEAR).max(by_chance).min(threshold)
+    }
+
     /// What the budget means, for people.
     pub fn words(&self, points: usize) -> String {
         let years = count(self.channels.max(1)) / self.false_alerts_per_year;

@@ -8,7 +8,7 @@ use crate::drift::choose::{Choice, choose};
 use crate::drift::fit::{Fit, FitOutcome, fit};
 use crate::drift::forecast::{Forecaster, own_correlation, sandwich};
 use crate::drift::reach::{Limit, Reach, assess};
-use crate::drift::serial::{effective_count, spacing_of};
+use crate::drift::serial::{count, effective_count, spacing_of};
 use crate::drift::structure::whitened::Whitened;
 use crate::watch::alert::{AlertBook, AlertEvent, Owner};
 use crate::watch::budget::Budget;
@@ -94,6 +94,7 @@ pub struct Channel {
     pub patience: judge::Patience,
     points_ever: u64,
     points_at_refit: u64,
+    points_at_reach: u64,
     stride: f64,
 }
 
@@ -135,6 +136,7 @@ impl Channel {
             patience: judge::Patience::default(),
             points_ever: 0,
             points_at_refit: 0,
+            points_at_reach: 0,
             stride: 1.0,
         }
     }
@@ -256,13 +258,20 @@ impl Channel {
     }
 
     /// Reach is assessed anew every tenth of the window, else carried on, less what has passed.
-    fn reach(&self, context: &Context<'_>, x: &[f64], y: &[f64], no_curve: bool) -> Reach {
+    fn reach(&mut self, context: &Context<'_>, x: &[f64], y: &[f64], no_curve: bool) -> Reach {
         if no_curve {
             return Reach::none(Limit::NoCurve);
         }
         if context.rules.statement.is_none() && context.rules.tolerance.is_none() {
             return Reach::none(Limit::NotAsked);
         }
+        if let Some(refit) = &self.refit
+            && refit.reach.days_past_newest > 0.0
+            && points(self.points_ever, self.points_at_reach) < count(x.len() / 10)
+        {
+            return refit.reach.clone();
+        }
+        self.points_at_reach = self.points_ever;
         assess(x, y, &context.rules.families, self.residuals.phi(x.len()))
     }
 
@@ -339,6 +348,8 @@ impl Channel {
         }
         self.window.begin_at(incident.at);
         self.residuals.begin_anew();
+        self.refit =
+            self.refit.take().map(|refit| Refit { reach: Reach::none(Limit::NoCurve), ..refit });
         self.refit(context, newest);
     }
 }

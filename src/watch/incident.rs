@@ -9,7 +9,7 @@ use crate::drift::structure::shift::ShiftDetector;
 use crate::drift::structure::whitened::Whitened;
 use crate::drift::structure::{Examination, Found, examine};
 use crate::watch::alert::Kind;
-use crate::watch::budget::{Budget, NEAR, Pace, Score, search_of_name};
+use crate::watch::budget::{Budget, Pace, Score, search_of_name};
 use crate::watch::time::EventTime;
 use serde::{Deserialize, Serialize};
 
@@ -149,22 +149,32 @@ impl ResidualWatch {
             let exemplary = self.look.found.largest_in_mean() <= NOT_EXEMPLARY_ABOVE;
             self.baseline.learn(place.newest, place.stride, self.own_phi, exemplary);
         }
-        self.decide(place, points, looked)
+        let scores = self.scores(looked);
+        let near = scores.iter().any(|&(score, q, _)| q >= place.budget.keeps_open(score, &pace));
+        let excess = scores.iter().map(|&(_, q, t)| q - t).fold(f64::NEG_INFINITY, f64::max);
+        self.decide(place, points, looked, excess, near)
     }
 
-    /// How far the strongest score is above its threshold.
-    fn excess(&self, looked: bool) -> f64 {
-        let shift = self.look.shift.0 - self.look.shift.1;
-        if !looked {
-            return shift;
+    /// Each score of this look with its threshold.
+    fn scores(&self, looked: bool) -> Vec<(Score, f64, f64)> {
+        let look = &self.look;
+        let mut scores = vec![(Score::Shift, look.shift.0, look.shift.1)];
+        if looked {
+            let found = &look.found;
+            scores.push((Score::Bend, found.bend.score, look.bend_threshold));
+            scores.push((Score::Dependence, found.dependence.score, look.dependence_threshold));
         }
-        let bend = self.look.found.bend.score - self.look.bend_threshold;
-        let dependence = self.look.found.dependence.score - self.look.dependence_threshold;
-        shift.max(bend).max(dependence)
+        scores
     }
 
-    fn decide(&mut self, place: &Place<'_>, points: usize, looked: bool) -> Turn {
-        let excess = self.excess(looked);
+    fn decide(
+        &mut self,
+        place: &Place<'_>,
+        points: usize,
+        looked: bool,
+        excess: f64,
+        near: bool,
+    ) -> Turn {
         let (kind, found) = self.best_name(points);
         let at = place.times.get(found.index).copied().unwrap_or(EventTime(0));
         let Some(mut incident) = self.incident else {
@@ -185,7 +195,7 @@ impl ResidualWatch {
             self.incident = Some(incident);
             return Turn::Opened(incident);
         };
-        if excess >= -NEAR {
+        if near {
             incident.last_near = place.newest;
         }
         let since = place.newest - incident.opened;

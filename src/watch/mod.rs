@@ -7,6 +7,7 @@
 pub mod alert;
 pub mod budget;
 pub mod channel;
+pub mod engine;
 pub mod finding;
 pub mod incident;
 pub mod judge;

@@ -15,10 +15,11 @@ use crate::watch::time::{EventTime, Span};
 use crate::watch::wording;
 use std::collections::BTreeMap;
 
+/// So much of its span a window carries a statement ahead at the best: the backtests' origins allow
+/// a half, a little less is counted on.
+const SHARE_AT_BEST: f64 = 0.45;
 /// Points whose median stands for the deviation while no curve can be trusted.
 const NEWEST_POINTS: usize = 5;
-/// The window may carry a statement so far, as a share of its span, once it is full.
-const SHARE_WHEN_FULL: f64 = 0.6;
 
 /// The finding, if the channel has a point yet.
 pub fn finding_if_any(channel: &Channel, context: &Context<'_>) -> Option<Finding> {
@@ -163,12 +164,10 @@ pub fn gathering(channel: &Channel, context: &Context<'_>) -> Option<String> {
     let span = newest.days_since(oldest);
     let full_span = context.rules.window_span.days();
     let growing = points.len() < context.rules.window_points && span < 0.98 * full_span;
-    let enough = needs / SHARE_WHEN_FULL;
-    let limited_by_span = matches!(
-        channel.refit.as_ref()?.reach.limit,
-        crate::drift::reach::Limit::Cap { .. } | crate::drift::reach::Limit::TooFewBacktests { .. }
-    );
-    (growing && limited_by_span && enough <= full_span).then(|| {
+    let enough = needs / SHARE_AT_BEST;
+    let share = SHARE_AT_BEST.min(crate::drift::reach::cap(points.len()));
+    let too_young = span * share < needs;
+    (growing && too_young && enough <= full_span).then(|| {
         format!(
             "gathering: the window spans {} of the {} that this statement needs",
             wording::days(span),

@@ -1,0 +1,419 @@
+//! The engine: all channels, the budget they share, and what the shell must do.
+//!
+//! Readings and actions go in with their journal numbers, effects come out. The same readings in the
+//! same order give the same effects, whether live, replayed or continued after a restart.
+
+use crate::watch::alert::{AlertEvent, Episode};
+use crate::watch::budget::Budget;
+use crate::watch::channel::{Channel, Context, Outcome};
+use crate::watch::finding::Finding;
+use crate::watch::incident::Look;
+use crate::watch::judge;
+use crate::watch::limits::CHANNELS_MAX;
+use crate::watch::reading::{Counts, Reading, Taken};
+use crate::watch::report;
+use crate::watch::settings::SiteSettings;
+use crate::watch::time::{EventTime, ShellTime};
+use std::collections::BTreeMap;
+
+/// What the shell must do.
+#[derive(Clone, Debug, PartialEq)]
+pub enum Effect {
+    /// Publish, retained: the newest finding of a channel.
+    Finding(Box<Finding>),
+    /// Publish, log and keep: a transition of an alert.
+    Alert {
+        /// The channel.
+        channel: String,
+        /// What happened.
+        event: Box<AlertEvent>,
+        /// The finding at that moment, for the event's context.
+        finding: Option<Box<Finding>>,
+    },
+    /// Publish, retained: the alerts that stand now.
+    Standing {
+        /// The channel.
+        channel: String,
+        /// In the order in which they were raised.
+        open: Vec<Episode>,
+    },
+    /// For auditing: a look at the residuals.
+    Looked {
+        /// The channel.
+        channel: String,
+        /// The newest point's time.
+        at: EventTime,
+        /// The newest point's index.
+        index: u64,
+        /// Scores and thresholds.
+        look: Look,
+    },
+}
+
+/// Something that a person tells the engine; journaled like a reading.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub enum Action {
+    /// The channel was calibrated: age zero is there.
+    Calibrated {
+        /// When.
+        at: EventTime,
+    },
+    /// An alert was seen.
+    Acknowledge {
+        /// Its id.
+        alert: String,
+    },
+    /// An alert is put aside.
+    Shelve {
+        /// Its id.
+        alert: String,
+        /// Until when.
+        until: ShellTime,
+    },
+}
+
+/// All channels and what they share.
+#[derive(Debug)]
+pub struct Engine {
+    settings: SiteSettings,
+    channels: Vec<Channel>,
+    /// The watch of each channel, index into the settings.
+    watches: Vec<usize>,
+    index: BTreeMap<String, usize>,
+    /// Journal numbers at which channels began, rising.
+    births: Vec<u64>,
+    listening_since: ShellTime,
+    effects: Vec<Effect>,
+    refused: Counts,
+}
+
+impl Engine {
+    /// An engine that knows no channel yet.
+    pub fn new(settings: SiteSettings, now: ShellTime) -> Engine {
+        Engine {
+            settings,
+            channels: Vec::new(),
+            watches: Vec::new(),
+            index: BTreeMap::new(),
+            births: Vec::new(),
+            listening_since: now,
+            effects: Vec::new(),
+            refused: Counts::default(),
+        }
+    }
+
+    /// Continues with a channel saved earlier; `watch` is its index in the present settings.
+    pub fn restore(&mut self, channel: Channel, watch: usize) {
+        let place = self.births.partition_point(|&born| born <= channel.born);
+        self.births.insert(place, channel.born);
+        self.index.insert(channel.name.clone(), self.channels.len());
+        self.channels.push(channel);
+        self.watches.push(watch);
+    }
+
+    /// Takes a reading that is already durable.
+    pub fn take(
+        &mut self,
+        channel: &str,
+        watch: usize,
+        reading: &Reading,
+        now: ShellTime,
+    ) -> Taken {
+        let Some(place) = self.place_of(channel, watch, reading.serial, now) else {
+            self.refused.note(Taken::TooManyChannels);
+            return Taken::TooManyChannels;
+        };
+        let context = context(&self.settings, self.watches[place], &self.births, reading.serial);
+        let (taken, outcome) = self.channels[place].take(&context, reading, now);
+        self.tell(place, outcome);
+        taken
+    }
+
+    /// Does what a person says. False: no such channel or alert, or nothing to change.
+    pub fn act(&mut self, channel: &str, action: &Action, serial: u64, now: ShellTime) -> bool {
+        let Some(&place) = self.index.get(channel) else { return false };
+        let context = context(&self.settings, self.watches[place], &self.births, serial);
+        let known = &mut self.channels[place];
+        let time = known.window.newest_reading().unwrap_or(EventTime(now.0));
+        let mut outcome = Outcome::default();
+        match action {
+            Action::Calibrated { at } => outcome = known.calibrated(&context, *at),
+            Action::Acknowledge { alert } => {
+                outcome.events.extend(known.alerts.acknowledge(alert, time));
+            }
+            Action::Shelve { alert, until } => {
+                outcome.events.extend(known.alerts.shelve(alert, *until, time));
+            }
+        }
+        let changed = matches!(action, Action::Calibrated { .. }) || !outcome.events.is_empty();
+        self.tell(place, outcome);
+        changed
+    }
+
+    /// When something wants attention by the shell's time: silence or the end of a shelf.
+    pub fn next_due(&self) -> Option<ShellTime> {
+        self.channels
+            .iter()
+            .zip(&self.watches)
+            .filter_map(|(channel, &watch)| {
+                let rules = &self.settings.watches[watch];
+                let silent =
+                    channel.alerts.holding(crate::watch::alert::Concern::Silence).is_none().then(
+                        || channel.last_arrival.max(self.listening_since).plus(rules.silent_after),
+                    );
+                silent.into_iter().chain(channel.alerts.next_unshelving()).min()
+            })
+            .min()
+    }
+
+    /// Does what is due by the shell's time.
+    pub fn tick(&mut self, now: ShellTime) {
+        for place in 0..self.channels.len() {
+            let context = context(&self.settings, self.watches[place], &self.births, u64::MAX);
+            let channel = &mut self.channels[place];
+            let mut outcome = Outcome::default();
+            judge::silence(channel, &context, now, self.listening_since, &mut outcome);
+            let time = channel.window.newest_reading().unwrap_or(EventTime(now.0));
+            outcome.events.extend(channel.alerts.unshelve(now, time));
+            self.tell(place, outcome);
+        }
+    }
+
+    /// What the shell must do since the last call, in order.
+    pub fn effects(&mut self) -> Vec<Effect> {
+        std::mem::take(&mut self.effects)
+    }
+
+    /// One channel, as it is.
+    pub fn observe(&self, channel: &str) -> Option<&Channel> {
+        self.index.get(channel).map(|&place| &self.channels[place])
+    }
+
+    /// All channels, in the order of their names.
+    pub fn overview(&self) -> impl Iterator<Item = (&Channel, Option<Finding>)> {
+        self.index.values().map(|&place| {
+            let context = context(&self.settings, self.watches[place], &self.births, u64::MAX);
+            let channel = &self.channels[place];
+            (channel, report::finding_if_any(channel, &context))
+        })
+    }
+
+    /// What became of all readings.
+    pub fn counts(&self) -> Counts {
+        let mut sum = self.refused.clone();
+        self.channels.iter().for_each(|channel| sum.add(&channel.counts));
+        sum
+    }
+
+    /// The settings in force.
+    pub fn settings(&self) -> &SiteSettings {
+        &self.settings
+    }
+
+    fn place_of(&mut self, name: &str, watch: usize, serial: u64, now: ShellTime) -> Option<usize> {
+        if let Some(&place) = self.index.get(name) {
+            return Some(place);
+        }
+        if self.channels.len() >= CHANNELS_MAX {
+            return None;
+        }
+        self.restore(Channel::new(name.to_owned(), serial, now), watch);
+        Some(self.channels.len() - 1)
+    }
+
+    /// Turns what followed from an input into effects.
+    fn tell(&mut self, place: usize, outcome: Outcome) {
+        let channel = &self.channels[place];
+        let name = &channel.name;
+        for (at, index, look) in outcome.looks {
+            self.effects.push(Effect::Looked { channel: name.clone(), at, index, look });
+        }
+        let finding = outcome.findings.into_iter().next_back();
+        let any = !outcome.events.is_empty();
+        for event in outcome.events {
+            self.effects.push(Effect::Alert {
+                channel: name.clone(),
+                event: Box::new(event),
+                finding: finding.clone().map(Box::new),
+            });
+        }
+        if any {
+            self.effects.push(Effect::Standing {
+                channel: name.clone(),
+                open: channel.alerts.open().to_vec(),
+            });
+        }
+        self.effects.extend(finding.map(|finding| Effect::Finding(Box::new(finding))));
+    }
+}
+
+/// The budget counts the channels that existed when this journal number was made, so that a restart,
+/// which knows all of them at once, comes to the same thresholds.
+fn context<'a>(
+    settings: &'a SiteSettings,
+    watch: usize,
+    births: &[u64],
+    serial: u64,
+) -> Context<'a> {
+    Context {
+        site: &settings.site,
+        rules: &settings.watches[watch],
+        budget: Budget {
+            false_alerts_per_year: settings.false_alerts_per_year,
+            channels: births.partition_point(|&born| born <= serial).max(1),
+        },
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::drift::structure::tests::noise;
+    use crate::watch::settings::tests::watch_settings;
+    use crate::watch::settings::{Statement, WatchSettings};
+    use crate::watch::time::{DAY_US, Span};
+
+    const START: i64 = 1_780_000_000_000_000;
+    const STEP_US: i64 = DAY_US / 4;
+
+    fn site(watch: WatchSettings) -> SiteSettings {
+        SiteSettings {
+            site: "saltmarsh".to_owned(),
+            false_alerts_per_year: 0.5,
+            watches: vec![watch],
+        }
+    }
+
+    fn feed(engine: &mut Engine, from: usize, values: &[f64]) -> Vec<String> {
+        let mut lines = Vec::new();
+        for (i, &deviation) in values.iter().enumerate() {
+            let k = from + i;
+            let time = START + (k as i64 + 1) * STEP_US;
+            let reading = Reading { serial: k as u64 + 1, time: EventTime(time), deviation };
+            engine.take("press.PT-1", 0, &reading, ShellTime(time));
+            for effect in engine.effects() {
+                if let Effect::Alert { event, .. } = effect {
+                    let day = (event.time.0 - START) / DAY_US;
+                    let kind = event.episode.claim.kind.name();
+                    lines.push(format!("{} {kind} d{day} {}", event.transition.name(), event.id));
+                }
+            }
+        }
+        lines
+    }
+
+    fn curve(n: usize, seed: u64, added: impl Fn(usize) -> f64) -> Vec<f64> {
+        println!("seed {seed}");
+        noise(seed, n, 0.3)
+            .iter()
+            .enumerate()
+            .map(|(i, e)| 0.5 * ((i as f64 + 1.0) / 4.0).ln() + 0.02 * e + added(i))
+            .collect()
+    }
+
+    fn rules() -> WatchSettings {
+        WatchSettings {
+            window_span: Span::from_days(90.0),
+            window_points: 360,
+            calibrated: Some(EventTime(START)),
+            statement: Some(Statement::LookAhead(Span::from_days(20.0))),
+            tolerance: Some(4.0),
+            ..watch_settings()
+        }
+    }
+
+    #[test]
+    fn honest_drift_raises_no_alert() {
+        let mut engine = Engine::new(site(rules()), ShellTime(START));
+        let lines = feed(&mut engine, 0, &curve(400, 11, |_| 0.0));
+        assert!(lines.is_empty(), "{lines:#?}");
+        let finding = engine.overview().next().unwrap().1.unwrap();
+        assert_eq!(finding.curve.unwrap().family, "logarithmic");
+        assert!(finding.forecast.unwrap().supported);
+    }
+
+    #[test]
+    fn a_knock_raises_one_step_alert_that_returns() {
+        let mut engine = Engine::new(site(rules()), ShellTime(START));
+        let values = curve(1600, 12, |i| if i >= 600 { 0.12 } else { 0.0 });
+        let lines = feed(&mut engine, 0, &values);
+        assert!(lines[0].starts_with("raised step d15"), "{lines:#?}");
+        assert!(lines.iter().filter(|l| l.starts_with("raised")).count() == 1, "{lines:#?}");
+        assert!(lines.last().unwrap().starts_with("returned step"), "{lines:#?}");
+    }
+
+    #[test]
+    fn snapshot_restored_and_continued_equals_never_stopped() {
+        let values = curve(1200, 13, |i| if i >= 600 { 0.12 } else { 0.0 });
+        let mut whole = Engine::new(site(rules()), ShellTime(START));
+        let expected = feed(&mut whole, 0, &values);
+        for cut in [599, 603, 640, 1100] {
+            let mut first = Engine::new(site(rules()), ShellTime(START));
+            let mut lines = feed(&mut first, 0, &values[..cut]);
+            let bytes = postcard::to_stdvec(first.observe("press.PT-1").unwrap()).unwrap();
+            let mut second = Engine::new(site(rules()), ShellTime(START));
+            second.restore(postcard::from_bytes(&bytes).unwrap(), 0);
+            lines.extend(feed(&mut second, cut, &values[cut..]));
+            assert_eq!(lines, expected, "cut at {cut}");
+            assert_eq!(second.observe("press.PT-1"), whole.observe("press.PT-1"));
+        }
+    }
+
+    #[test]
+    fn silence_is_raised_by_the_shells_time_and_lowered_by_a_reading() {
+        let mut engine = Engine::new(site(rules()), ShellTime(START));
+        feed(&mut engine, 0, &[0.1, 0.2]);
+        let due = engine.next_due().unwrap();
+        assert_eq!(due, ShellTime(START + 2 * STEP_US).plus(Span::from_days(3.0)));
+        engine.tick(due);
+        let raised = engine.effects();
+        assert!(matches!(&raised[0], Effect::Alert { event, .. }
+            if event.episode.claim.kind.name() == "silent"));
+        engine.tick(due);
+        assert!(engine.effects().is_empty());
+        let lines = feed(&mut engine, 40, &[0.3]);
+        assert!(lines[0].starts_with("returned silent"), "{lines:?}");
+    }
+
+    #[test]
+    fn a_statement_further_than_the_window_carries_is_refused_with_both_numbers() {
+        let rules = WatchSettings {
+            statement: Some(Statement::LookAhead(Span::from_days(80.0))),
+            ..rules()
+        };
+        let mut engine = Engine::new(site(rules), ShellTime(START));
+        let lines = feed(&mut engine, 0, &curve(800, 14, |_| 0.0));
+        assert!(lines[0].starts_with("raised beyond-reach"), "{lines:#?}");
+        let forecast = engine.overview().next().unwrap().1.unwrap().forecast.unwrap();
+        assert!(!forecast.supported && forecast.deviation.is_none());
+        assert!(forecast.refused.unwrap().starts_with("needs 80 d past the newest reading"));
+    }
+
+    #[test]
+    fn outrunning_the_tolerance_is_told_ahead_and_then_now() {
+        let rules = WatchSettings { tolerance: Some(3.0), ..rules() };
+        let mut engine = Engine::new(site(rules), ShellTime(START));
+        let values: Vec<f64> = noise(15, 1200, 0.3)
+            .iter()
+            .enumerate()
+            .map(|(i, e)| 0.015 * (i as f64 / 4.0) + 0.02 * e)
+            .collect();
+        let lines = feed(&mut engine, 0, &values);
+        let kinds: Vec<&str> = lines.iter().map(|l| l.split(' ').nth(1).unwrap()).collect();
+        assert_eq!(kinds[0], "tolerance-ahead", "{lines:#?}");
+        assert!(kinds.contains(&"out-of-tolerance"), "{lines:#?}");
+    }
+
+    #[test]
+    fn a_calibration_mark_moves_age_zero_and_begins_anew() {
+        let mut engine = Engine::new(site(rules()), ShellTime(START));
+        feed(&mut engine, 0, &curve(400, 16, |_| 0.0));
+        let mark = EventTime(START + 300 * STEP_US);
+        let done =
+            engine.act("press.PT-1", &Action::Calibrated { at: mark }, 401, ShellTime(mark.0));
+        assert!(done);
+        let channel = engine.observe("press.PT-1").unwrap();
+        assert_eq!(channel.cycle.unwrap().age_zero, mark);
+        assert_eq!(channel.window.points().len(), 100);
+    }
+}
