@@ -20,7 +20,7 @@ const EXPONENT: (f64, f64) = (-4.0, 8.0);
 /// Points of the grid on which the exponent is looked for when no logarithms can be taken.
 const GRID_POINTS: i32 = 49;
 /// Winsorising limit of the robust refinement, in robust standard deviations (Huber 1981).
-const CLIP: f64 = 3.0;
+pub const CLIP_WINSOR: f64 = 3.0;
 /// Robust reweighting passes.
 const ROBUST_PASSES: usize = 6;
 
@@ -275,7 +275,7 @@ fn refine(
         }
         if robust && step > 1 && step <= ROBUST_PASSES {
             let scale = robust_scale(&residuals);
-            limit = if scale > 0.0 { CLIP * scale } else { f64::INFINITY };
+            limit = if scale > 0.0 { CLIP_WINSOR * scale } else { f64::INFINITY };
         }
         let clipped: Vec<f64> = residuals.iter().map(|r| r.clamp(-limit, limit)).collect();
         let Some((change, _)) = least_squares(&rows, &clipped, p) else {

@@ -3,6 +3,8 @@
 pub mod choose;
 pub mod family;
 pub mod fit;
+pub mod forecast;
+pub mod reach;
 pub mod serial;
 pub mod structure;
 pub mod tails;

@@ -5,6 +5,7 @@
 //! worded by [`wording`].
 
 pub mod alert;
+pub mod budget;
 pub mod finding;
 pub mod limits;
 pub mod reading;

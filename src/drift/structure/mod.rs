@@ -3,6 +3,7 @@
 //! Each kind yields one score q = −log10 p of its best candidate. How large a score must be to count
 //! is not decided here but by the budget for false alerts, one floor up.
 
+pub mod baseline;
 pub mod bend;
 pub mod confirm;
 pub mod dependence;
@@ -65,7 +66,7 @@ pub fn examine(window: &Whitened, familiar: f64) -> Examination {
 }
 
 #[cfg(test)]
-mod tests {
+pub(crate) mod tests {
     use super::*;
     use crate::drift::family::Family;
     use crate::drift::fit::{FitOutcome, fit};
