@@ -41,6 +41,8 @@ pub enum Limit {
     },
     /// No family can be fitted.
     NoCurve,
+    /// Nobody asks for statements here.
+    NotAsked,
     /// Too few backtests reach that far.
     TooFewBacktests {
         /// How far, days.
@@ -70,6 +72,7 @@ impl Limit {
                 format!("{found} usable points, {needed} are needed")
             }
             Limit::NoCurve => "no curve can be fitted".to_owned(),
+            Limit::NotAsked => "no statement is asked for".to_owned(),
             Limit::TooFewBacktests { at_d } => {
                 format!("fewer than {BACKTESTS_MIN} backtests reach {at_d:.1} d")
             }

@@ -6,9 +6,14 @@
 
 pub mod alert;
 pub mod budget;
+pub mod channel;
 pub mod finding;
+pub mod incident;
+pub mod judge;
 pub mod limits;
 pub mod reading;
+pub mod report;
+pub mod said;
 pub mod settings;
 pub mod time;
 pub mod window;

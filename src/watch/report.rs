@@ -1,0 +1,265 @@
+//! The finding of one channel, drawn from its state.
+
+use crate::drift::fit::Fit;
+use crate::watch::alert::Kind;
+use crate::watch::budget::NEAR;
+use crate::watch::channel::{Channel, Context, KnownFrom, Refit};
+use crate::watch::finding::{
+    CurveFound, CycleFound, Decision, Finding, ForecastFound, OtherFound, ReachFound,
+    StructureFound, ToleranceFound, Verdict, WindowFound,
+};
+use crate::watch::limits::{POINTS_TO_EXAMINE, POINTS_TO_FIT};
+use crate::watch::said::{Interval, asked_day};
+use crate::watch::settings::WatchSettings;
+use crate::watch::time::{EventTime, Span};
+use crate::watch::wording;
+use std::collections::BTreeMap;
+
+/// Points whose median stands for the deviation while no curve can be trusted.
+const NEWEST_POINTS: usize = 5;
+/// The window may carry a statement so far, as a share of its span, once it is full.
+const SHARE_WHEN_FULL: f64 = 0.6;
+
+/// The finding, if the channel has a point yet.
+pub fn finding_if_any(channel: &Channel, context: &Context<'_>) -> Option<Finding> {
+    (!channel.window.points().is_empty()).then(|| finding(channel, context))
+}
+
+/// Everything known of a channel that has at least one point.
+pub fn finding(channel: &Channel, context: &Context<'_>) -> Finding {
+    let points = channel.window.points();
+    let newest = points.back().map_or(EventTime(0), |p| p.time);
+    let oldest = points.front().map_or(newest, |p| p.time);
+    let cycle = channel.cycle.expect("a channel with points has a cycle");
+    let refit = channel.refit.as_ref();
+    let reach = reach_found(channel, newest);
+    Finding {
+        channel: channel.name.clone(),
+        at: newest,
+        unit: context.rules.unit.clone(),
+        cycle: CycleFound {
+            age_zero: cycle.age_zero,
+            known_from: match cycle.known_from {
+                KnownFrom::Mark => "calibration mark",
+                KnownFrom::Setting => "setting",
+                KnownFrom::FirstReading => "first reading",
+            },
+        },
+        window: WindowFound {
+            from: oldest,
+            to: newest,
+            points: points.len(),
+            readings: channel.window.readings(),
+            age_from_d: oldest.days_since(cycle.age_zero),
+            age_to_d: newest.days_since(cycle.age_zero),
+        },
+        curve: refit.and_then(curve_found),
+        no_curve: no_curve_words(channel),
+        structure: structure_found(channel),
+        forecast: forecast_found(channel, context.rules, newest, &reach),
+        reach,
+        tolerance: tolerance_found(channel, context.rules),
+        cautions: cautions(channel, context),
+    }
+}
+
+fn curve_found(refit: &Refit) -> Option<CurveFound> {
+    let choice = refit.choice.as_ref()?;
+    let fit = refit.curve()?;
+    let named = |values: &[f64; 4]| -> BTreeMap<&'static str, f64> {
+        fit.family.coefficient_names().iter().copied().zip(values.iter().copied()).collect()
+    };
+    let others = refit
+        .fits
+        .iter()
+        .zip(&choice.differences)
+        .enumerate()
+        .filter(|&(i, _)| i != choice.chosen)
+        .map(|(_, (other, &aicc_difference))| OtherFound {
+            family: other.family.name(),
+            aicc_difference,
+        })
+        .collect();
+    Some(CurveFound {
+        family: fit.family.name(),
+        form: fit.family.form(),
+        coefficients: named(&fit.theta),
+        standard_errors: named(&refit.standard_errors),
+        residual_sd: fit.residual_sd,
+        r_squared: fit.r_squared,
+        start: fit.start.as_ref().map(named).unwrap_or_default(),
+        others,
+        why: choice.why.clone(),
+    })
+}
+
+/// Why no family could be fitted, in words.
+pub fn why_no_curve(refit: &Refit) -> String {
+    refit
+        .not_fitted
+        .iter()
+        .map(|(family, why)| format!("{family}: {why}"))
+        .collect::<Vec<_>>()
+        .join("; ")
+}
+
+fn no_curve_words(channel: &Channel) -> Option<String> {
+    match &channel.refit {
+        None => {
+            Some(format!("gathering: {} of {POINTS_TO_FIT} points", channel.window.points().len()))
+        }
+        Some(refit) => refit.curve().is_none().then(|| why_no_curve(refit)),
+    }
+}
+
+fn structure_found(channel: &Channel) -> Vec<StructureFound> {
+    let look = &channel.residuals.look;
+    if channel.window.points().len() < POINTS_TO_EXAMINE || look.bend_threshold <= 0.0 {
+        return Vec::new();
+    }
+    let standing = channel.residuals.incident();
+    let date = |index: usize| channel.window.points().get(index).map(|p| p.time);
+    let entry = |kind: Kind, found: crate::drift::structure::Found, score: f64, threshold: f64| {
+        let incident = standing.filter(|incident| incident.kind == kind);
+        let verdict = if incident.is_some() || (score >= threshold && standing.is_none()) {
+            Verdict::Present
+        } else if score >= threshold - NEAR {
+            Verdict::Watching
+        } else {
+            Verdict::Absent
+        };
+        let shown = verdict != Verdict::Absent;
+        let (size, at) = incident.map_or((found.size, date(found.index)), |i| (i.size, Some(i.at)));
+        StructureFound {
+            kind,
+            verdict,
+            statistic: Some(found.score),
+            p: Some(10f64.powf(-found.score.clamp(0.0, 300.0))),
+            size: shown.then_some(size),
+            at: if shown { at } else { None },
+        }
+    };
+    let found = &look.found;
+    vec![
+        entry(Kind::Step, found.step, look.shift.0, look.shift.1),
+        entry(Kind::Bend, found.bend, found.bend.score, look.bend_threshold),
+        entry(
+            Kind::Dependence,
+            found.dependence,
+            found.dependence.score,
+            look.dependence_threshold,
+        ),
+    ]
+}
+
+/// Why nothing can be said ahead for now, when the reason is that the window is still filling.
+pub fn gathering(channel: &Channel, context: &Context<'_>) -> Option<String> {
+    let points = channel.window.points();
+    if points.len() < POINTS_TO_EXAMINE {
+        return Some(format!("gathering: {} of {POINTS_TO_EXAMINE} points", points.len()));
+    }
+    let (oldest, newest) = (points.front()?.time, points.back()?.time);
+    let (_, needs) = asked_day(context.rules, newest)?;
+    let span = newest.days_since(oldest);
+    let full_span = context.rules.window_span.days();
+    let growing = points.len() < context.rules.window_points && span < 0.98 * full_span;
+    let enough = needs / SHARE_WHEN_FULL;
+    let limited_by_span = matches!(
+        channel.refit.as_ref()?.reach.limit,
+        crate::drift::reach::Limit::Cap { .. } | crate::drift::reach::Limit::TooFewBacktests { .. }
+    );
+    (growing && limited_by_span && enough <= full_span).then(|| {
+        format!(
+            "gathering: the window spans {} of the {} that this statement needs",
+            wording::days(span),
+            wording::days(enough)
+        )
+    })
+}
+
+fn reach_found(channel: &Channel, newest: EventTime) -> ReachFound {
+    let (days, why) = match (&channel.refit, channel.residuals.incident()) {
+        (_, Some(incident)) => {
+            (0.0, format!("the residuals show structure ({})", incident.kind.name()))
+        }
+        (Some(refit), None) => (refit.reach.days_past_newest, refit.reach.limit.words()),
+        (None, None) => (0.0, "no curve yet".to_owned()),
+    };
+    ReachFound { days_past_newest: days, until: newest.plus(Span::from_days(days)), why }
+}
+
+fn forecast_found(
+    channel: &Channel,
+    rules: &WatchSettings,
+    newest: EventTime,
+    reach: &ReachFound,
+) -> Option<ForecastFound> {
+    let (at, needs) = asked_day(rules, newest)?;
+    let ahead = channel
+        .refit
+        .as_ref()
+        .filter(|_| channel.residuals.incident().is_none())
+        .and_then(|refit| refit.said.ahead);
+    let refused = ahead.is_none().then(|| {
+        format!(
+            "needs {} past the newest reading; the window supports {}: {}",
+            wording::days(needs),
+            wording::days(reach.days_past_newest),
+            reach.why
+        )
+    });
+    Some(ForecastFound {
+        at,
+        needs_days_past_newest: needs,
+        supported: ahead.is_some(),
+        deviation: ahead.map(|(value, _)| value),
+        low: ahead.map(|(value, half)| value - half),
+        high: ahead.map(|(value, half)| value + half),
+        level: 0.95,
+        refused,
+    })
+}
+
+fn tolerance_found(channel: &Channel, rules: &WatchSettings) -> Option<ToleranceFound> {
+    let limit = rules.tolerance?;
+    let decision = deviation_now(channel)
+        .map_or(Decision::Undetermined, |(value, guard)| Decision::of(value, guard, limit));
+    let within_until = channel
+        .refit
+        .as_ref()
+        .filter(|_| channel.residuals.incident().is_none())
+        .and_then(|refit| refit.said.within_until);
+    Some(ToleranceFound { limit, decision, within_until })
+}
+
+/// The deviation now and its guard band: by the curve where it can be trusted, else by the newest
+/// points themselves. None before there are enough points for either.
+pub fn deviation_now(channel: &Channel) -> Option<Interval> {
+    let trusted = channel.residuals.incident().is_none();
+    if let Some(now) = channel.refit.as_ref().and_then(|refit| refit.said.now)
+        && trusted
+    {
+        return Some(now);
+    }
+    let points = channel.window.points();
+    if points.len() < NEWEST_POINTS {
+        return None;
+    }
+    let mut newest: Vec<f64> = points.iter().rev().take(NEWEST_POINTS).map(|p| p.mean).collect();
+    newest.sort_by(f64::total_cmp);
+    let scatter =
+        channel.refit.as_ref().and_then(Refit::curve).map_or(0.0, |fit: &Fit| fit.residual_sd);
+    Some((newest[NEWEST_POINTS / 2], crate::drift::forecast::NORMAL_95 * scatter))
+}
+
+fn cautions(channel: &Channel, context: &Context<'_>) -> Vec<String> {
+    let mut cautions: Vec<String> = wording::CAUTIONS.map(str::to_owned).to_vec();
+    if channel.cycle.is_some_and(|cycle| cycle.known_from == KnownFrom::FirstReading) {
+        cautions.push(
+            "Age zero is taken from the first reading: no calibration is on record here."
+                .to_owned(),
+        );
+    }
+    cautions.extend(gathering(channel, context));
+    cautions
+}
