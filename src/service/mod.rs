@@ -1,7 +1,10 @@
 //! The outside world: files, MQTT, SQLite, systemd, clock.
 
 pub mod broker;
+pub mod clock;
+pub mod envelope;
 pub mod intake;
+pub mod line;
 pub mod settings;
 pub mod shown;
 pub mod store;
