@@ -51,7 +51,7 @@ pub fn shown_bytes(bytes: &[u8], cap: usize) -> String {
 }
 
 /// Whether a character is invisible, moves the cursor, breaks the line or reorders its neighbours.
-fn needs_escape(c: char) -> bool {
+pub(super) fn needs_escape(c: char) -> bool {
     c.is_control()                                     // C0, DEL, C1
         || matches!(c,
             '\u{00ad}'                                 // soft hyphen
@@ -65,7 +65,7 @@ fn needs_escape(c: char) -> bool {
             | '\u{fe00}'..='\u{fe0f}'                  // variation selectors
             | '\u{feff}'                               // byte order mark
             | '\u{fff0}'..='\u{fffd}'                  // interlinear marks, replacement character
-            | '\u{e0000}'..='\u{e0fff}')               // tags, further variation selectors
+            | '\u{e0000}'..='\u{e0fff}') // tags, further variation selectors
 }
 
 #[cfg(test)]
@@ -78,7 +78,11 @@ mod tests {
 
     #[test]
     fn plain_and_accented_text_passes_unchanged() {
-        check("plant/press/PT-4107 µm °C Ölstand 圧力", 80, "plant/press/PT-4107 µm °C Ölstand 圧力");
+        check(
+            "plant/press/PT-4107 µm °C Ölstand 圧力",
+            80,
+            "plant/press/PT-4107 µm °C Ölstand 圧力",
+        );
     }
 
     #[test]

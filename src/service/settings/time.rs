@@ -101,7 +101,9 @@ mod tests {
 
     #[test]
     fn other_text_is_not_a_time() {
-        for text in ["", "yesterday", "08:00", "1717400000", "2026-13-01T00:00:00Z", "01/03/2026 08:00"] {
+        for text in
+            ["", "yesterday", "08:00", "1717400000", "2026-13-01T00:00:00Z", "01/03/2026 08:00"]
+        {
             check(text, Err(TimeFault::Unreadable));
         }
         check(&"2026-03-01T08:00:00Z".repeat(1000), Err(TimeFault::Unreadable));
