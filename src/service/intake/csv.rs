@@ -94,7 +94,7 @@ impl<'r> CsvReadings<'r> {
         } else {
             Box::new(input)
         };
-        let mut lines = Lines { input, buffer: Vec::new(), cut: false, number: 0 };
+        let mut lines = Lines { input, buffer: Vec::new(), bytes: 0, number: 0 };
         let header = loop {
             match lines.next().map_err(unreadable)? {
                 Some(line) if line.trim_ascii().is_empty() => {}
@@ -115,9 +115,9 @@ impl Iterator for CsvReadings<'_> {
             return None;
         }
         loop {
-            let cut = match self.lines.next() {
+            match self.lines.next() {
                 Ok(Some(line)) if line.is_empty() => continue,
-                Ok(Some(_)) => self.lines.cut,
+                Ok(Some(_)) => {}
                 Ok(None) => {
                     self.ended = true;
                     return None;
@@ -126,12 +126,12 @@ impl Iterator for CsvReadings<'_> {
                     self.ended = true;
                     return Some(Err(CsvError::Unreadable { line: self.lines.number, source }));
                 }
-            };
-            let line = &self.lines.buffer;
-            let outcome = if cut {
-                Err(Refusal::TooLong { bytes: line.len(), most: LINE_BYTES_MAX })
+            }
+            let bytes = self.lines.bytes;
+            let outcome = if bytes > LINE_BYTES_MAX {
+                Err(Refusal::TooLong { bytes, most: LINE_BYTES_MAX })
             } else {
-                read_row(line, &self.places, self.columns, self.router)
+                read_row(&self.lines.buffer, &self.places, self.columns, self.router)
             };
             return Some(Ok(CsvRow { line: self.lines.number, outcome }));
         }
@@ -275,8 +275,8 @@ struct Lines {
     input: Box<dyn BufRead>,
     /// The newest line, without its end.
     buffer: Vec<u8>,
-    /// Whether the newest line was longer than [`LINE_BYTES_MAX`].
-    cut: bool,
+    /// How long the newest line was, its end not counted.
+    bytes: usize,
     /// Its number, from 1.
     number: u64,
 }
@@ -284,7 +284,7 @@ struct Lines {
 impl Lines {
     fn next(&mut self) -> io::Result<Option<&[u8]>> {
         self.buffer.clear();
-        self.cut = false;
+        self.bytes = 0;
         let mut any = false;
         loop {
             let chunk = match self.input.fill_buf() {
@@ -304,7 +304,7 @@ impl Lines {
             // One byte more than allowed, for the line end of Windows.
             let room = (LINE_BYTES_MAX + 1).saturating_sub(self.buffer.len());
             self.buffer.extend_from_slice(&part[..part.len().min(room)]);
-            self.cut |= part.len() > room;
+            self.bytes += part.len();
             let used = part.len() + usize::from(end.is_some());
             self.input.consume(used);
             if end.is_some() {
@@ -313,8 +313,8 @@ impl Lines {
         }
         if self.buffer.last() == Some(&b'\r') {
             self.buffer.pop();
+            self.bytes -= 1;
         }
-        self.cut |= self.buffer.len() > LINE_BYTES_MAX;
         Ok(any.then_some(self.buffer.as_slice()))
     }
 }
@@ -470,7 +470,7 @@ mod tests {
         let long = "x".repeat(1 << 20);
         check(
             &format!("time,channel,value\n{long}\n2026-03-01T08:00:00Z,lab-7,1"),
-            &["line 2: 4097 bytes; at most 4096 are read", "3: 1 lab-7 2026-03-01T08:00:00Z 1"],
+            &["line 2: 1048576 bytes; at most 4096 are read", "3: 1 lab-7 2026-03-01T08:00:00Z 1"],
         );
     }
 
