@@ -51,7 +51,7 @@ pub fn shown_bytes(bytes: &[u8], cap: usize) -> String {
 }
 
 /// Whether a character is invisible, moves the cursor, breaks the line or reorders its neighbours.
-fn needs_escape(c: char) -> bool {
+pub(super) fn needs_escape(c: char) -> bool {
     c.is_control()                                     // C0, DEL, C1
         || matches!(c,
             '\u{00ad}'                                 // soft hyphen
