@@ -1,2 +1,9 @@
 //! argv → command → exit code.
-fn main() {}
+
+#![forbid(unsafe_code)]
+
+use std::process::ExitCode;
+
+fn main() -> ExitCode {
+    ExitCode::from(asfound::cli::run(std::env::args_os()))
+}

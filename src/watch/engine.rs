@@ -205,6 +205,13 @@ impl Engine {
         sum
     }
 
+    /// The unit of a channel; empty for one that is not known.
+    pub fn unit_of(&self, channel: &str) -> &str {
+        self.index
+            .get(channel)
+            .map_or("", |&place| &self.settings.watches[self.watches[place]].unit)
+    }
+
     /// The settings in force.
     pub fn settings(&self) -> &SiteSettings {
         &self.settings
