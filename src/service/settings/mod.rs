@@ -11,6 +11,8 @@ mod raw;
 mod secret;
 mod section;
 mod shown;
+#[cfg(test)]
+mod tests;
 pub mod time;
 mod watch;
 
