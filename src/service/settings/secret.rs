@@ -78,7 +78,7 @@ fn mode_of(_: &std::fs::Metadata) -> u32 {
     0
 }
 
-#[cfg(all(test, unix))]
+#[cfg(test)]
 mod tests {
     use super::*;
     use std::os::unix::fs::PermissionsExt as _;
