@@ -116,7 +116,7 @@ impl Iterator for CsvReadings<'_> {
         }
         loop {
             match self.lines.next() {
-                Ok(Some([])) => continue,
+                Ok(Some(line)) if line.trim_ascii().is_empty() => continue,
                 Ok(Some(_)) => {}
                 Ok(None) => {
                     self.ended = true;

@@ -167,3 +167,161 @@ impl Router {
         decode_captured(&self.routes[watch], &captured, payload, received).map(|d| (watch, d))
     }
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::service::settings::Environment;
+    use proptest::prelude::*;
+    use std::path::Path;
+
+    const RECEIVED: ShellTime = ShellTime(1_772_348_400_000_000);
+
+    fn router() -> Router {
+        let text = r#"
+            site.name = "saltmarsh"
+            broker.url = "mqtt://127.0.0.1"
+            [[watch]]
+            topic = "plant/{area}/{tag}/pressure"
+            channel = "{area}.{tag}"
+            payload = { format = "json", value = "/v", time = "/ts" }
+            reference = { pointer = "/ref" }
+            unit = "bar"
+            [[watch]]
+            topic = "plant/{area}/{tag}/{quantity}"
+            reference = { constant = 20.0 }
+            unit = "K"
+            [[watch]]
+            topic = "lab/{tag}"
+            channel = "lab/{tag}"
+            unit = "K"
+            [[watch]]
+            topic = "lab/{bench}"
+            channel = "bench-{bench}"
+            unit = "K"
+        "#;
+        let settings = Settings::read(text, Path::new("test.toml"), &Environment::default());
+        Router::new(&settings.unwrap_or_else(|problems| panic!("{problems}")))
+    }
+
+    fn check(topic: &str, payload: &str, expected: &str) {
+        let text = match router().decode(topic, payload.as_bytes(), RECEIVED) {
+            Ok((watch, d)) => format!(
+                "{watch} {} {} {}{}",
+                d.channel,
+                d.time,
+                d.deviation,
+                if d.own_time { " own time" } else { "" }
+            ),
+            Err(refusal) => format!("{}: {refusal}", refusal.code()),
+        };
+        assert_eq!(text, expected, "{topic}");
+    }
+
+    #[test]
+    fn a_message_becomes_the_reading_of_the_first_watch_that_fits() {
+        check(
+            "plant/press/PT-4107/pressure",
+            r#"{"v":4.5,"ref":4,"ts":"2026-03-01T08:00:00Z"}"#,
+            "0 press.PT-4107 2026-03-01T08:00:00Z 0.5 own time",
+        );
+        check(
+            "plant/press/TT-1/temperature",
+            "20.5",
+            "1 press.TT-1.temperature 2026-03-01T07:00:00Z 0.5",
+        );
+        check("lab/7", "-0.25", "2 lab/7 2026-03-01T07:00:00Z -0.25");
+    }
+
+    #[test]
+    fn what_no_watch_covers_is_refused_by_name() {
+        check("plant/press", "1", "no-matching-watch: no watch covers \"plant/press\"");
+        check("a\nb", "1", "no-matching-watch: no watch covers \"a\\nb\"");
+    }
+
+    #[test]
+    fn a_channel_name_beyond_its_limit_is_refused() {
+        let topic = format!("lab/{}", "x".repeat(300));
+        check(
+            &topic,
+            "1",
+            "channel-too-long: the channel's name has 304 bytes; at most 256 are allowed",
+        );
+    }
+
+    #[test]
+    fn a_deviation_beyond_a_double_is_refused() {
+        check(
+            "plant/press/PT-4107/pressure",
+            r#"{"v":1e308,"ref":-1e308,"ts":"2026-03-01T08:00:00Z"}"#,
+            &format!(
+                "deviation-not-finite: {} minus the reference {} is beyond the range of a double",
+                1e308, -1e308
+            ),
+        );
+    }
+
+    #[test]
+    fn a_retained_message_needs_a_time_of_its_own() {
+        let reading = |own_time| Decoded {
+            channel: "lab/7".to_owned(),
+            time: EventTime(RECEIVED.0),
+            own_time,
+            deviation: 0.0,
+        };
+        assert_eq!(reading(false).unless_stale(true), Err(Refusal::Retained));
+        assert!(reading(true).unless_stale(true).is_ok());
+        assert!(reading(false).unless_stale(false).is_ok());
+    }
+
+    #[test]
+    fn each_filter_is_subscribed_once() {
+        assert_eq!(router().filters(), ["plant/+/+/pressure", "plant/+/+/+", "lab/+"]);
+    }
+
+    #[test]
+    fn a_channel_name_finds_the_first_watch_whose_template_fits() {
+        let router = router();
+        for (name, watch) in [
+            ("press.PT-4107", Some(0)),
+            ("press.TT-1.temperature", Some(0)),
+            ("lab/7", Some(2)),
+            ("bench-7", Some(3)),
+            ("attic", None),
+        ] {
+            assert_eq!(router.watch_for_channel(name), watch, "{name}");
+        }
+    }
+
+    proptest! {
+        #[test]
+        fn no_bytes_bring_the_intake_down(topic in "(plant|lab|/|[a-z]{1,4}|\\PC){0,12}", payload in prop::collection::vec(any::<u8>(), 0..200)) {
+            let router = router();
+            for topic in [topic.as_str(), "plant/a/b/pressure", "lab/7"] {
+                match router.decode(topic, &payload, RECEIVED) {
+                    Ok((_, reading)) => prop_assert!(reading.deviation.is_finite()),
+                    Err(refusal) => {
+                        let text = refusal.to_string();
+                        prop_assert!(!text.chars().any(char::is_control) && text.len() < 600, "{text}");
+                    }
+                }
+            }
+        }
+
+        #[test]
+        fn every_finite_number_arrives_unchanged(x in any::<f64>().prop_filter("finite", |x| x.is_finite())) {
+            let payload = serde_json::to_vec(&x).unwrap();
+            let reading = decode(&router().routes[2], "lab/7", &payload, RECEIVED).unwrap();
+            prop_assert_eq!(reading.deviation.to_bits(), x.to_bits());
+        }
+
+        #[test]
+        fn a_name_made_from_a_topic_fits_its_own_template(area in "[a-z.]{1,6}", tag in "[a-zA-Z.-]{1,6}") {
+            let router = router();
+            let topic = format!("plant/{area}/{tag}/pressure");
+            let (watch, captured) = router.route(&topic).unwrap();
+            let route = router.route_of(watch);
+            prop_assert!(route.channel.fits(&route.channel.name(&captured)));
+        }
+    }
+}

@@ -44,6 +44,7 @@ pub(super) fn check_site(raw: &RawSite, problems: &mut Problems) -> String {
         && name.value.chars().all(|c| c.is_ascii_alphanumeric() || "._-".contains(c));
     if !good {
         problems.refuse(&name.place, &name.key, quoted(&name.value), SITE_NAME);
+        return "site".to_owned();
     }
     name.value.clone()
 }
@@ -195,6 +196,7 @@ fn check_topic_root(root: Option<&Located<String>>, problems: &mut Problems) -> 
     if !good {
         let allowed = "topic levels such as \"asfound\" or \"site/asfound\", without + # { }, empty levels or $ in front";
         problems.refuse(&root.place, &root.key, quoted(text), allowed);
+        return TOPIC_ROOT_DEFAULT.to_owned();
     }
     text.clone()
 }

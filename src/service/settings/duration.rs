@@ -33,7 +33,7 @@ pub enum DurationFault {
     #[error("a month or a year has no fixed length; write days")]
     MonthOrYear,
     /// A fraction such as `1.5h`.
-    #[error("fractions are not read; write the next smaller unit (90m for 1.5h)")]
+    #[error("fractions are not read; write the next smaller unit, 90m for 1.5h")]
     Fraction,
     /// Units not in falling order, or one twice.
     #[error("units must fall from weeks to seconds, each at most once")]

@@ -11,12 +11,14 @@ mod raw;
 mod secret;
 mod section;
 mod shown;
+#[cfg(test)]
+mod tests;
 pub mod time;
 mod watch;
 
 pub use check::BrokerSection;
 pub use layers::{Environment, FILE_BYTES_MAX, VARIABLE_PREFIX};
-pub use problem::{Fault, Place, Problem, Problems, SettingsError};
+pub use problem::{Fault, PROBLEMS_MAX, Place, Problem, Problems, SettingsError};
 pub use secret::Secret;
 
 use crate::service::intake::Route;

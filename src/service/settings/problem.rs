@@ -129,13 +129,19 @@ impl Problems {
         self.push(place, key, fault);
     }
 
+    /// Notes that a key is missing, unless it or a table around it is there and was found wrong.
     pub(super) fn missing(
         &mut self,
         place: &Place,
         key: &str,
         allowed: impl Into<Cow<'static, str>>,
     ) {
-        self.push(place, key, Fault::Missing { allowed: allowed.into() });
+        let around = |p: &Problem| {
+            key.strip_prefix(&*p.key).is_some_and(|rest| rest.is_empty() || rest.starts_with('.'))
+        };
+        if !self.list.iter().any(around) {
+            self.push(place, key, Fault::Missing { allowed: allowed.into() });
+        }
     }
 
     /// Puts the problems in the order of the file.

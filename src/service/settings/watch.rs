@@ -164,24 +164,28 @@ fn check_statistics(raw: &RawWatch, problems: &mut Problems) -> WatchSettings {
         let found = format!("the number {}", tolerance.value);
         problems.refuse(&tolerance.place, &tolerance.key, found, "a number above 0, in the unit");
     }
-    let window_span = check_span(raw.window.span.as_ref(), HOUR, TEN_YEARS, problems)
-        .unwrap_or(WINDOW_SPAN_DEFAULT);
-    let bin = check_bin(&raw.window, window_span, problems);
+    let window_span = check_span(raw.window.span.as_ref(), HOUR, (TEN_YEARS, ""), problems);
+    // Where the span itself is wrong, what depends on it is not measured by another span.
+    let most = match (&raw.window.span, window_span) {
+        (Some(_), None) => (TEN_YEARS, ""),
+        (_, span) => (span.unwrap_or(WINDOW_SPAN_DEFAULT), " (the window's span)"),
+    };
+    let window_span = window_span.unwrap_or(WINDOW_SPAN_DEFAULT);
     let silent_default = Span(window_span.0 / SILENT_AFTER_SHARE).max(SILENT_AFTER_LEAST);
     WatchSettings {
         unit,
         tolerance: raw.tolerance.as_ref().map(|t| t.value),
         window_span,
         window_points: check_points(raw.window.points.as_ref(), problems),
-        bin,
-        refit_every: check_span(raw.refit_every.as_ref(), MINUTE, window_span, problems)
+        bin: check_bin(&raw.window, most.0, problems),
+        refit_every: check_span(raw.refit_every.as_ref(), MINUTE, most, problems)
             .unwrap_or(REFIT_EVERY_DEFAULT.min(window_span)),
-        lateness: check_span(raw.lateness.as_ref(), Span(0), window_span, problems)
+        lateness: check_span(raw.lateness.as_ref(), Span(0), most, problems)
             .unwrap_or(LATENESS_DEFAULT),
         families: check_families(raw.families.as_ref(), problems),
         statement: check_statement(raw, problems),
         calibrated: raw.calibrated.as_ref().and_then(|t| check_time(t, problems)),
-        silent_after: check_span(raw.silent_after.as_ref(), MINUTE, TEN_YEARS, problems)
+        silent_after: check_span(raw.silent_after.as_ref(), MINUTE, (TEN_YEARS, ""), problems)
             .unwrap_or(silent_default),
     }
 }
@@ -217,21 +221,22 @@ fn check_points(points: Option<&Located<i64>>, problems: &mut Problems) -> usize
 fn check_bin(raw: &RawWindow, span: Span, problems: &mut Problems) -> Option<Span> {
     #[expect(clippy::cast_possible_wrap, reason = "the constant is 60")]
     let widest = Span(span.0 / WINDOW_POINTS_MIN as i64);
-    check_span(raw.bin.as_ref(), SECOND, widest, problems)
+    check_span(raw.bin.as_ref(), SECOND, (widest, " (a 60th of the window's span)"), problems)
 }
 
 /// Returns the length of time if it is there, readable and within the limits; else notes why not.
+/// The upper limit comes with words for where it is from.
 fn check_span(
     text: Option<&Located<String>>,
     least: Span,
-    most: Span,
+    (most, why): (Span, &str),
     problems: &mut Problems,
 ) -> Option<Span> {
     let text = text?;
     match read_span(&text.value) {
         Ok(span) if (least..=most).contains(&span) => Some(span),
         Ok(_) => {
-            let allowed = format!("from {} to {}", show_span(least), show_span(most));
+            let allowed = format!("from {} to {}{why}", show_span(least), show_span(most));
             problems.refuse(&text.place, &text.key, quoted(&text.value), allowed);
             None
         }
@@ -283,7 +288,7 @@ fn check_families(
 }
 
 fn check_statement(raw: &RawWatch, problems: &mut Problems) -> Option<Statement> {
-    let ahead = check_span(raw.look_ahead.as_ref(), SECOND, TEN_YEARS, problems);
+    let ahead = check_span(raw.look_ahead.as_ref(), SECOND, (TEN_YEARS, ""), problems);
     let visit = raw.next_visit.as_ref().and_then(|t| check_time(t, problems));
     if let (Some(_), Some(second)) = (&raw.look_ahead, &raw.next_visit) {
         let found = format!("{} beside look_ahead", quoted(&second.value));
