@@ -14,6 +14,7 @@ use crate::watch::reading::{Counts, Reading, Taken};
 use crate::watch::report;
 use crate::watch::settings::SiteSettings;
 use crate::watch::time::{EventTime, ShellTime};
+use serde::{Deserialize, Serialize};
 use std::collections::BTreeMap;
 
 /// What the shell must do.
@@ -51,7 +52,7 @@ pub enum Effect {
 }
 
 /// Something that a person tells the engine; journaled like a reading.
-#[derive(Clone, Debug, PartialEq, Eq)]
+#[derive(Clone, Debug, PartialEq, Eq, Serialize, Deserialize)]
 pub enum Action {
     /// The channel was calibrated: age zero is there.
     Calibrated {

@@ -142,6 +142,14 @@ pub enum Refusal {
         /// What was found.
         excerpt: Excerpt,
     },
+    /// Later than the time of receipt by more than clocks may differ.
+    #[error(
+        "the reading's time is {days:.1} d after its receipt; at most 1 d is allowed: check the sender's clock and this one's"
+    )]
+    FromTheFuture {
+        /// How much later, days.
+        days: f64,
+    },
     /// A row of a table that is not one.
     #[error("not a row of the table: {fault}")]
     BadRow {
@@ -186,6 +194,7 @@ impl Refusal {
             Refusal::DeviationNotFinite { .. } => "deviation-not-finite",
             Refusal::NoReference => "no-reference",
             Refusal::BadTime { .. } => "bad-time",
+            Refusal::FromTheFuture { .. } => "from-the-future",
             Refusal::TimeImplausible { .. } => "time-implausible",
             Refusal::BadRow { .. } => "bad-row",
         }

@@ -74,6 +74,8 @@ pub enum StoreError {
 pub struct NewRow {
     /// The channel's name.
     pub channel: String,
+    /// The topic pattern of its watch; kept from the channel's first row.
+    pub watch: String,
     /// Event time, µs.
     pub time: i64,
     /// Deviation; 0 for an action.
@@ -93,6 +95,19 @@ pub struct Row {
     pub id: i64,
     /// What it holds.
     pub row: NewRow,
+}
+
+/// The state of one channel, read back and checked.
+#[derive(Clone, Debug, PartialEq)]
+pub struct SavedState {
+    /// The channel's name.
+    pub channel: String,
+    /// The topic pattern of its watch.
+    pub watch: String,
+    /// The last journal row that is in it.
+    pub upto: i64,
+    /// The state.
+    pub data: Vec<u8>,
 }
 
 /// A message to publish.
@@ -178,7 +193,7 @@ impl Store {
                     None => match made.iter().find(|(name, _)| *name == row.channel) {
                         Some(&(_, channel)) => channel,
                         None => {
-                            let channel = add_channel(&transaction, &row.channel)?;
+                            let channel = add_channel(&transaction, &row.channel, &row.watch)?;
                             made.push((row.channel.clone(), channel));
                             channel
                         }
@@ -198,10 +213,8 @@ impl Store {
         let transaction =
             self.connection.transaction_with_behavior(rusqlite::TransactionBehavior::Immediate)?;
         for (name, upto, data) in &bundle.states {
-            let channel = match self.channels.get(name) {
-                Some(&channel) => channel,
-                None => add_channel(&transaction, name)?,
-            };
+            // A channel has a row since its first reading; one without has no reading to lose.
+            let Some(channel) = self.channels.get(name) else { continue };
             transaction
                 .prepare_cached(
                     "INSERT OR REPLACE INTO state (channel, upto, crc, data)
@@ -255,22 +268,28 @@ impl Store {
         Ok(unkept)
     }
 
-    /// The states of all channels: (name, journal row included last, bytes).
-    pub fn states(&self) -> Result<Vec<(String, i64, Vec<u8>)>, StoreError> {
+    /// The states of all channels that have one.
+    pub fn states(&self) -> Result<Vec<SavedState>, StoreError> {
         let mut query = self.connection.prepare(
-            "SELECT c.name, s.upto, s.crc, s.data FROM state s JOIN channel c ON c.id = s.channel
+            "SELECT c.name, c.watch, s.upto, s.crc, s.data FROM state s JOIN channel c ON c.id = s.channel
              ORDER BY c.id",
         )?;
         let rows = query.query_map([], |row| {
-            Ok((row.get(0)?, row.get(1)?, row.get::<_, i64>(2)?, row.get::<_, Vec<u8>>(3)?))
+            let state = SavedState {
+                channel: row.get(0)?,
+                watch: row.get(1)?,
+                upto: row.get(2)?,
+                data: row.get(4)?,
+            };
+            Ok((state, row.get::<_, i64>(3)?))
         })?;
         let mut states = Vec::new();
         for row in rows {
-            let (channel, upto, crc, data) = row?;
-            if crc != checksum(upto, &data) {
-                return Err(StoreError::Damaged { channel });
+            let (state, crc) = row?;
+            if crc != checksum(state.upto, &state.data) {
+                return Err(StoreError::Damaged { channel: state.channel });
             }
-            states.push((channel, upto, data));
+            states.push(state);
         }
         Ok(states)
     }
@@ -287,7 +306,7 @@ impl Store {
     /// At most `rows_max` journal rows after row `after`, in order.
     pub fn journal_after(&self, after: i64, rows_max: i64) -> Result<Vec<Row>, StoreError> {
         let mut query = self.connection.prepare_cached(
-            "SELECT j.id, c.name, j.time, j.value, j.got, j.message, j.action
+            "SELECT j.id, c.name, c.watch, j.time, j.value, j.got, j.message, j.action
              FROM journal j JOIN channel c ON c.id = j.channel
              WHERE j.id > ?1 ORDER BY j.id LIMIT ?2",
         )?;
@@ -296,11 +315,12 @@ impl Store {
                 id: row.get(0)?,
                 row: NewRow {
                     channel: row.get(1)?,
-                    time: row.get(2)?,
-                    value: row.get(3)?,
-                    got: row.get(4)?,
-                    message: row.get(5)?,
-                    action: row.get(6)?,
+                    watch: row.get(2)?,
+                    time: row.get(3)?,
+                    value: row.get(4)?,
+                    got: row.get(5)?,
+                    message: row.get(6)?,
+                    action: row.get(7)?,
                 },
             })
         })?;
@@ -358,8 +378,14 @@ impl Store {
     }
 }
 
-fn add_channel(transaction: &rusqlite::Transaction<'_>, name: &str) -> rusqlite::Result<i64> {
-    transaction.prepare_cached("INSERT INTO channel (name) VALUES (?1)")?.insert([name])
+fn add_channel(
+    transaction: &rusqlite::Transaction<'_>,
+    name: &str,
+    watch: &str,
+) -> rusqlite::Result<i64> {
+    transaction
+        .prepare_cached("INSERT INTO channel (name, watch) VALUES (?1, ?2)")?
+        .insert([name, watch])
 }
 
 /// CRC-32 over the row number and the bytes: SQLite itself does not notice flipped data bits.
@@ -375,7 +401,15 @@ mod tests {
     use super::*;
 
     fn row(channel: &str, time: i64, value: f64) -> NewRow {
-        NewRow { channel: channel.to_owned(), time, value, got: time, message: 0, action: None }
+        NewRow {
+            channel: channel.to_owned(),
+            watch: "w".to_owned(),
+            time,
+            value,
+            got: time,
+            message: 0,
+            action: None,
+        }
     }
 
     fn message(topic: &str, payload: &str, retained: bool) -> NewMessage {
@@ -439,6 +473,7 @@ mod tests {
     fn flipped_bit_in_a_state_is_named_not_served() {
         let dir = tempfile::tempdir().unwrap();
         let mut store = Store::open(dir.path()).unwrap();
+        store.append(&[row("a", 1, 0.1)]).unwrap();
         let states = vec![("a".to_owned(), 7, vec![1, 2, 3])];
         store.save(&Bundle { states, ..Bundle::default() }).unwrap();
         assert_eq!(store.states().unwrap().len(), 1);

@@ -10,7 +10,9 @@ pub const SCHEMA_VERSION: i64 = 1;
 const CHECKPOINT_PAGES: i64 = 1000;
 
 const TABLES: &str = "
-CREATE TABLE channel (id INTEGER PRIMARY KEY, name TEXT NOT NULL UNIQUE);
+-- watch: the topic pattern of the watch to which the channel belongs.
+CREATE TABLE channel (
+  id INTEGER PRIMARY KEY, name TEXT NOT NULL UNIQUE, watch TEXT NOT NULL);
 -- Ground state, append-only: readings (channel, time, value) and people's actions (action).
 -- message: hash of the MQTT message, to know a redelivery of a reading without its own time.
 CREATE TABLE journal (
