@@ -52,12 +52,18 @@ pub enum Effect {
 }
 
 /// Something that a person tells the engine; journaled like a reading.
-#[derive(Clone, Debug, PartialEq, Eq, Serialize, Deserialize)]
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
 pub enum Action {
     /// The channel was calibrated: age zero is there.
     Calibrated {
         /// When.
         at: EventTime,
+        /// Deviation before any adjustment, in the channel's unit.
+        as_found: Option<f64>,
+        /// Deviation after it.
+        as_left: Option<f64>,
+        /// What the person wrote.
+        note: Option<String>,
     },
     /// An alert was seen.
     Acknowledge {
@@ -138,7 +144,7 @@ impl Engine {
         let time = known.window.newest_reading().unwrap_or(EventTime(now.0));
         let mut outcome = Outcome::default();
         match action {
-            Action::Calibrated { at } => outcome = known.calibrated(&context, *at),
+            Action::Calibrated { at, .. } => outcome = known.calibrated(&context, *at),
             Action::Acknowledge { alert } => {
                 outcome.events.extend(known.alerts.acknowledge(alert, time));
             }
@@ -188,6 +194,14 @@ impl Engine {
     /// One channel, as it is.
     pub fn observe(&self, channel: &str) -> Option<&Channel> {
         self.index.get(channel).map(|&place| &self.channels[place])
+    }
+
+    /// The channel whose open alert has that id.
+    pub fn channel_of_alert(&self, alert: &str) -> Option<&str> {
+        self.channels
+            .iter()
+            .find(|channel| channel.alerts.open().iter().any(|episode| episode.alert == alert))
+            .map(|channel| channel.name.as_str())
     }
 
     /// All channels, in the order of their names.
@@ -417,8 +431,12 @@ mod tests {
         let mut engine = Engine::new(site(rules()), ShellTime(START));
         feed(&mut engine, 0, &curve(400, 16, |_| 0.0));
         let mark = EventTime(START + 300 * STEP_US);
-        let done =
-            engine.act("press.PT-1", &Action::Calibrated { at: mark }, 401, ShellTime(mark.0));
+        let done = engine.act(
+            "press.PT-1",
+            &Action::Calibrated { at: mark, as_found: None, as_left: None, note: None },
+            401,
+            ShellTime(mark.0),
+        );
         assert!(done);
         let channel = engine.observe("press.PT-1").unwrap();
         assert_eq!(channel.cycle.unwrap().age_zero, mark);

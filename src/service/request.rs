@@ -1,0 +1,163 @@
+//! What people tell the daemon over MQTT: `request/{verb}` with a JSON payload.
+
+use crate::service::intake::Excerpt;
+use crate::service::settings::duration::read_span;
+use crate::service::settings::time::read_time;
+use crate::watch::engine::{Action, Engine};
+use crate::watch::time::ShellTime;
+use serde::Deserialize;
+
+/// The largest request, bytes.
+const REQUEST_BYTES_MAX: usize = 4096;
+
+/// Why a request is not done.
+#[derive(Clone, Debug, PartialEq, thiserror::Error)]
+pub enum RequestFault {
+    /// No such verb.
+    #[error("no such request: {verb}; known: calibrated, acknowledge, shelve")]
+    Verb {
+        /// What was asked.
+        verb: Excerpt,
+    },
+    /// Not the JSON that the verb needs.
+    #[error("the payload is not what {verb} needs: {why}; needed: {needed}")]
+    Payload {
+        /// The verb.
+        verb: &'static str,
+        /// What is wrong.
+        why: Excerpt,
+        /// What is needed.
+        needed: &'static str,
+    },
+    /// No such channel.
+    #[error("no channel {channel} is known here")]
+    Channel {
+        /// What was asked.
+        channel: Excerpt,
+    },
+    /// No such alert.
+    #[error("no alert {alert} is open")]
+    Alert {
+        /// What was asked.
+        alert: Excerpt,
+    },
+}
+
+#[derive(Deserialize)]
+#[serde(deny_unknown_fields)]
+struct Calibrated {
+    channel: String,
+    at: String,
+    #[serde(default)]
+    as_found: Option<f64>,
+    #[serde(default)]
+    as_left: Option<f64>,
+    #[serde(default)]
+    note: Option<String>,
+}
+
+#[derive(Deserialize)]
+#[serde(deny_unknown_fields)]
+struct OfAlert {
+    alert: String,
+    #[serde(default, rename = "for")]
+    duration: Option<String>,
+}
+
+const CALIBRATED: &str = r#"{"channel":"…","at":"RFC 3339 time","as_found":0.1,"as_left":0.0,"note":"…"}, the last three optional"#;
+const ACKNOWLEDGE: &str = r#"{"alert":"its id"}"#;
+const SHELVE: &str = r#"{"alert":"its id","for":"7d"}"#;
+
+/// Reads a request: which channel, and what to do.
+///
+/// # Arguments
+/// `verb` — the last level of the topic; `payload` — JSON; `engine` — knows channels and alerts;
+/// `now` — from when the time on the shelf counts.
+pub fn read(
+    verb: &str,
+    payload: &[u8],
+    engine: &Engine,
+    now: ShellTime,
+) -> Result<(String, Action), RequestFault> {
+    match verb {
+        "calibrated" => calibrated(payload, engine),
+        "acknowledge" => {
+            let asked: OfAlert = json("acknowledge", payload, ACKNOWLEDGE)?;
+            let channel = channel_of(&asked.alert, engine)?;
+            Ok((channel, Action::Acknowledge { alert: asked.alert }))
+        }
+        "shelve" => {
+            let wrong = |why: &str| fault("shelve", why, SHELVE);
+            let asked: OfAlert = json("shelve", payload, SHELVE)?;
+            let duration = asked.duration.ok_or_else(|| wrong("\"for\" is missing"))?;
+            let span = read_span(&duration).map_err(|why| wrong(&why.to_string()))?;
+            let channel = channel_of(&asked.alert, engine)?;
+            Ok((channel, Action::Shelve { alert: asked.alert, until: now.plus(span) }))
+        }
+        other => Err(RequestFault::Verb { verb: Excerpt::of(other) }),
+    }
+}
+
+fn calibrated(payload: &[u8], engine: &Engine) -> Result<(String, Action), RequestFault> {
+    let asked: Calibrated = json("calibrated", payload, CALIBRATED)?;
+    let at = read_time(&asked.at)
+        .map_err(|why| fault("calibrated", &format!("at: {why}"), CALIBRATED))?;
+    if engine.observe(&asked.channel).is_none() {
+        return Err(RequestFault::Channel { channel: Excerpt::of(&asked.channel) });
+    }
+    let Calibrated { channel, as_found, as_left, note, .. } = asked;
+    let note = note.map(|text| text.chars().take(500).collect());
+    Ok((channel, Action::Calibrated { at, as_found, as_left, note }))
+}
+
+fn json<'p, T: Deserialize<'p>>(
+    verb: &'static str,
+    payload: &'p [u8],
+    needed: &'static str,
+) -> Result<T, RequestFault> {
+    if payload.len() > REQUEST_BYTES_MAX {
+        return Err(fault(verb, "more than 4096 bytes", needed));
+    }
+    serde_json::from_slice(payload).map_err(|why| fault(verb, &why.to_string(), needed))
+}
+
+fn fault(verb: &'static str, why: &str, needed: &'static str) -> RequestFault {
+    RequestFault::Payload { verb, why: Excerpt::of(why), needed }
+}
+
+fn channel_of(alert: &str, engine: &Engine) -> Result<String, RequestFault> {
+    engine
+        .channel_of_alert(alert)
+        .map(str::to_owned)
+        .ok_or_else(|| RequestFault::Alert { alert: Excerpt::of(alert) })
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::watch::settings::SiteSettings;
+
+    fn check(verb: &str, payload: &str) -> String {
+        let site = SiteSettings {
+            site: "saltmarsh".to_owned(),
+            false_alerts_per_year: 1.0,
+            watches: Vec::new(),
+        };
+        let engine = Engine::new(site, ShellTime(0));
+        read(verb, payload.as_bytes(), &engine, ShellTime(0)).unwrap_err().to_string()
+    }
+
+    #[test]
+    fn a_request_that_cannot_be_done_says_what_is_needed() {
+        assert_eq!(
+            check("dance", "{}"),
+            "no such request: \"dance\"; known: calibrated, acknowledge, shelve"
+        );
+        assert!(check("acknowledge", "{}").contains(r#"needed: {"alert":"its id"}"#));
+        assert_eq!(check("acknowledge", r#"{"alert":"x"}"#), "no alert \"x\" is open");
+        let naive = r#"{"channel":"a","at":"2026-03-01T08:00:00"}"#;
+        assert!(check("calibrated", naive).contains("at: "), "{}", check("calibrated", naive));
+        let unknown = r#"{"channel":"a","at":"2026-03-01T08:00:00Z"}"#;
+        assert_eq!(check("calibrated", unknown), "no channel \"a\" is known here");
+    }
+}
