@@ -2,9 +2,12 @@
 
 pub mod broker;
 pub mod clock;
+pub mod desk;
 pub mod envelope;
+pub mod flood;
 pub mod intake;
 pub mod line;
+pub mod notify;
 pub mod outbox;
 pub mod recall;
 pub mod recover;

@@ -196,6 +196,11 @@ impl Engine {
         self.index.get(channel).map(|&place| &self.channels[place])
     }
 
+    /// The watch of a channel, index into the settings.
+    pub fn watch_of(&self, channel: &str) -> Option<usize> {
+        self.index.get(channel).map(|&place| self.watches[place])
+    }
+
     /// The channel whose open alert has that id.
     pub fn channel_of_alert(&self, alert: &str) -> Option<&str> {
         self.channels
@@ -211,6 +216,11 @@ impl Engine {
             let channel = &self.channels[place];
             (channel, report::finding_if_any(channel, &context))
         })
+    }
+
+    /// How many channels there are.
+    pub fn overview_count(&self) -> usize {
+        self.channels.len()
     }
 
     /// What became of all readings.

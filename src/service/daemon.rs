@@ -1,0 +1,536 @@
+//! The loop: one closed event enum, one task. Everything that waits is here; nothing that computes.
+//!
+//! A message is put down, committed, then acknowledged; committed rows go through the engine; what
+//! follows is saved and published from the outbox. At most one commit runs at a time; the next one
+//! starts when it has ended and something waits 2 ms or fills a batch.
+
+use crate::service::broker::inbound::{AckToken, Delivery, Inbound, InboundEvent, InboundHandle};
+use crate::service::broker::outbound::{OutMessage, Outbound, OutboundEvent, OutboundHandle};
+use crate::service::broker::BrokerSettings;
+use crate::service::clock::{self, Stopwatch};
+use crate::service::desk::{Arrival, Arrivals, Desk, Entry, Put};
+use crate::service::flood::Flood;
+use crate::service::notify::Notify;
+use crate::service::shown::Shown;
+use crate::service::store::{NewMessage, StoreError, Writer};
+use std::collections::BTreeMap;
+use std::time::Duration;
+use tokio::sync::{mpsc, oneshot};
+use tokio::time::Instant;
+
+/// A commit waits at most so long for company.
+const LINGER: Duration = Duration::from_millis(2);
+/// A commit starts at once when so many messages wait.
+const BATCH_MAX: usize = 512;
+/// Messages waiting for a commit before no further one is taken from the link (back-pressure).
+const WAITING_MAX: usize = 4096;
+/// Capacity of the channels from the links.
+const EVENTS_MAX: usize = 8192;
+/// The pulse: silence, shelves, watchdog, and states that are behind are seen to so often.
+const PULSE: Duration = Duration::from_secs(1);
+/// Pulses from one routine saving of states to the next.
+const PULSES_PER_ROUTINE: u32 = 5;
+/// Messages of the outbox handed to the link at a time.
+const PUMP_MAX: i64 = 64;
+/// Unsent messages wait at most so long at a stop.
+const DRAIN: Duration = Duration::from_secs(3);
+/// A turn of the loop longer than this is told in the log.
+const LONG_TURN: Duration = Duration::from_millis(250);
+/// The token of the service's own state: no row of the outbox has it.
+const SERVICE_TOKEN: i64 = 0;
+
+/// Why the daemon ended otherwise than asked.
+#[derive(Debug, thiserror::Error)]
+pub enum DaemonError {
+    /// The store failed: nothing was acknowledged after that.
+    #[error("{0}; nothing was acknowledged after this")]
+    Store(#[from] StoreError),
+    /// The store's thread is gone.
+    #[error("the store's thread has ended; nothing was acknowledged after this")]
+    StoreGone,
+}
+
+/// What the daemon did, for the last line.
+#[derive(Clone, Debug, Default)]
+pub struct Summary {
+    /// What arrived.
+    pub arrivals: Arrivals,
+    /// Messages that the broker has taken.
+    pub published: u64,
+}
+
+/// Everything that can happen.
+enum Event {
+    In(InboundEvent),
+    Out(OutboundEvent),
+    Committed(Result<i64, StoreError>),
+    Saved(Result<u64, StoreError>),
+    Fetched(Result<Vec<(i64, NewMessage)>, StoreError>),
+    CommitDue,
+    Pulse,
+    Stop,
+    StoreGone,
+}
+
+/// Where the technician's lines go.
+pub type LineSink = Box<dyn FnMut(&str) + Send>;
+
+/// The daemon at work.
+struct Daemon {
+    desk: Desk,
+    writer: Writer,
+    inbound: InboundHandle,
+    outbound: OutboundHandle,
+    lines: LineSink,
+    notify: Notify,
+    flood: Flood,
+    /// Messages put down, in order of arrival; a token without entry adds nothing.
+    waiting: Vec<(AckToken, Option<Entry>)>,
+    first_waits_since: Option<Instant>,
+    committing: Option<(oneshot::Receiver<Result<i64, StoreError>>, Vec<(AckToken, Option<Entry>)>)>,
+    saving: Option<oneshot::Receiver<Result<u64, StoreError>>>,
+    fetching: Option<oneshot::Receiver<Result<Vec<(i64, NewMessage)>, StoreError>>>,
+    /// The newest outbox row handed to the link on this connection.
+    handed: i64,
+    /// Handed over, not yet taken by the broker.
+    in_flight: BTreeMap<i64, ()>,
+    more_in_outbox: bool,
+    out_connected: bool,
+    in_connected: bool,
+    subscribed: bool,
+    state_since: crate::watch::time::ShellTime,
+    state_told: Option<String>,
+    pulses: u32,
+    published: u64,
+}
+
+/// Runs the daemon until `stop` ends.
+///
+/// # Arguments
+/// `desk` — over what was recovered; `writer` — owns the store; `link` — how to reach the broker;
+/// `lines` — takes the technician's lines; `stop` — ends when the daemon shall stop.
+pub async fn run(
+    desk: Desk,
+    writer: Writer,
+    link: BrokerSettings,
+    lines: LineSink,
+    stop: impl Future<Output = ()>,
+) -> Result<Summary, DaemonError> {
+    let (in_sender, mut in_events) = mpsc::channel(EVENTS_MAX);
+    let (out_sender, mut out_events) = mpsc::channel(EVENTS_MAX);
+    let will = (desk.service_topic(), service_state("offline", "connection lost", clock::now()));
+    let inbound = Inbound::start(link.clone(), desk.filters(), in_sender);
+    let outbound = Outbound::start(link, will, out_sender);
+    let mut daemon = Daemon {
+        desk,
+        writer,
+        inbound,
+        outbound,
+        lines,
+        notify: Notify::from_environment(),
+        flood: Flood::default(),
+        waiting: Vec::new(),
+        first_waits_since: None,
+        committing: None,
+        saving: None,
+        fetching: None,
+        handed: 0,
+        in_flight: BTreeMap::new(),
+        more_in_outbox: true,
+        out_connected: false,
+        in_connected: false,
+        subscribed: false,
+        state_since: clock::now(),
+        state_told: None,
+        pulses: 0,
+        published: 0,
+    };
+    daemon.desk.collect(clock::now());
+    daemon.after_turn();
+    let mut pulse = tokio::time::interval(PULSE);
+    pulse.set_missed_tick_behavior(tokio::time::MissedTickBehavior::Delay);
+    tokio::pin!(stop);
+    loop {
+        let event = daemon.next(&mut in_events, &mut out_events, &mut pulse, &mut stop).await;
+        let turn = Stopwatch::start();
+        if matches!(event, Event::Stop) {
+            break;
+        }
+        daemon.handle(event)?;
+        // What has queued up behind the first message belongs to the same batch.
+        while daemon.waiting.len() < BATCH_MAX
+            && let Ok(event) = in_events.try_recv()
+        {
+            daemon.handle(Event::In(event))?;
+        }
+        daemon.after_turn();
+        if turn.elapsed() > LONG_TURN {
+            tracing::warn!(ms = turn.elapsed().as_millis(), "a turn of the loop took long");
+        }
+    }
+    daemon.stop(out_events).await
+}
+
+impl Daemon {
+    async fn next(
+        &mut self,
+        in_events: &mut mpsc::Receiver<InboundEvent>,
+        out_events: &mut mpsc::Receiver<OutboundEvent>,
+        pulse: &mut tokio::time::Interval,
+        stop: &mut (impl Future<Output = ()> + Unpin),
+    ) -> Event {
+        let commit_at = match (&self.committing, self.first_waits_since) {
+            (None, Some(since)) => since + LINGER,
+            _ => Instant::now() + Duration::from_secs(3600),
+        };
+        let room = self.waiting.len() < WAITING_MAX;
+        tokio::select! {
+            biased;
+            () = stop => Event::Stop,
+            answer = answer_of(self.committing.as_mut().map(|(r, _)| r)) => match answer {
+                Some(result) => Event::Committed(result),
+                None => Event::StoreGone,
+            },
+            answer = answer_of(self.saving.as_mut()) => match answer {
+                Some(result) => Event::Saved(result),
+                None => Event::StoreGone,
+            },
+            answer = answer_of(self.fetching.as_mut()) => match answer {
+                Some(result) => Event::Fetched(result),
+                None => Event::StoreGone,
+            },
+            _ = pulse.tick() => Event::Pulse,
+            () = tokio::time::sleep_until(commit_at) => Event::CommitDue,
+            Some(event) = out_events.recv() => Event::Out(event),
+            Some(event) = in_events.recv(), if room => Event::In(event),
+        }
+    }
+
+    fn handle(&mut self, event: Event) -> Result<(), DaemonError> {
+        match event {
+            Event::In(event) => self.on_inbound(event),
+            Event::Out(event) => self.on_outbound(event),
+            Event::Committed(result) => self.on_committed(result?),
+            Event::Saved(result) => {
+                self.saving = None;
+                let unkept = result?;
+                if unkept > 0 {
+                    tracing::error!(unkept, "the outbox is full: alert events kept in the log only");
+                }
+                self.more_in_outbox = true;
+            }
+            Event::Fetched(result) => self.on_fetched(result?),
+            Event::Pulse => self.on_pulse(),
+            Event::CommitDue | Event::Stop => {}
+            Event::StoreGone => return Err(DaemonError::StoreGone),
+        }
+        Ok(())
+    }
+
+    fn on_inbound(&mut self, event: InboundEvent) {
+        match event {
+            InboundEvent::Message(delivery) => self.on_message(&delivery),
+            InboundEvent::Connected { session_present, .. } => {
+                self.in_connected = true;
+                tracing::info!(session_present, "readings: connected");
+            }
+            InboundEvent::Subscribed { granted, refused } => {
+                for (filter, reason) in &refused {
+                    tracing::error!(
+                        "readings: subscription to {} refused: {}",
+                        Shown(filter, 120),
+                        Shown(reason, 200)
+                    );
+                }
+                tracing::info!(granted, refused = refused.len(), "readings: subscribed");
+                self.subscribed = granted > 0 && refused.is_empty();
+                if granted > 0 {
+                    self.notify.ready();
+                }
+            }
+            InboundEvent::Disconnected { why, retry_in } => {
+                self.in_connected = false;
+                self.subscribed = false;
+                tracing::warn!(
+                    "readings: not connected: {}; next attempt in {:.1} s",
+                    Shown(&why, 300),
+                    retry_in.as_secs_f64()
+                );
+            }
+            InboundEvent::PossibleGap => tracing::warn!(
+                "the broker has lost this subscriber's session: readings sent meanwhile may be missing"
+            ),
+        }
+    }
+
+    fn on_message(&mut self, delivery: &Delivery) {
+        let arrival = Arrival {
+            topic: &delivery.topic,
+            payload: &delivery.payload,
+            duplicate: delivery.duplicate,
+            retained: delivery.retained,
+            packet_id: delivery.packet_id(),
+            response_topic: delivery.response_topic.as_deref(),
+            received: clock::now(),
+        };
+        let (put, refusal) = self.desk.receive(&arrival);
+        if let Some(refusal) = refusal
+            && let Some(suppressed) = self.flood.admit(refusal.code())
+        {
+            let topic = Shown(&delivery.topic, 120);
+            tracing::warn!(reason = refusal.code(), suppressed, "refused {topic}: {refusal}");
+        }
+        let entry = match put {
+            Put::Journal(entry) => Some(*entry),
+            Put::Nothing => None,
+        };
+        self.waiting.push((delivery.token, entry));
+        self.first_waits_since.get_or_insert_with(Instant::now);
+    }
+
+    fn on_committed(&mut self, first: i64) {
+        let Some((_, batch)) = self.committing.take() else { return };
+        let mut tokens = Vec::with_capacity(batch.len());
+        let mut entries = Vec::with_capacity(batch.len());
+        for (token, entry) in batch {
+            tokens.push(token);
+            entries.extend(entry);
+        }
+        self.inbound.acknowledge(tokens);
+        self.desk.committed(first, entries, clock::now());
+    }
+
+    fn on_outbound(&mut self, event: OutboundEvent) {
+        match event {
+            OutboundEvent::Connected => {
+                tracing::info!("alerts: connected");
+                self.out_connected = true;
+                self.handed = 0;
+                self.in_flight.clear();
+                self.more_in_outbox = true;
+                self.state_told = None;
+            }
+            OutboundEvent::Disconnected { why, retry_in } => {
+                self.out_connected = false;
+                self.in_flight.clear();
+                tracing::warn!(
+                    "alerts: not connected: {}; next attempt in {:.1} s",
+                    Shown(&why, 300),
+                    retry_in.as_secs_f64()
+                );
+            }
+            OutboundEvent::Delivered { token } => self.done_with(token),
+            OutboundEvent::Refused { token, reason } => {
+                tracing::error!(token, "the broker refused a message: {}", Shown(&reason, 200));
+                self.done_with(token);
+            }
+        }
+    }
+
+    fn done_with(&mut self, token: i64) {
+        if token == SERVICE_TOKEN {
+            return;
+        }
+        self.published += 1;
+        self.in_flight.remove(&token);
+        // Should the store fail here, the message is sent again with the same id: no harm.
+        drop(self.writer.sent(vec![token]));
+        self.more_in_outbox = true;
+    }
+
+    fn on_fetched(&mut self, rows: Vec<(i64, NewMessage)>) {
+        self.fetching = None;
+        self.more_in_outbox = !rows.is_empty();
+        for (id, message) in rows {
+            if !self.out_connected {
+                return;
+            }
+            let NewMessage { topic, payload, retained, content_type } = message;
+            let message =
+                OutMessage { token: id, topic, payload, retained, content_type, correlation: None };
+            if self.outbound.try_send(message).is_err() {
+                // The link is full; it goes on when something is delivered.
+                return;
+            }
+            self.handed = id;
+            self.in_flight.insert(id, ());
+        }
+    }
+
+    fn on_pulse(&mut self) {
+        let now = clock::now();
+        self.desk.tick(now);
+        self.pulses = self.pulses.wrapping_add(1);
+        self.tell_state();
+        self.flood.pulse();
+        // Progress, not mere life: a store that no longer answers lets the watchdog run out.
+        let arrivals = &self.desk.arrivals;
+        self.notify.alive(arrivals.journaled, self.desk.engine().overview_count());
+    }
+
+    /// Publishes the service's own state when it has changed.
+    fn tell_state(&mut self) {
+        let (state, why) = match (self.in_connected, self.subscribed) {
+            (true, true) => ("online", "readings and alerts connected"),
+            (true, false) => ("degraded", "not all subscriptions are granted"),
+            (false, _) => ("degraded", "the readings' connection is down"),
+        };
+        if !self.out_connected || self.state_told.as_deref() == Some(why) {
+            return;
+        }
+        self.state_since = clock::now();
+        let message = OutMessage {
+            token: SERVICE_TOKEN,
+            topic: self.desk.service_topic(),
+            payload: service_state(state, why, self.state_since),
+            retained: true,
+            content_type: Some("application/json".to_owned()),
+            correlation: None,
+        };
+        if self.outbound.try_send(message).is_ok() {
+            self.state_told = Some(why.to_owned());
+        }
+    }
+
+    /// Starts what can be started after each event.
+    fn after_turn(&mut self) {
+        for line in self.desk.lines() {
+            (self.lines)(&line);
+        }
+        self.start_commit();
+        if self.saving.is_none() {
+            let routine = self.pulses >= PULSES_PER_ROUTINE;
+            if routine {
+                self.pulses = 0;
+            }
+            if let Some(bundle) = self.desk.bundle(routine, false) {
+                self.saving = Some(self.writer.save(bundle));
+            }
+        }
+        if self.out_connected && self.more_in_outbox && self.fetching.is_none() {
+            self.more_in_outbox = false;
+            self.fetching = Some(self.writer.unsent_after(self.handed, PUMP_MAX));
+        }
+    }
+
+    fn start_commit(&mut self) {
+        let due = self.first_waits_since.is_some_and(|since| since.elapsed() >= LINGER);
+        if self.committing.is_some() || !(due || self.waiting.len() >= BATCH_MAX) {
+            return;
+        }
+        self.first_waits_since = None;
+        let batch = std::mem::take(&mut self.waiting);
+        if batch.iter().all(|(_, entry)| entry.is_none()) {
+            self.inbound.acknowledge(batch.into_iter().map(|(token, _)| token).collect());
+            return;
+        }
+        let rows = batch.iter().filter_map(|(_, e)| e.as_ref()).map(|e| e.row.clone()).collect();
+        self.committing = Some((self.writer.append(rows), batch));
+    }
+
+    /// An orderly stop: what was received is committed and acknowledged, every state saved, what can
+    /// be published is published, and "offline" is said before the link is closed.
+    async fn stop(
+        mut self,
+        mut out_events: mpsc::Receiver<OutboundEvent>,
+    ) -> Result<Summary, DaemonError> {
+        self.notify.stopping();
+        tracing::info!("stopping");
+        while self.committing.is_some() || !self.waiting.is_empty() {
+            if let Some((receiver, _)) = self.committing.as_mut() {
+                let first = receiver.await.map_err(|_| DaemonError::StoreGone)??;
+                self.on_committed(first);
+            }
+            self.first_waits_since = Some(Instant::now() - LINGER);
+            self.start_commit();
+        }
+        self.inbound.stop().await;
+        for line in self.desk.lines() {
+            (self.lines)(&line);
+        }
+        if let Some(saving) = self.saving.take() {
+            saving.await.map_err(|_| DaemonError::StoreGone)??;
+        }
+        if let Some(bundle) = self.desk.bundle(true, true) {
+            self.writer.save(bundle).await.map_err(|_| DaemonError::StoreGone)??;
+        }
+        drain(&mut self.outbound, &self.writer, &mut out_events, &mut self.published, self.out_connected)
+            .await?;
+        let last = OutMessage {
+            token: SERVICE_TOKEN,
+            topic: self.desk.service_topic(),
+            payload: service_state("offline", "stopped", clock::now()),
+            retained: true,
+            content_type: Some("application/json".to_owned()),
+            correlation: None,
+        };
+        self.outbound.stop(Some(last)).await;
+        Ok(Summary { arrivals: self.desk.arrivals, published: self.published })
+    }
+}
+
+/// Publishes what is left in the outbox, as far as it goes in [`DRAIN`].
+async fn drain(
+    outbound: &mut OutboundHandle,
+    writer: &Writer,
+    events: &mut mpsc::Receiver<OutboundEvent>,
+    published: &mut u64,
+    connected: bool,
+) -> Result<(), DaemonError> {
+    if !connected {
+        return Ok(());
+    }
+    let until = Instant::now() + DRAIN;
+    let gone = |_| DaemonError::StoreGone;
+    loop {
+        let rows = writer.unsent_after(0, 16).await.map_err(gone)??;
+        if rows.is_empty() {
+            return Ok(());
+        }
+        let mut open: Vec<i64> = Vec::new();
+        for (id, message) in rows {
+            let NewMessage { topic, payload, retained, content_type } = message;
+            let message =
+                OutMessage { token: id, topic, payload, retained, content_type, correlation: None };
+            if outbound.try_send(message).is_ok() {
+                open.push(id);
+            }
+        }
+        while !open.is_empty() {
+            match tokio::time::timeout_at(until, events.recv()).await {
+                Ok(Some(OutboundEvent::Delivered { token } | OutboundEvent::Refused { token, .. })) => {
+                    if let Some(place) = open.iter().position(|&id| id == token) {
+                        open.remove(place);
+                        *published += 1;
+                    }
+                    if token != SERVICE_TOKEN {
+                        writer.sent(vec![token]).await.map_err(gone)??;
+                    }
+                }
+                Ok(Some(OutboundEvent::Connected)) => {}
+                // Disconnected, ended or out of time: the rest stays in the outbox for the next start.
+                _ => return Ok(()),
+            }
+        }
+    }
+}
+
+/// The answer of an order that may not have been given; pending for ever without one.
+async fn answer_of<T>(receiver: Option<&mut oneshot::Receiver<T>>) -> Option<T> {
+    match receiver {
+        Some(receiver) => receiver.await.ok(),
+        None => std::future::pending().await,
+    }
+}
+
+/// The service's own state as JSON.
+fn service_state(state: &str, why: &str, since: crate::watch::time::ShellTime) -> Vec<u8> {
+    serde_json::json!({
+        "state": state,
+        "since": since.to_string(),
+        "why": why,
+        "version": env!("CARGO_PKG_VERSION"),
+    })
+    .to_string()
+    .into_bytes()
+}

@@ -1,0 +1,298 @@
+//! The desk: the daemon's state between events, without any waiting in it.
+//!
+//! Messages come in, are decoded and put down for the journal; committed rows go through the engine;
+//! what follows is bundled for the store. The loop around it is in [`crate::service::daemon`].
+
+use crate::service::intake::{Decoded, Refusal, Router};
+use crate::service::outbox::{Told, tell};
+use crate::service::recall::{Recall, key_of_message, key_of_reading};
+use crate::service::recover::{Recovered, apply, state_bytes};
+use crate::service::request;
+use crate::service::settings::Settings;
+use crate::service::store::{Bundle, NewMessage, NewRow};
+use crate::watch::engine::Engine;
+use crate::watch::time::{DAY_US, ShellTime};
+use std::collections::BTreeMap;
+
+/// A reading may be later than its receipt by so much: clocks differ.
+const FUTURE_MAX_US: i64 = DAY_US;
+/// States saved in one transaction when nothing urgent is to be saved.
+const STATES_AT_A_TIME: usize = 256;
+
+/// A message as it came, whatever connection it came over.
+#[derive(Clone, Debug)]
+pub struct Arrival<'a> {
+    /// Its topic. Foreign text.
+    pub topic: &'a str,
+    /// Its payload.
+    pub payload: &'a [u8],
+    /// The broker marks it as delivered before.
+    pub duplicate: bool,
+    /// The broker had kept it.
+    pub retained: bool,
+    /// Its packet id on this connection.
+    pub packet_id: u16,
+    /// Where a reply goes, for requests.
+    pub response_topic: Option<&'a str>,
+    /// When it was received.
+    pub received: ShellTime,
+}
+
+/// What to do with a message.
+#[derive(Clone, Debug, PartialEq)]
+pub enum Put {
+    /// Journal this row, then acknowledge.
+    Journal(Box<Entry>),
+    /// Acknowledge: it adds nothing.
+    Nothing,
+}
+
+/// A row for the journal, with what the engine needs besides.
+#[derive(Clone, Debug, PartialEq)]
+pub struct Entry {
+    /// The row.
+    pub row: NewRow,
+    /// The watch, index into the settings.
+    pub watch: usize,
+    /// Where a reply goes, once done.
+    pub reply_to: Option<String>,
+}
+
+/// Counts of what arrived, for the summary and the log.
+#[derive(Clone, Debug, Default, PartialEq, Eq)]
+pub struct Arrivals {
+    /// Messages received.
+    pub received: u64,
+    /// Rows journaled.
+    pub journaled: u64,
+    /// Messages known already.
+    pub duplicates: u64,
+    /// Messages refused, by reason.
+    pub refused: BTreeMap<&'static str, u64>,
+}
+
+/// The daemon's state between events.
+#[derive(Debug)]
+pub struct Desk {
+    settings: Settings,
+    router: Router,
+    engine: Engine,
+    recall: Recall,
+    own_topics: String,
+    /// First journal row that is not in the saved state, by channel.
+    unsaved: BTreeMap<String, i64>,
+    newest_row: i64,
+    told: Told,
+    /// What arrived.
+    pub arrivals: Arrivals,
+}
+
+impl Desk {
+    /// A desk over what was recovered; `newest_row` is the journal's last.
+    pub fn new(settings: Settings, router: Router, recovered: Recovered, newest_row: i64) -> Desk {
+        Desk {
+            own_topics: settings.own_topics(),
+            settings,
+            router,
+            engine: recovered.engine,
+            recall: recovered.recall,
+            unsaved: recovered.unsaved,
+            newest_row,
+            told: Told::default(),
+            arrivals: Arrivals::default(),
+        }
+    }
+
+    /// The engine, to look at.
+    pub fn engine(&self) -> &Engine {
+        &self.engine
+    }
+
+    /// The filters to subscribe to: the watches' topics, and people's requests.
+    pub fn filters(&self) -> Vec<String> {
+        let mut filters = self.router.filters();
+        filters.push(format!("{}/request/+", self.own_topics));
+        filters
+    }
+
+    /// Decides what a message is. The refusal, if any, is for the log.
+    pub fn receive(&mut self, arrival: &Arrival<'_>) -> (Put, Option<Refusal>) {
+        self.arrivals.received += 1;
+        if let Some(verb) = arrival
+            .topic
+            .strip_prefix(&self.own_topics)
+            .and_then(|rest| rest.strip_prefix("/request/"))
+        {
+            return (self.request(verb, arrival), None);
+        }
+        let decoded = self
+            .router
+            .decode(arrival.topic, arrival.payload, arrival.received)
+            .and_then(|(watch, decoded)| {
+                Ok((watch, not_from_the_future(decoded.unless_stale(arrival.retained)?, arrival)?))
+            });
+        match decoded {
+            Ok((watch, decoded)) => (self.reading(arrival, watch, decoded), None),
+            Err(refusal) => {
+                *self.arrivals.refused.entry(refusal.code()).or_default() += 1;
+                (Put::Nothing, Some(refusal))
+            }
+        }
+    }
+
+    fn reading(&mut self, arrival: &Arrival<'_>, watch: usize, decoded: Decoded) -> Put {
+        let Decoded { channel, time, own_time, deviation } = decoded;
+        let key = if own_time {
+            key_of_reading(&channel, time.0, deviation)
+        } else {
+            key_of_message(arrival.topic, arrival.payload, arrival.packet_id)
+        };
+        if self.recall.knows(key) && (own_time || arrival.duplicate) {
+            self.arrivals.duplicates += 1;
+            return Put::Nothing;
+        }
+        self.recall.remember(key);
+        let row = NewRow {
+            channel,
+            watch: self.pattern_of(watch),
+            time: time.0,
+            value: deviation,
+            got: arrival.received.0,
+            message: if own_time { 0 } else { key },
+            action: None,
+        };
+        Put::Journal(Box::new(Entry { row, watch, reply_to: None }))
+    }
+
+    fn pattern_of(&self, watch: usize) -> String {
+        self.router.route_of(watch).pattern.as_str().to_owned()
+    }
+
+    fn request(&mut self, verb: &str, arrival: &Arrival<'_>) -> Put {
+        let reply_to = arrival
+            .response_topic
+            .map_or_else(|| format!("{}/reply/{verb}", self.own_topics), str::to_owned);
+        if arrival.retained {
+            // An old request that the broker keeps is nobody's wish of today.
+            return Put::Nothing;
+        }
+        match request::read(verb, arrival.payload, &self.engine, arrival.received) {
+            Ok((channel, action)) => {
+                let watch = self.engine.watch_of(&channel).unwrap_or(0);
+                let row = NewRow {
+                    watch: self.pattern_of(watch),
+                    channel,
+                    time: 0,
+                    value: 0.0,
+                    got: arrival.received.0,
+                    message: 0,
+                    action: Some(
+                        serde_json::to_string(&action).expect("plain data serialises to memory"),
+                    ),
+                };
+                Put::Journal(Box::new(Entry { row, watch, reply_to: Some(reply_to) }))
+            }
+            Err(fault) => {
+                self.reply(reply_to, false, &fault.to_string());
+                Put::Nothing
+            }
+        }
+    }
+
+    fn reply(&mut self, topic: String, done: bool, why: &str) {
+        self.told.bundle.messages.push(NewMessage {
+            topic,
+            payload: serde_json::json!({"done": done, "why": why}).to_string().into_bytes(),
+            retained: false,
+            content_type: Some("application/json".to_owned()),
+        });
+    }
+
+    /// Takes rows that are durable now, the first of them journal row `first`.
+    pub fn committed(&mut self, first: i64, entries: Vec<Entry>, now: ShellTime) {
+        for (id, entry) in (first..).zip(entries) {
+            let Entry { row, watch, reply_to } = entry;
+            self.arrivals.journaled += 1;
+            self.newest_row = id;
+            self.unsaved.entry(row.channel.clone()).or_insert(id);
+            let done = apply(&mut self.engine, id, watch, &row.channel, &row, ShellTime(row.got));
+            if let Some(topic) = reply_to {
+                let why = if done { "done" } else { "nothing to change: no such open alert" };
+                self.reply(topic, done, why);
+            }
+        }
+        self.collect(now);
+    }
+
+    /// Does what is due by the clock.
+    pub fn tick(&mut self, now: ShellTime) {
+        if self.engine.next_due().is_some_and(|due| due <= now) {
+            self.engine.tick(now);
+            self.collect(now);
+        }
+    }
+
+    /// Turns waiting effects into what is to be told.
+    pub fn collect(&mut self, now: ShellTime) {
+        let effects = self.engine.effects();
+        let told = tell(&self.engine, effects, &self.own_topics, now);
+        self.told.bundle.messages.extend(told.bundle.messages);
+        self.told.bundle.alerts.extend(told.bundle.alerts);
+        self.told.changed.extend(told.changed);
+        self.told.lines.extend(told.lines);
+    }
+
+    /// The technician's lines since the last call.
+    pub fn lines(&mut self) -> Vec<String> {
+        std::mem::take(&mut self.told.lines)
+    }
+
+    /// What is to be saved now, in one transaction; None when there is nothing. With `everything`,
+    /// all states that are behind are saved too (some of them at a time without it, by `routine`).
+    pub fn bundle(&mut self, routine: bool, everything: bool) -> Option<Bundle> {
+        let mut bundle = std::mem::take(&mut self.told.bundle);
+        let mut channels: Vec<String> = std::mem::take(&mut self.told.changed);
+        if routine || everything {
+            let most = if everything { usize::MAX } else { STATES_AT_A_TIME };
+            // Longest behind first, so that the journal need not be read from far back.
+            let mut behind: Vec<(i64, &String)> =
+                self.unsaved.iter().map(|(name, &first)| (first, name)).collect();
+            behind.sort();
+            channels.extend(behind.into_iter().take(most).map(|(_, name)| name.clone()));
+        }
+        channels.sort();
+        channels.dedup();
+        for name in channels {
+            if let Some(channel) = self.engine.observe(&name) {
+                bundle.states.push((name.clone(), self.newest_row, state_bytes(channel)));
+            }
+            self.unsaved.remove(&name);
+        }
+        if !bundle.states.is_empty() {
+            let from = self.unsaved.values().min().map_or(self.newest_row, |first| first - 1);
+            bundle.replay_from = Some(from);
+        }
+        let empty =
+            bundle.states.is_empty() && bundle.messages.is_empty() && bundle.alerts.is_empty();
+        (!empty).then_some(bundle)
+    }
+
+    /// The topic of the service's own state.
+    pub fn service_topic(&self) -> String {
+        format!("{}/service", self.own_topics)
+    }
+
+    /// The settings in force.
+    pub fn settings(&self) -> &Settings {
+        &self.settings
+    }
+}
+
+fn not_from_the_future(decoded: Decoded, arrival: &Arrival<'_>) -> Result<Decoded, Refusal> {
+    let ahead = decoded.time.0.saturating_sub(arrival.received.0);
+    if ahead > FUTURE_MAX_US {
+        let days = crate::watch::time::Span(ahead).days();
+        return Err(Refusal::FromTheFuture { days });
+    }
+    Ok(decoded)
+}
