@@ -2,6 +2,7 @@
 
 pub mod check;
 pub mod replay;
+pub mod run;
 
 use crate::service::settings::Environment;
 use crate::service::settings::Settings;
@@ -22,6 +23,7 @@ struct Arguments {
 enum Command {
     Check(check::CheckArgs),
     Replay(replay::ReplayArgs),
+    Run(run::RunArgs),
 }
 
 /// Runs the program with these arguments. Returns the exit code.
@@ -35,10 +37,14 @@ pub fn run(arguments: impl IntoIterator<Item = std::ffi::OsString>) -> u8 {
         }
     };
     let environment = Environment::of_process();
-    let (mut out, mut err) = (io::BufWriter::new(io::stdout().lock()), io::stderr().lock());
+    let (mut out, mut err) = (io::BufWriter::new(io::stdout().lock()), io::stderr());
     let code = match arguments.command {
         Command::Check(args) => {
             check::check(&args, &environment, budget_words, |_| Vec::new(), &mut out, &mut err)
+        }
+        Command::Run(args) => {
+            drop(out);
+            return run::run(&args, &environment, &mut err);
         }
         Command::Replay(args) => {
             replay::replay(&args, &environment, &mut out, &mut err, progress_bar())

@@ -4,9 +4,9 @@
 //! follows is saved and published from the outbox. At most one commit runs at a time; the next one
 //! starts when it has ended and something waits 2 ms or fills a batch.
 
+use crate::service::broker::BrokerSettings;
 use crate::service::broker::inbound::{AckToken, Delivery, Inbound, InboundEvent, InboundHandle};
 use crate::service::broker::outbound::{OutMessage, Outbound, OutboundEvent, OutboundHandle};
-use crate::service::broker::BrokerSettings;
 use crate::service::clock::{self, Stopwatch};
 use crate::service::desk::{Arrival, Arrivals, Desk, Entry, Put};
 use crate::service::flood::Flood;
@@ -72,6 +72,13 @@ enum Event {
     StoreGone,
 }
 
+/// An answer of the store that is still to come.
+type Answer<T> = oneshot::Receiver<Result<T, StoreError>>;
+/// Messages put down, in order of arrival; a token without entry adds nothing.
+type Batch = Vec<(AckToken, Option<Entry>)>;
+/// Rows of the outbox.
+type Rows = Vec<(i64, NewMessage)>;
+
 /// Where the technician's lines go.
 pub type LineSink = Box<dyn FnMut(&str) + Send>;
 
@@ -84,12 +91,11 @@ struct Daemon {
     lines: LineSink,
     notify: Notify,
     flood: Flood,
-    /// Messages put down, in order of arrival; a token without entry adds nothing.
-    waiting: Vec<(AckToken, Option<Entry>)>,
+    waiting: Batch,
     first_waits_since: Option<Instant>,
-    committing: Option<(oneshot::Receiver<Result<i64, StoreError>>, Vec<(AckToken, Option<Entry>)>)>,
-    saving: Option<oneshot::Receiver<Result<u64, StoreError>>>,
-    fetching: Option<oneshot::Receiver<Result<Vec<(i64, NewMessage)>, StoreError>>>,
+    committing: Option<(Answer<i64>, Batch)>,
+    saving: Option<Answer<u64>>,
+    fetching: Option<Answer<Rows>>,
     /// The newest outbox row handed to the link on this connection.
     handed: i64,
     /// Handed over, not yet taken by the broker.
@@ -215,7 +221,10 @@ impl Daemon {
                 self.saving = None;
                 let unkept = result?;
                 if unkept > 0 {
-                    tracing::error!(unkept, "the outbox is full: alert events kept in the log only");
+                    tracing::error!(
+                        unkept,
+                        "the outbox is full: alert events kept in the log only"
+                    );
                 }
                 self.more_in_outbox = true;
             }
@@ -346,8 +355,7 @@ impl Daemon {
                 return;
             }
             let NewMessage { topic, payload, retained, content_type } = message;
-            let message =
-                OutMessage { token: id, topic, payload, retained, content_type, correlation: None };
+            let message = OutMessage { token: id, topic, payload, retained, content_type };
             if self.outbound.try_send(message).is_err() {
                 // The link is full; it goes on when something is delivered.
                 return;
@@ -385,7 +393,6 @@ impl Daemon {
             payload: service_state(state, why, self.state_since),
             retained: true,
             content_type: Some("application/json".to_owned()),
-            correlation: None,
         };
         if self.outbound.try_send(message).is_ok() {
             self.state_told = Some(why.to_owned());
@@ -454,17 +461,22 @@ impl Daemon {
         if let Some(bundle) = self.desk.bundle(true, true) {
             self.writer.save(bundle).await.map_err(|_| DaemonError::StoreGone)??;
         }
-        drain(&mut self.outbound, &self.writer, &mut out_events, &mut self.published, self.out_connected)
-            .await?;
+        drain(
+            &mut self.outbound,
+            &self.writer,
+            &mut out_events,
+            &mut self.published,
+            self.out_connected,
+        )
+        .await?;
         let last = OutMessage {
             token: SERVICE_TOKEN,
             topic: self.desk.service_topic(),
             payload: service_state("offline", "stopped", clock::now()),
             retained: true,
             content_type: Some("application/json".to_owned()),
-            correlation: None,
         };
-        self.outbound.stop(Some(last)).await;
+        self.outbound.stop(last).await;
         Ok(Summary { arrivals: self.desk.arrivals, published: self.published })
     }
 }
@@ -490,15 +502,16 @@ async fn drain(
         let mut open: Vec<i64> = Vec::new();
         for (id, message) in rows {
             let NewMessage { topic, payload, retained, content_type } = message;
-            let message =
-                OutMessage { token: id, topic, payload, retained, content_type, correlation: None };
+            let message = OutMessage { token: id, topic, payload, retained, content_type };
             if outbound.try_send(message).is_ok() {
                 open.push(id);
             }
         }
         while !open.is_empty() {
             match tokio::time::timeout_at(until, events.recv()).await {
-                Ok(Some(OutboundEvent::Delivered { token } | OutboundEvent::Refused { token, .. })) => {
+                Ok(Some(
+                    OutboundEvent::Delivered { token } | OutboundEvent::Refused { token, .. },
+                )) => {
                     if let Some(place) = open.iter().position(|&id| id == token) {
                         open.remove(place);
                         *published += 1;

@@ -2,6 +2,7 @@
 
 pub mod broker;
 pub mod clock;
+pub mod daemon;
 pub mod desk;
 pub mod envelope;
 pub mod flood;
