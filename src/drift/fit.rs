@@ -6,7 +6,7 @@
 
 use crate::drift::family::{COEFFICIENTS_MAX, Coefficients, Family};
 use crate::drift::serial::count;
-use nalgebra::{DMatrix, DVector};
+use nalgebra::{DMatrix, DVector, Matrix4, Vector4};
 use serde::{Deserialize, Serialize};
 
 /// Most Gauss–Newton steps of the refinement; it settles in about six.
@@ -15,6 +15,8 @@ const STEPS_MAX: usize = 60;
 const HALVINGS_MAX: usize = 40;
 /// The refinement is settled when a step changes no coefficient by more than this share of itself.
 const SETTLED: f64 = 1e-14;
+/// The same for the watch's robust refinement, far below what its data can tell.
+const SETTLED_ROBUST: f64 = 1e-9;
 /// Range of the power family's exponent; an optimum at its edge is not determined by the data.
 const EXPONENT: (f64, f64) = (-4.0, 8.0);
 /// Points of the grid on which the exponent is looked for when no logarithms can be taken.
@@ -267,35 +269,76 @@ fn refine(
     let p = family.parameter_count();
     let mut rows = vec![[0.0; COEFFICIENTS_MAX]; x.len()];
     let mut residuals = vec![0.0; x.len()];
+    let mut sorted = Vec::with_capacity(x.len());
     let mut limit = f64::INFINITY;
+    let settled = if robust { SETTLED_ROBUST } else { SETTLED };
     for step in 1..=STEPS_MAX {
         for (i, (&v, &w)) in x.iter().zip(y).enumerate() {
             rows[i] = family.gradient(&theta, v);
             residuals[i] = w - family.value(&theta, v);
         }
         if robust && step > 1 && step <= ROBUST_PASSES {
-            let scale = robust_scale(&residuals);
+            let scale = robust_scale_in(&residuals, &mut sorted);
             limit = if scale > 0.0 { CLIP_WINSOR * scale } else { f64::INFINITY };
         }
-        let clipped: Vec<f64> = residuals.iter().map(|r| r.clamp(-limit, limit)).collect();
-        let Some((change, _)) = least_squares(&rows, &clipped, p) else {
-            return Err(FitOutcome::Singular);
+        let before: f64 = residuals.iter().map(|r| loss(r.abs(), limit)).sum();
+        residuals.iter_mut().for_each(|r| *r = r.clamp(-limit, limit));
+        // The watch refits all day: the scaled normal equations are far exact enough for it.
+        let solved = if robust {
+            normal_equations(&rows, &residuals, p)
+        } else {
+            least_squares(&rows, &residuals, p).map(|(change, _)| change)
         };
-        let before = cost(family, x, y, &theta, limit);
+        let Some(change) = solved else { return Err(FitOutcome::Singular) };
         let Some(next) = halved(family, x, y, &theta, &change, before, limit) else {
             return Ok((theta, step));
         };
-        let moved = (0..p).any(|k| (next[k] - theta[k]).abs() > SETTLED * next[k].abs());
+        let moved = (0..p).any(|k| (next[k] - theta[k]).abs() > settled * next[k].abs());
         theta = next;
         if family == Family::Power && theta[1].abs() > 60.0 {
             return Err(FitOutcome::WeaklyDetermined { exponent: theta[1] });
         }
-        if !moved && (!robust || step > ROBUST_PASSES) {
+        if !moved && (!robust || step > 2) {
             return Ok((theta, step));
         }
     }
     // Steps at the level of rounding may go on for ever without changing anything that is reported.
     Ok((theta, STEPS_MAX))
+}
+
+/// Solves min ‖A c − r‖ by the normal equations, columns scaled to a largest entry of 1. None when
+/// they are not positive definite.
+fn normal_equations(rows: &[Coefficients], r: &[f64], p: usize) -> Option<Coefficients> {
+    let mut scale = [0.0_f64; COEFFICIENTS_MAX];
+    for row in rows {
+        for k in 0..p {
+            scale[k] = scale[k].max(row[k].abs());
+        }
+    }
+    let (mut squares, mut right) = (Matrix4::<f64>::zeros(), Vector4::<f64>::zeros());
+    for (row, &v) in rows.iter().zip(r) {
+        for i in 0..p {
+            let a = row[i] / scale[i];
+            right[i] += a * v;
+            for k in 0..=i {
+                squares[(i, k)] += a * row[k] / scale[k];
+            }
+        }
+    }
+    for i in 0..COEFFICIENTS_MAX {
+        if i >= p {
+            squares[(i, i)] = 1.0;
+        }
+        for k in 0..i {
+            squares[(k, i)] = squares[(i, k)];
+        }
+    }
+    let solution = squares.cholesky()?.solve(&right);
+    let mut c = [0.0; COEFFICIENTS_MAX];
+    for k in 0..p {
+        c[k] = solution[k] / scale[k];
+    }
+    c.iter().all(|v| v.is_finite()).then_some(c)
 }
 
 /// The first of the step, half of it, a quarter … that does not raise the cost.
@@ -325,20 +368,27 @@ fn halved(
 
 /// Twice Huber's loss: r² inside the limit, 2 c|r| − c² outside.
 fn cost(family: Family, x: &[f64], y: &[f64], theta: &Coefficients, limit: f64) -> f64 {
-    x.iter()
-        .zip(y)
-        .map(|(&v, &w)| {
-            let r = (w - family.value(theta, v)).abs();
-            if r <= limit { r * r } else { limit * (2.0 * r - limit) }
-        })
-        .sum()
+    x.iter().zip(y).map(|(&v, &w)| loss((w - family.value(theta, v)).abs(), limit)).sum()
+}
+
+fn loss(r: f64, limit: f64) -> f64 {
+    if r <= limit { r * r } else { limit * (2.0 * r - limit) }
 }
 
 /// Returns 1.4826 times the median of |r|: the standard deviation of normal noise, outliers or not.
 pub fn robust_scale(residuals: &[f64]) -> f64 {
-    let mut sizes: Vec<f64> = residuals.iter().map(|r| r.abs()).collect();
-    sizes.sort_by(f64::total_cmp);
-    sizes.get(sizes.len() / 2).map_or(0.0, |median| 1.4826 * median)
+    robust_scale_in(residuals, &mut Vec::with_capacity(residuals.len()))
+}
+
+fn robust_scale_in(residuals: &[f64], sizes: &mut Vec<f64>) -> f64 {
+    if residuals.is_empty() {
+        return 0.0;
+    }
+    sizes.clear();
+    sizes.extend(residuals.iter().map(|r| r.abs()));
+    let middle = sizes.len() / 2;
+    let (_, median, _) = sizes.select_nth_unstable_by(middle, f64::total_cmp);
+    1.4826 * *median
 }
 
 fn finish(

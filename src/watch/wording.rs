@@ -202,7 +202,10 @@ pub fn gone(kind: Kind) -> &'static str {
             "The residuals show no structure any more; the curve describes the instrument again."
         }
         Kind::BeyondReach => "The window now supports the statement that is needed.",
-        Kind::ToleranceAhead => "The forecast stays inside the tolerance.",
+        Kind::ToleranceAhead => {
+            "Nothing ahead any more: the forecast stays inside the tolerance, or the deviation is \
+             outside it already."
+        }
         Kind::OutOfTolerance => "The deviation is inside the tolerance again.",
         Kind::NoCurve => "A curve describes this channel again.",
         Kind::Silent => "Readings arrive again.",
