@@ -16,7 +16,7 @@ const HALVINGS_MAX: usize = 40;
 /// The refinement is settled when a step changes no coefficient by more than this share of itself.
 const SETTLED: f64 = 1e-14;
 /// The same for the watch's robust refinement, far below what its data can tell.
-const SETTLED_ROBUST: f64 = 1e-9;
+const SETTLED_ROBUST: f64 = 1e-7;
 /// Range of the power family's exponent; an optimum at its edge is not determined by the data.
 const EXPONENT: (f64, f64) = (-4.0, 8.0);
 /// Points of the grid on which the exponent is looked for when no logarithms can be taken.
@@ -267,34 +267,33 @@ fn refine(
     robust: bool,
 ) -> Result<(Coefficients, usize), FitOutcome> {
     let p = family.parameter_count();
-    let mut rows = vec![[0.0; COEFFICIENTS_MAX]; x.len()];
-    let mut residuals = vec![0.0; x.len()];
+    let data = Data::new(family, x, y);
+    let mut here = data.evaluate(family, &theta);
+    let mut clipped = here.residuals.clone();
     let mut sorted = Vec::with_capacity(x.len());
     let mut limit = f64::INFINITY;
     let settled = if robust { SETTLED_ROBUST } else { SETTLED };
     for step in 1..=STEPS_MAX {
-        for (i, (&v, &w)) in x.iter().zip(y).enumerate() {
-            rows[i] = family.gradient(&theta, v);
-            residuals[i] = w - family.value(&theta, v);
-        }
         if robust && step > 1 && step <= ROBUST_PASSES {
-            let scale = robust_scale_in(&residuals, &mut sorted);
+            let scale = robust_scale_in(&here.residuals, &mut sorted);
             limit = if scale > 0.0 { CLIP_WINSOR * scale } else { f64::INFINITY };
         }
-        let before: f64 = residuals.iter().map(|r| loss(r.abs(), limit)).sum();
-        residuals.iter_mut().for_each(|r| *r = r.clamp(-limit, limit));
+        let before = here.cost(limit);
+        for (to, r) in clipped.iter_mut().zip(&here.residuals) {
+            *to = r.clamp(-limit, limit);
+        }
         // The watch refits all day: the scaled normal equations are far exact enough for it.
         let solved = if robust {
-            normal_equations(&rows, &residuals, p)
+            normal_equations(&here.rows, &clipped, p)
         } else {
-            least_squares(&rows, &residuals, p).map(|(change, _)| change)
+            least_squares(&here.rows, &clipped, p).map(|(change, _)| change)
         };
         let Some(change) = solved else { return Err(FitOutcome::Singular) };
-        let Some(next) = halved(family, x, y, &theta, &change, before, limit) else {
+        let Some((next, there)) = halved(family, &data, &theta, &change, before, limit) else {
             return Ok((theta, step));
         };
         let moved = (0..p).any(|k| (next[k] - theta[k]).abs() > settled * next[k].abs());
-        theta = next;
+        (theta, here) = (next, there);
         if family == Family::Power && theta[1].abs() > 60.0 {
             return Err(FitOutcome::WeaklyDetermined { exponent: theta[1] });
         }
@@ -304,6 +303,47 @@ fn refine(
     }
     // Steps at the level of rounding may go on for ever without changing anything that is reported.
     Ok((theta, STEPS_MAX))
+}
+
+/// The data of one fit, with the logarithms of the ages taken once.
+struct Data<'a> {
+    x: &'a [f64],
+    y: &'a [f64],
+    ln_x: Vec<f64>,
+}
+
+/// A curve held against the data.
+struct Evaluated {
+    residuals: Vec<f64>,
+    rows: Vec<Coefficients>,
+}
+
+impl<'a> Data<'a> {
+    fn new(family: Family, x: &'a [f64], y: &'a [f64]) -> Data<'a> {
+        let ln_x = if family.needs_positive_age() {
+            x.iter().map(|v| v.ln()).collect()
+        } else {
+            vec![0.0; x.len()]
+        };
+        Data { x, y, ln_x }
+    }
+
+    fn evaluate(&self, family: Family, theta: &Coefficients) -> Evaluated {
+        let n = self.x.len();
+        let mut at = Evaluated { residuals: Vec::with_capacity(n), rows: Vec::with_capacity(n) };
+        for i in 0..n {
+            let (value, row) = family.value_and_gradient(theta, self.x[i], self.ln_x[i]);
+            at.residuals.push(self.y[i] - value);
+            at.rows.push(row);
+        }
+        at
+    }
+}
+
+impl Evaluated {
+    fn cost(&self, limit: f64) -> f64 {
+        self.residuals.iter().map(|r| loss(r.abs(), limit)).sum()
+    }
 }
 
 /// Solves min ‖A c − r‖ by the normal equations, columns scaled to a largest entry of 1. None when
@@ -344,22 +384,22 @@ fn normal_equations(rows: &[Coefficients], r: &[f64], p: usize) -> Option<Coeffi
 /// The first of the step, half of it, a quarter … that does not raise the cost.
 fn halved(
     family: Family,
-    x: &[f64],
-    y: &[f64],
+    data: &Data<'_>,
     theta: &Coefficients,
     change: &Coefficients,
     before: f64,
     limit: f64,
-) -> Option<Coefficients> {
+) -> Option<(Coefficients, Evaluated)> {
     let mut share = 1.0;
     for _ in 0..HALVINGS_MAX {
         let mut next = *theta;
         for k in 0..COEFFICIENTS_MAX {
             next[k] += share * change[k];
         }
-        let after = cost(family, x, y, &next, limit);
+        let there = data.evaluate(family, &next);
+        let after = there.cost(limit);
         if after.is_finite() && after <= before {
-            return Some(next);
+            return Some((next, there));
         }
         share *= 0.5;
     }
@@ -367,10 +407,6 @@ fn halved(
 }
 
 /// Twice Huber's loss: r² inside the limit, 2 c|r| − c² outside.
-fn cost(family: Family, x: &[f64], y: &[f64], theta: &Coefficients, limit: f64) -> f64 {
-    x.iter().zip(y).map(|(&v, &w)| loss((w - family.value(theta, v)).abs(), limit)).sum()
-}
-
 fn loss(r: f64, limit: f64) -> f64 {
     if r <= limit { r * r } else { limit * (2.0 * r - limit) }
 }
