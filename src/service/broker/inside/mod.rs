@@ -109,20 +109,22 @@ pub struct InsideBroker {
 }
 
 impl InsideBroker {
-    /// Starts a broker on the present tokio runtime.
+    /// Starts a broker on the present tokio runtime; panics where there is none.
     ///
     /// # Arguments
     /// * `address` - where to listen, a loopback address; port 0 takes a free one.
     ///
     /// # Outcomes
     /// The running broker, or the error of the bind.
-    pub async fn start(address: SocketAddr) -> io::Result<InsideBroker> {
-        InsideBroker::start_with(address, Faults::default()).await
+    pub fn start(address: SocketAddr) -> io::Result<InsideBroker> {
+        InsideBroker::start_with(address, Faults::default())
     }
 
     /// Starts a broker that commits the given faults; see [`InsideBroker::start`].
-    pub async fn start_with(address: SocketAddr, faults: Faults) -> io::Result<InsideBroker> {
-        let listener = TcpListener::bind(address).await?;
+    pub fn start_with(address: SocketAddr, faults: Faults) -> io::Result<InsideBroker> {
+        let listener = std::net::TcpListener::bind(address)?;
+        listener.set_nonblocking(true)?;
+        let listener = TcpListener::from_std(listener)?;
         let address = listener.local_addr()?;
         let shared: Shared = Arc::new(Mutex::new(State::new(faults)));
         let (stop, stopped) = watch::channel(false);

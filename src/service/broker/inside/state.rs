@@ -115,8 +115,11 @@ impl State {
         let will = link.will.take();
         // An error: the old connection is ending by itself.
         let _ = link.kick.send(DisconnectReasonCode::SessionTakenOver);
-        if let Some(will) = will.filter(|will| delay_s(will) == 0) {
-            self.send_will(client, will);
+        match will.map(|will| (delay_s(&will), will)) {
+            Some((0, will)) => self.send_will(client, will),
+            // Sent if the session ends, not if it is resumed.
+            Some((delay, will)) => session.late_will = Some((will, delay)),
+            None => {}
         }
     }
 
