@@ -228,11 +228,12 @@ fn refusal(code: ConnectReturnCode) -> Packet {
     Packet::ConnAck(ConnAck { session_present: false, code, properties: None })
 }
 
-/// A DISCONNECT with empty properties: without any the codec writes a byte too many.
+/// A DISCONNECT with a property: without one the codec of rumqttc 0.25.1 writes a byte too many, with
+/// empty ones it takes the packet for a normal disconnection.
 fn farewell(reason_code: DisconnectReasonCode) -> Packet {
     let properties = DisconnectProperties {
         session_expiry_interval: None,
-        reason_string: None,
+        reason_string: Some("ended by the broker".to_owned()),
         user_properties: Vec::new(),
         server_reference: None,
     };
