@@ -7,6 +7,7 @@
 //! by the broker's session, alerts by the outbox.
 
 pub mod inbound;
+pub mod inside;
 pub mod outbound;
 mod reason;
 
