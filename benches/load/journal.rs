@@ -30,7 +30,8 @@ impl Journal {
     }
 
     fn count(&self, sql: &str) -> Result<u64, String> {
-        self.query(|c| c.query_row(sql, [], |row| row.get(0)))
+        let count: i64 = self.query(|c| c.query_row(sql, [], |row| row.get(0)))?;
+        Ok(u64::try_from(count).expect("row numbers and counts are not negative"))
     }
 
     /// The number of the newest row: rows are numbered from 1 without gaps.

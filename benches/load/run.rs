@@ -88,7 +88,7 @@ pub fn run(
     let progress = Arc::new(Progress::default());
     let publisher = publish(port, plant, args.rate, Arc::clone(&progress));
     let third = Duration::from_secs(args.seconds) / 3;
-    let mut turn = |run: &mut Run<'_>| {
+    let turn = |run: &mut Run<'_>| {
         run.live()?;
         let early = run.meter.elapsed() <= third;
         let Run { daemon, broker, journal, meter, .. } = run;
