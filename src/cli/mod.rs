@@ -1,6 +1,7 @@
 //! One file per command.
 
 pub mod check;
+pub mod connect;
 pub mod replay;
 pub mod run;
 
@@ -40,7 +41,7 @@ pub fn run(arguments: impl IntoIterator<Item = std::ffi::OsString>) -> u8 {
     let (mut out, mut err) = (io::BufWriter::new(io::stdout().lock()), io::stderr());
     let code = match arguments.command {
         Command::Check(args) => {
-            check::check(&args, &environment, budget_words, |_| Vec::new(), &mut out, &mut err)
+            check::check(&args, &environment, budget_words, connect::try_all, &mut out, &mut err)
         }
         Command::Run(args) => {
             drop(out);
