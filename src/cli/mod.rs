@@ -2,6 +2,7 @@
 
 pub mod check;
 pub mod connect;
+pub mod demo;
 pub mod replay;
 pub mod run;
 
@@ -23,6 +24,7 @@ struct Arguments {
 #[derive(Debug, Subcommand)]
 enum Command {
     Check(check::CheckArgs),
+    Demo(demo::DemoArgs),
     Replay(replay::ReplayArgs),
     Run(run::RunArgs),
 }
@@ -43,6 +45,7 @@ pub fn run(arguments: impl IntoIterator<Item = std::ffi::OsString>) -> u8 {
         Command::Check(args) => {
             check::check(&args, &environment, budget_words, connect::try_all, &mut out, &mut err)
         }
+        Command::Demo(_) => demo::demo(&mut out, &mut err),
         Command::Run(args) => {
             drop(out);
             return run::run(&args, &environment, &mut err);

@@ -38,6 +38,11 @@ pub fn now() -> ShellTime {
     ShellTime(jiff::Timestamp::now().as_microsecond())
 }
 
+/// A moment to count a timer from; steps of the wall clock do not touch it.
+pub fn instant() -> tokio::time::Instant {
+    tokio::time::Instant::now()
+}
+
 /// A running stopwatch, for measuring how long something took; steps of the wall clock do not touch it.
 #[derive(Clone, Copy, Debug)]
 pub struct Stopwatch(std::time::Instant);

@@ -7,7 +7,7 @@
 use crate::service::broker::BrokerSettings;
 use crate::service::broker::inbound::{AckToken, Delivery, Inbound, InboundEvent, InboundHandle};
 use crate::service::broker::outbound::{OutMessage, Outbound, OutboundEvent, OutboundHandle};
-use crate::service::clock::Stopwatch;
+use crate::service::clock::{self, Stopwatch};
 use crate::service::desk::{Arrival, Arrivals, Desk, Entry, Put};
 use crate::service::flood::Flood;
 use crate::service::notify::Notify;
@@ -188,7 +188,7 @@ impl Daemon {
     ) -> Event {
         let commit_at = match (&self.committing, self.first_waits_since) {
             (None, Some(since)) => since + LINGER,
-            _ => Instant::now() + Duration::from_secs(3600),
+            _ => clock::instant() + Duration::from_secs(3600),
         };
         let room = self.waiting.len() < WAITING_MAX;
         tokio::select! {
@@ -294,7 +294,7 @@ impl Daemon {
             Put::Nothing => None,
         };
         self.waiting.push((delivery.token, entry));
-        self.first_waits_since.get_or_insert_with(Instant::now);
+        self.first_waits_since.get_or_insert_with(clock::instant);
     }
 
     fn on_committed(&mut self, first: i64) {
@@ -447,7 +447,7 @@ impl Daemon {
                 let first = receiver.await.map_err(|_| DaemonError::StoreGone)??;
                 self.on_committed(first);
             }
-            self.first_waits_since = Some(Instant::now() - LINGER);
+            self.first_waits_since = Some(clock::instant() - LINGER);
             self.start_commit();
         }
         self.inbound.stop().await;
@@ -491,7 +491,7 @@ async fn drain(
     if !connected {
         return Ok(());
     }
-    let until = Instant::now() + DRAIN;
+    let until = clock::instant() + DRAIN;
     let gone = |_| DaemonError::StoreGone;
     loop {
         let rows = writer.unsent_after(0, 16).await.map_err(gone)??;
