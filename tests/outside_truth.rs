@@ -2,30 +2,35 @@
 //! textbook formulas worked out with 80 decimal digits. `tests/reference/README.md` tells where each
 //! number comes from. Run with `--nocapture` to see how many digits agree.
 
+#![expect(clippy::unwrap_used, reason = "a helper of a test may fail as the test may")]
+
 use asfound::drift::choose::{aicc, aicc_classical, choose};
 use asfound::drift::family::Family;
 use asfound::drift::fit::{Fit, FitOutcome, fit};
 use asfound::drift::forecast::sandwich;
 use asfound::drift::serial::{durbin_watson, effective_count, lag_correlation};
-use asfound::drift::tails::{normal_q, normal_q_above, student_q};
 use serde_json::Value;
-use std::collections::HashSet;
-use std::fmt::Write as _;
 use std::path::{Path, PathBuf};
-use std::process::Command;
 
-/// Families that the references solve and the library fits, with the fewest digits that must agree:
-/// in the coefficients, and in sums of squares of residuals. The first are fewer for the power curve,
-/// where a search for the least sum of squares cannot see half of them. DanWood has six rows, too few
-/// for a cubic's AICc.
-const NORRIS: [(Family, f64, f64); 5] = [
+#[path = "outside_truth/program.rs"]
+mod program;
+#[path = "outside_truth/tails.rs"]
+mod tails;
+
+/// A family with the fewest digits that must agree in its coefficients, and in its sums of squares.
+type Digits = (Family, f64, f64);
+
+/// Families that the references solve and the library fits. The power curve's coefficients agree less:
+/// the sum of squares, at its least, hardly changes with them. DanWood has six rows, too few for a
+/// cubic's AICc.
+const NORRIS: [Digits; 5] = [
     (Family::Linear, 11.0, 12.0),
     (Family::Logarithmic, 12.0, 13.0),
     (Family::Power, 9.5, 12.0),
     (Family::Quadratic, 11.0, 12.0),
     (Family::Cubic, 11.0, 12.0),
 ];
-const DANWOOD: [(Family, f64, f64); 4] = [
+const DANWOOD: [Digits; 4] = [
     (Family::Linear, 12.0, 12.0),
     (Family::Logarithmic, 12.0, 12.0),
     (Family::Power, 9.5, 12.0),
@@ -81,7 +86,7 @@ fn fitted(family: Family, x: &[f64], y: &[f64]) -> Fit {
 }
 
 /// Both data sets with the families to be held against them.
-fn both() -> [(&'static str, Series, Vec<(Family, f64, f64)>); 2] {
+fn both() -> [(&'static str, Series, Vec<Digits>); 2] {
     [
         ("Norris", series("norris"), NORRIS.to_vec()),
         ("DanWood", series("danwood"), DANWOOD.to_vec()),
@@ -358,190 +363,4 @@ fn effective_count_is_how_much_the_mean_of_a_dependent_series_is_worth() {
         let want = count(n) / (1.0 + 2.0 * sum);
         check(&format!("phi {phi}"), effective_count(n, phi), want, 4.0);
     }
-}
-
-// ---- Tails ------------------------------------------------------------------------------------
-
-/// (distribution, freedom, deviate, sides, −log10 of the probability)
-fn tails() -> Vec<(String, f64, f64, f64)> {
-    let mut rows = csv::Reader::from_path(folder().join("tails.csv")).unwrap();
-    rows.records()
-        .map(|row| {
-            let row = row.unwrap();
-            let freedom = row[1].parse().unwrap_or(f64::INFINITY);
-            (row[0].to_owned(), freedom, row[2].parse().unwrap(), minus_log10(&row[4]))
-        })
-        .collect()
-}
-
-/// −log10 of a decimal string that may lie below the smallest double.
-fn minus_log10(text: &str) -> f64 {
-    let (digits, exponent) = text.split_once('e').unwrap_or((text, "0"));
-    -digits.parse::<f64>().unwrap().log10() - exponent.parse::<f64>().unwrap()
-}
-
-#[test]
-fn normal_tail_agrees_with_its_20_digit_values() {
-    let mut seen = 0;
-    for (_, _, z, q_above) in tails().into_iter().filter(|row| row.0 == "normal") {
-        // The documentation promises a relative error of q below 1e-4 from deviate 20 on.
-        let digits = if z < 20.0 { 9.0 } else { 4.0 };
-        check(&format!("above {z}"), normal_q_above(z), q_above, digits);
-        check(&format!("beyond ±{z}"), normal_q(z), q_above - 2.0_f64.log10(), digits);
-        seen += 1;
-    }
-    assert_eq!(seen, 10);
-}
-
-/// Fewest digits of Student's q: 2 % from ten degrees of freedom on, 4 % at four. The examination of
-/// residuals never has fewer than fifty.
-fn student_digits(freedom: f64) -> f64 {
-    let share: f64 = if freedom >= 10.0 { 0.02 } else { 0.04 };
-    -share.log10()
-}
-
-#[test]
-fn student_tail_is_within_a_few_percent_of_its_20_digit_values() {
-    let mut seen = 0;
-    for (_, freedom, t, q) in tails().into_iter().filter(|row| row.0 == "student") {
-        let what = format!("Student {freedom}, beyond ±{t}");
-        check(&what, student_q(t, freedom), q, student_digits(freedom));
-        seen += 1;
-    }
-    assert_eq!(seen, 18);
-}
-
-#[test]
-fn p_values_of_coefficients_are_those_of_their_student_deviates() {
-    for (name, series, _) in both() {
-        for family in [Family::Linear, Family::Logarithmic] {
-            let fit = series.fit(family);
-            let freedom = count(fit.degrees_of_freedom);
-            for (k, key) in ["p_value.a", "p_value.b"].into_iter().enumerate() {
-                let got = student_q(fit.theta[k] / fit.standard_errors[k], freedom);
-                let want = minus_log10(series.computed(family, key));
-                let what = format!("{name} {} {key}", family.name());
-                check(&what, got, want, student_digits(freedom));
-            }
-        }
-    }
-}
-
-// ---- The whole program ------------------------------------------------------------------------
-
-/// Settings for one instrument whose deviations are its readings.
-fn settings(store: &Path, unit: &str, window: &str, further: &str) -> String {
-    format!(
-        r#"
-[site]
-name = "bench"
-[broker]
-url = "mqtt://127.0.0.1:18830"
-[store]
-directory = "{}"
-[alerts]
-false_alerts_per_year = 1
-[[watch]]
-topic = "lab/{{tag}}/value"
-channel = "{{tag}}"
-payload = {{ format = "json", value = "/v", time = "/ts" }}
-unit = "{unit}"
-window = {{ span = "{window}", points = 512 }}
-look_ahead = "90d"
-{further}
-"#,
-        store.display()
-    )
-}
-
-/// Replays a file twice, checks that both runs say the same, and returns the lines as JSON.
-fn replay(settings: &str, folder: &Path, readings: &Path, options: &[&str]) -> Vec<Value> {
-    let config = folder.join("bench.toml");
-    std::fs::write(&config, settings).unwrap();
-    let run = || {
-        let output = Command::new(env!("CARGO_BIN_EXE_asfound"))
-            .args(["replay", "--json", "--config"])
-            .arg(&config)
-            .args(options)
-            .arg(readings)
-            .output()
-            .unwrap();
-        let errors = String::from_utf8(output.stderr).unwrap();
-        assert!(output.status.success(), "{errors}");
-        (String::from_utf8(output.stdout).unwrap(), errors)
-    };
-    let (first, second) = (run(), run());
-    assert_eq!(first, second, "two runs on the same readings");
-    println!("{}", first.1);
-    first.0.lines().map(|line| serde_json::from_str(line).unwrap()).collect()
-}
-
-#[test]
-fn replay_of_norris_finds_the_certified_line() {
-    // x counts as days since calibration, y as the deviation; every reading asks for a refit. One more
-    // reading, a month later on another channel, moves the clock past all lateness.
-    let norris = series("norris");
-    let calibrated: jiff::Timestamp = "2020-01-01T00:00:00Z".parse().unwrap();
-    let at = |days: f64| {
-        calibrated + jiff::SignedDuration::try_from_secs_f64((days * 86_400.0).round()).unwrap()
-    };
-    let mut text = String::from("time,channel,value\n");
-    let mut before = f64::NAN;
-    for (&x, &y) in norris.x.iter().zip(&norris.y) {
-        // Of two readings of one time the second would count as a duplicate: it comes a second later.
-        let x = if (x - before).abs() < 1e-9 { x + 1.0 / 86_400.0 } else { x };
-        writeln!(text, "{},ozone,{y}", at(x)).unwrap();
-        before = x;
-    }
-    writeln!(text, "{},other,0", at(1030.0)).unwrap();
-    let folder = tempfile::tempdir().unwrap();
-    let readings = folder.path().join("norris.csv");
-    std::fs::write(&readings, text).unwrap();
-    let further = "refit_every = \"1m\"\ncalibrated = \"2020-01-01T00:00:00Z\"";
-    let settings = settings(folder.path(), "ppb", "1100d", further);
-    let lines = replay(&settings, folder.path(), &readings, &["--findings"]);
-
-    let last = lines
-        .iter()
-        .filter_map(|line| line.get("finding"))
-        .rfind(|finding| finding["channel"] == "ozone")
-        .expect("a finding of the channel");
-    assert_eq!(last["window"]["points"], 36);
-    let curve = &last["curve"];
-    assert_eq!(curve["family"], "linear");
-    let certified = |key: &str| norris.certified(key).parse::<f64>().unwrap();
-    // The start is plain least squares; the second that one reading was moved costs some digits.
-    check("start a", curve["start"]["a"].as_f64().unwrap(), certified("b0"), 5.0);
-    check("start b", curve["start"]["b"].as_f64().unwrap(), certified("b1"), 8.0);
-    // The curve itself is fitted robustly: within the certified standard errors of the certified line.
-    for (name, key) in [("a", "b0"), ("b", "b1")] {
-        let off = (curve["coefficients"][name].as_f64().unwrap() - certified(key)).abs();
-        let se = certified(&format!("{key}_se"));
-        println!("{name} is {:.2} standard errors from the certified value", off / se);
-        assert!(off < se, "{name}: {off} against {se}");
-    }
-}
-
-#[test]
-fn standard_resistor_is_not_taken_for_a_plain_line() {
-    // NIST/SEMATECH e-Handbook of Statistical Methods, 1.4.2.7: the residuals of a line through the
-    // 1000 readings are strongly dependent. The readings are not part of this project.
-    let Some(readings) = std::env::var_os("ASFOUND_STANDARD_RESISTOR") else {
-        println!("not checked: ASFOUND_STANDARD_RESISTOR names no file, see tests/reference");
-        return;
-    };
-    let folder = tempfile::tempdir().unwrap();
-    let settings = settings(folder.path(), "ohm", "2200d", "refit_every = \"10d\"");
-    let events = replay(&settings, folder.path(), Path::new(&readings), &[]);
-    let mut ids = HashSet::new();
-    for event in &events {
-        assert_eq!(event["specversion"], "1.0", "{event}");
-        assert!(ids.insert(event["id"].as_str().expect("an id")), "{event}");
-    }
-    let of_the_residuals = |event: &&Value| {
-        event["type"] == "asfound.alert.raised"
-            && ["step", "bend", "dependence"].iter().any(|kind| event["data"]["kind"] == *kind)
-    };
-    let raised = events.iter().filter(of_the_residuals).count();
-    assert!(raised > 0, "{} events, none on the residuals", events.len());
 }
