@@ -1,6 +1,8 @@
 //! One file per command.
 
 pub mod check;
+pub mod connect;
+pub mod demo;
 pub mod replay;
 pub mod run;
 
@@ -22,6 +24,7 @@ struct Arguments {
 #[derive(Debug, Subcommand)]
 enum Command {
     Check(check::CheckArgs),
+    Demo(demo::DemoArgs),
     Replay(replay::ReplayArgs),
     Run(run::RunArgs),
 }
@@ -40,8 +43,9 @@ pub fn run(arguments: impl IntoIterator<Item = std::ffi::OsString>) -> u8 {
     let (mut out, mut err) = (io::BufWriter::new(io::stdout().lock()), io::stderr());
     let code = match arguments.command {
         Command::Check(args) => {
-            check::check(&args, &environment, budget_words, |_| Vec::new(), &mut out, &mut err)
+            check::check(&args, &environment, budget_words, connect::try_all, &mut out, &mut err)
         }
+        Command::Demo(_) => demo::demo(&mut out, &mut err),
         Command::Run(args) => {
             drop(out);
             return run::run(&args, &environment, &mut err);

@@ -115,7 +115,6 @@ fn run(
         args,
         tally: Tally::default(),
         clock: i64::MIN / 2,
-        due: ShellTime(i64::MIN / 2),
         out,
         err,
     };
@@ -146,8 +145,6 @@ struct Replaying<'a> {
     tally: Tally,
     /// The newest event time so far, µs: what stands for the shell's clock here.
     clock: i64,
-    /// Before this nothing is due.
-    due: ShellTime,
     out: &'a mut dyn Write,
     err: &'a mut dyn Write,
 }
@@ -164,18 +161,10 @@ impl Replaying<'_> {
     fn reading(&mut self, watch: usize, decoded: &Decoded) -> io::Result<()> {
         self.clock = self.clock.max(decoded.time.0);
         let now = ShellTime(self.clock);
-        // Arrivals only put a due time off, so the one seen last is good until it has passed.
-        while self.due <= now {
-            self.due = match self.engine.next_due() {
-                Some(due) if due <= now => {
-                    self.engine.tick(due);
-                    let effects = self.engine.effects();
-                    self.print(effects, due)?;
-                    continue;
-                }
-                Some(due) => due,
-                None => break,
-            };
+        while let Some(due) = self.engine.next_due().filter(|due| *due <= now) {
+            self.engine.tick(due);
+            let effects = self.engine.effects();
+            self.print(effects, due)?;
         }
         let reading =
             Reading { serial: self.tally.rows, time: decoded.time, deviation: decoded.deviation };

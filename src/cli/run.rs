@@ -2,12 +2,13 @@
 
 use crate::cli::check::{EXIT_DONE, EXIT_FAILED, EXIT_WRONG_USE};
 use crate::service::broker::BrokerSettings;
-use crate::service::clock::{self, Stopwatch};
+use crate::service::clock::{Clock, Stopwatch};
 use crate::service::daemon::{self, LineSink, Summary};
 use crate::service::desk::Desk;
 use crate::service::intake::Router;
 use crate::service::recover::recover;
 use crate::service::settings::{Environment, Settings};
+use crate::service::shown::Shown;
 use crate::service::store::{Store, Writer};
 use std::io::Write;
 use std::path::PathBuf;
@@ -57,21 +58,27 @@ pub fn run(args: &RunArgs, environment: &Environment, err: &mut dyn Write) -> u8
     }
 }
 
-/// Opens the store, recovers, and runs the daemon on a runtime of its own until `stop` ends.
-pub fn keep_watch(
-    settings: Settings,
-    lines: LineSink,
-    stop: impl Future<Output = ()>,
-) -> Result<Summary, Box<dyn std::error::Error>> {
+/// Everything that the loop needs, made ready.
+pub struct Prepared {
+    /// Over what was recovered.
+    pub desk: Desk,
+    /// Owns the store.
+    pub writer: Writer,
+    /// How to reach the broker.
+    pub link: BrokerSettings,
+}
+
+/// Opens the store and recovers from it.
+pub fn prepare(settings: Settings, clock: Clock) -> Result<Prepared, Box<dyn std::error::Error>> {
     let recovering = Stopwatch::start();
     let router = Router::new(&settings);
     let store = Store::open(&settings.store_directory)?;
     let newest_row = store.newest_row()?;
-    let recovered = recover(&store, &settings, &router, clock::now())?;
+    let recovered = recover(&store, &settings, &router, clock.now())?;
     for channel in &recovered.unwatched {
         tracing::warn!(
             "no watch speaks of channel {} any more; its history stays in the store",
-            crate::service::shown::Shown(channel, 80)
+            Shown(channel, 80)
         );
     }
     tracing::info!(
@@ -80,26 +87,33 @@ pub fn keep_watch(
         ms = recovering.elapsed().as_millis(),
         "recovered from the store"
     );
-    let broker = &settings.broker;
-    let link = BrokerSettings {
-        host: broker.host.clone(),
-        port: broker.port,
-        client_id: broker.client_id.clone(),
-        username: broker.username.clone(),
-        password: broker.password.clone(),
-    };
+    let link = BrokerSettings::of(&settings.broker);
     let writer = Writer::start(store)?;
-    let desk = Desk::new(settings, router, recovered, newest_row);
-    let runtime = tokio::runtime::Builder::new_multi_thread()
+    let desk = Desk::new(settings, clock, router, recovered, newest_row);
+    Ok(Prepared { desk, writer, link })
+}
+
+/// Prepares, and runs the daemon on a runtime of its own until `stop` ends.
+fn keep_watch(
+    settings: Settings,
+    lines: LineSink,
+    stop: impl Future<Output = ()>,
+) -> Result<Summary, Box<dyn std::error::Error>> {
+    let Prepared { desk, writer, link } = prepare(settings, Clock::System)?;
+    Ok(runtime()?.block_on(daemon::run(desk, writer, link, lines, stop))?)
+}
+
+/// The runtime: one thread for the loop, one for what waits beside it.
+pub fn runtime() -> std::io::Result<tokio::runtime::Runtime> {
+    tokio::runtime::Builder::new_multi_thread()
         .worker_threads(2)
         .thread_name("asfound")
         .enable_all()
-        .build()?;
-    Ok(runtime.block_on(daemon::run(desk, writer, link, lines, stop))?)
+        .build()
 }
 
 /// Ends with the first SIGTERM or SIGINT.
-async fn stop_signal() {
+pub async fn stop_signal() {
     use tokio::signal::unix::{SignalKind, signal};
     let term = signal(SignalKind::terminate());
     let interrupt = signal(SignalKind::interrupt());

@@ -124,9 +124,10 @@ pub async fn run(
 ) -> Result<Summary, DaemonError> {
     let (in_sender, mut in_events) = mpsc::channel(EVENTS_MAX);
     let (out_sender, mut out_events) = mpsc::channel(EVENTS_MAX);
-    let will = (desk.service_topic(), service_state("offline", "connection lost", clock::now()));
+    let will = (desk.service_topic(), service_state("offline", "connection lost", desk.now()));
     let inbound = Inbound::start(link.clone(), desk.filters(), in_sender);
     let outbound = Outbound::start(link, will, out_sender);
+    let state_since = desk.now();
     let mut daemon = Daemon {
         desk,
         writer,
@@ -146,12 +147,12 @@ pub async fn run(
         out_connected: false,
         in_connected: false,
         subscribed: false,
-        state_since: clock::now(),
+        state_since,
         state_told: None,
         pulses: 0,
         published: 0,
     };
-    daemon.desk.collect(clock::now());
+    daemon.desk.collect();
     daemon.after_turn();
     let mut pulse = tokio::time::interval(PULSE);
     pulse.set_missed_tick_behavior(tokio::time::MissedTickBehavior::Delay);
@@ -187,7 +188,7 @@ impl Daemon {
     ) -> Event {
         let commit_at = match (&self.committing, self.first_waits_since) {
             (None, Some(since)) => since + LINGER,
-            _ => Instant::now() + Duration::from_secs(3600),
+            _ => clock::instant() + Duration::from_secs(3600),
         };
         let room = self.waiting.len() < WAITING_MAX;
         tokio::select! {
@@ -280,7 +281,6 @@ impl Daemon {
             retained: delivery.retained,
             packet_id: delivery.packet_id(),
             response_topic: delivery.response_topic.as_deref(),
-            received: clock::now(),
         };
         let (put, refusal) = self.desk.receive(&arrival);
         if let Some(refusal) = refusal
@@ -294,7 +294,7 @@ impl Daemon {
             Put::Nothing => None,
         };
         self.waiting.push((delivery.token, entry));
-        self.first_waits_since.get_or_insert_with(Instant::now);
+        self.first_waits_since.get_or_insert_with(clock::instant);
     }
 
     fn on_committed(&mut self, first: i64) {
@@ -306,7 +306,7 @@ impl Daemon {
             entries.extend(entry);
         }
         self.inbound.acknowledge(tokens);
-        self.desk.committed(first, entries, clock::now());
+        self.desk.committed(first, entries);
     }
 
     fn on_outbound(&mut self, event: OutboundEvent) {
@@ -366,8 +366,7 @@ impl Daemon {
     }
 
     fn on_pulse(&mut self) {
-        let now = clock::now();
-        self.desk.tick(now);
+        self.desk.tick();
         self.pulses = self.pulses.wrapping_add(1);
         self.tell_state();
         self.flood.pulse();
@@ -386,7 +385,7 @@ impl Daemon {
         if !self.out_connected || self.state_told.as_deref() == Some(why) {
             return;
         }
-        self.state_since = clock::now();
+        self.state_since = self.desk.now();
         let message = OutMessage {
             token: SERVICE_TOKEN,
             topic: self.desk.service_topic(),
@@ -448,7 +447,7 @@ impl Daemon {
                 let first = receiver.await.map_err(|_| DaemonError::StoreGone)??;
                 self.on_committed(first);
             }
-            self.first_waits_since = Some(Instant::now() - LINGER);
+            self.first_waits_since = Some(clock::instant() - LINGER);
             self.start_commit();
         }
         self.inbound.stop().await;
@@ -472,7 +471,7 @@ impl Daemon {
         let last = OutMessage {
             token: SERVICE_TOKEN,
             topic: self.desk.service_topic(),
-            payload: service_state("offline", "stopped", clock::now()),
+            payload: service_state("offline", "stopped", self.desk.now()),
             retained: true,
             content_type: Some("application/json".to_owned()),
         };
@@ -492,7 +491,7 @@ async fn drain(
     if !connected {
         return Ok(());
     }
-    let until = Instant::now() + DRAIN;
+    let until = clock::instant() + DRAIN;
     let gone = |_| DaemonError::StoreGone;
     loop {
         let rows = writer.unsent_after(0, 16).await.map_err(gone)??;

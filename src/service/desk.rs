@@ -3,6 +3,7 @@
 //! Messages come in, are decoded and put down for the journal; committed rows go through the engine;
 //! what follows is bundled for the store. The loop around it is in [`crate::service::daemon`].
 
+use crate::service::clock::Clock;
 use crate::service::intake::{Decoded, Refusal, Router};
 use crate::service::outbox::{Told, tell};
 use crate::service::recall::{Recall, key_of_message, key_of_reading};
@@ -34,8 +35,6 @@ pub struct Arrival<'a> {
     pub packet_id: u16,
     /// Where a reply goes, for requests.
     pub response_topic: Option<&'a str>,
-    /// When it was received.
-    pub received: ShellTime,
 }
 
 /// What to do with a message.
@@ -75,6 +74,7 @@ pub struct Arrivals {
 #[derive(Debug)]
 pub struct Desk {
     settings: Settings,
+    clock: Clock,
     router: Router,
     engine: Engine,
     recall: Recall,
@@ -89,10 +89,17 @@ pub struct Desk {
 
 impl Desk {
     /// A desk over what was recovered; `newest_row` is the journal's last.
-    pub fn new(settings: Settings, router: Router, recovered: Recovered, newest_row: i64) -> Desk {
+    pub fn new(
+        settings: Settings,
+        clock: Clock,
+        router: Router,
+        recovered: Recovered,
+        newest_row: i64,
+    ) -> Desk {
         Desk {
             own_topics: settings.own_topics(),
             settings,
+            clock,
             router,
             engine: recovered.engine,
             recall: recovered.recall,
@@ -101,6 +108,11 @@ impl Desk {
             told: Told::default(),
             arrivals: Arrivals::default(),
         }
+    }
+
+    /// The time, by the clock this desk goes by.
+    pub fn now(&self) -> ShellTime {
+        self.clock.now()
     }
 
     /// The engine, to look at.
@@ -127,10 +139,12 @@ impl Desk {
         }
         let decoded = self
             .router
-            .decode(arrival.topic, arrival.payload, arrival.received)
-            .and_then(|(watch, decoded)| {
-                Ok((watch, not_from_the_future(decoded.unless_stale(arrival.retained)?, arrival)?))
-            });
+            .decode(arrival.topic, arrival.payload, self.now())
+            .and_then(|(watch, decoded)| Ok((watch, decoded.unless_stale(arrival.retained)?)));
+        let decoded = decoded.and_then(|(watch, decoded)| {
+            self.clock.saw(decoded.time);
+            Ok((watch, not_from_the_future(decoded, self.now())?))
+        });
         match decoded {
             Ok((watch, decoded)) => (self.reading(arrival, watch, decoded), None),
             Err(refusal) => {
@@ -157,7 +171,7 @@ impl Desk {
             watch: self.pattern_of(watch),
             time: time.0,
             value: deviation,
-            got: arrival.received.0,
+            got: self.now().0,
             message: if own_time { 0 } else { key },
             action: None,
         };
@@ -176,7 +190,7 @@ impl Desk {
             // An old request that the broker keeps is nobody's wish of today.
             return Put::Nothing;
         }
-        match request::read(verb, arrival.payload, &self.engine, arrival.received) {
+        match request::read(verb, arrival.payload, &self.engine, self.now()) {
             Ok((channel, action)) => {
                 let watch = self.engine.watch_of(&channel).unwrap_or(0);
                 let row = NewRow {
@@ -184,7 +198,7 @@ impl Desk {
                     channel,
                     time: 0,
                     value: 0.0,
-                    got: arrival.received.0,
+                    got: self.now().0,
                     message: 0,
                     action: Some(
                         serde_json::to_string(&action).expect("plain data serialises to memory"),
@@ -209,9 +223,10 @@ impl Desk {
     }
 
     /// Takes rows that are durable now, the first of them journal row `first`.
-    pub fn committed(&mut self, first: i64, entries: Vec<Entry>, now: ShellTime) {
+    pub fn committed(&mut self, first: i64, entries: Vec<Entry>) {
         for (id, entry) in (first..).zip(entries) {
             let Entry { row, watch, reply_to } = entry;
+            self.attend(ShellTime(row.got));
             self.arrivals.journaled += 1;
             self.newest_row = id;
             self.unsaved.entry(row.channel.clone()).or_insert(id);
@@ -221,21 +236,33 @@ impl Desk {
                 self.reply(topic, done, why);
             }
         }
-        self.collect(now);
+        self.collect();
     }
 
     /// Does what is due by the clock.
-    pub fn tick(&mut self, now: ShellTime) {
-        if self.engine.next_due().is_some_and(|due| due <= now) {
-            self.engine.tick(now);
-            self.collect(now);
+    pub fn tick(&mut self) {
+        // A clock that follows the readings is ahead of those that are not committed yet; there their
+        // own turn attends to what is due.
+        if matches!(self.clock, Clock::System) {
+            self.attend(self.now());
+        }
+        self.collect();
+    }
+
+    /// Does what was due at each moment up to `now`, in its order.
+    fn attend(&mut self, now: ShellTime) {
+        while let Some(due) = self.engine.next_due().filter(|due| *due <= now) {
+            self.engine.tick(due);
         }
     }
 
     /// Turns waiting effects into what is to be told.
-    pub fn collect(&mut self, now: ShellTime) {
+    pub fn collect(&mut self) {
         let effects = self.engine.effects();
-        let told = tell(&self.engine, effects, &self.own_topics, now);
+        if effects.is_empty() {
+            return;
+        }
+        let told = tell(&self.engine, effects, &self.own_topics, self.now());
         self.told.bundle.messages.extend(told.bundle.messages);
         self.told.bundle.alerts.extend(told.bundle.alerts);
         self.told.changed.extend(told.changed);
@@ -288,8 +315,8 @@ impl Desk {
     }
 }
 
-fn not_from_the_future(decoded: Decoded, arrival: &Arrival<'_>) -> Result<Decoded, Refusal> {
-    let ahead = decoded.time.0.saturating_sub(arrival.received.0);
+fn not_from_the_future(decoded: Decoded, now: ShellTime) -> Result<Decoded, Refusal> {
+    let ahead = decoded.time.0.saturating_sub(now.0);
     if ahead > FUTURE_MAX_US {
         let days = crate::watch::time::Span(ahead).days();
         return Err(Refusal::FromTheFuture { days });

@@ -3,7 +3,7 @@
 //! Readings and actions go in with their journal numbers, effects come out. The same readings in the
 //! same order give the same effects, whether live, replayed or continued after a restart.
 
-use crate::watch::alert::{AlertEvent, Episode};
+use crate::watch::alert::{AlertEvent, Concern, Episode};
 use crate::watch::budget::Budget;
 use crate::watch::channel::{Channel, Context, Outcome};
 use crate::watch::finding::Finding;
@@ -90,6 +90,8 @@ pub struct Engine {
     /// Journal numbers at which channels began, rising.
     births: Vec<u64>,
     listening_since: ShellTime,
+    /// No channel wants attention before this; absent: none ever.
+    due: Option<ShellTime>,
     effects: Vec<Effect>,
     refused: Counts,
 }
@@ -104,6 +106,7 @@ impl Engine {
             index: BTreeMap::new(),
             births: Vec::new(),
             listening_since: now,
+            due: None,
             effects: Vec::new(),
             refused: Counts::default(),
         }
@@ -116,6 +119,7 @@ impl Engine {
         self.index.insert(channel.name.clone(), self.channels.len());
         self.channels.push(channel);
         self.watches.push(watch);
+        self.note_due(self.channels.len() - 1);
     }
 
     /// Takes a reading that is already durable.
@@ -133,6 +137,7 @@ impl Engine {
         let context = context(&self.settings, self.watches[place], &self.births, reading.serial);
         let (taken, outcome) = self.channels[place].take(&context, reading, now);
         self.tell(place, outcome);
+        self.note_due(place);
         taken
     }
 
@@ -154,23 +159,28 @@ impl Engine {
         }
         let changed = matches!(action, Action::Calibrated { .. }) || !outcome.events.is_empty();
         self.tell(place, outcome);
+        self.note_due(place);
         changed
     }
 
-    /// When something wants attention by the shell's time: silence or the end of a shelf.
+    /// The earliest moment, by the shell's time, at which something may want attention: silence, the
+    /// end of a shelf. A [`Engine::tick`] then puts it off where nothing did.
     pub fn next_due(&self) -> Option<ShellTime> {
-        self.channels
-            .iter()
-            .zip(&self.watches)
-            .filter_map(|(channel, &watch)| {
-                let rules = &self.settings.watches[watch];
-                let silent =
-                    channel.alerts.holding(crate::watch::alert::Concern::Silence).is_none().then(
-                        || channel.last_arrival.max(self.listening_since).plus(rules.silent_after),
-                    );
-                silent.into_iter().chain(channel.alerts.next_unshelving()).min()
-            })
-            .min()
+        self.due
+    }
+
+    fn note_due(&mut self, place: usize) {
+        self.due = self.due.into_iter().chain(self.due_of(place)).min();
+    }
+
+    fn due_of(&self, place: usize) -> Option<ShellTime> {
+        let channel = &self.channels[place];
+        let rules = &self.settings.watches[self.watches[place]];
+        let heard = channel.last_arrival.max(self.listening_since);
+        let speaks = channel.alerts.holding(Concern::Silence).is_none()
+            && channel.window.newest_reading().is_some();
+        let silent = speaks.then(|| heard.plus(rules.silent_after));
+        silent.into_iter().chain(channel.alerts.next_unshelving()).min()
     }
 
     /// Does what is due by the shell's time.
@@ -184,6 +194,9 @@ impl Engine {
             outcome.events.extend(channel.alerts.unshelve(now, time));
             self.tell(place, outcome);
         }
+        let due = (0..self.channels.len()).filter_map(|place| self.due_of(place));
+        // What was due has been done: only what is to come is left.
+        self.due = due.filter(|due| *due > now).min();
     }
 
     /// What the shell must do since the last call, in order.

@@ -21,6 +21,8 @@ pub struct Finding {
     pub cycle: CycleFound,
     /// What the window holds.
     pub window: WindowFound,
+    /// How large the deviation is now; null before there are enough points to say.
+    pub now: Option<NowFound>,
     /// The chosen curve, if there is one.
     pub curve: Option<CurveFound>,
     /// Why there is no curve.
@@ -64,6 +66,21 @@ pub struct WindowFound {
     pub age_from_d: f64,
     /// Age of the newest point, days.
     pub age_to_d: f64,
+}
+
+/// How large the deviation is at the newest point.
+#[derive(Clone, Debug, PartialEq, Serialize)]
+pub struct NowFound {
+    /// In the unit.
+    pub deviation: f64,
+    /// Lower end of its interval.
+    pub low: f64,
+    /// Upper end of its interval.
+    pub high: f64,
+    /// The interval's level.
+    pub level: f64,
+    /// `curve`, or `newest points` (their median) while no curve can be trusted.
+    pub drawn_from: &'static str,
 }
 
 /// The chosen curve.

@@ -8,7 +8,7 @@ pub const CHANNELS_MAX: usize = 10_000;
 pub const NAME_BYTES_MAX: usize = 256;
 
 /// The longest unit, bytes. A longer one is a mistake in the settings.
-pub const UNIT_BYTES_MAX: usize = 32;
+pub const UNIT_BYTES_MAX: usize = 16;
 
 /// The fewest points that a window may be set to hold: the residual battery was validated from here.
 pub const WINDOW_POINTS_MIN: usize = 60;

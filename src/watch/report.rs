@@ -5,7 +5,7 @@ use crate::watch::alert::Kind;
 use crate::watch::budget::NEAR;
 use crate::watch::channel::{Channel, Context, KnownFrom, Refit};
 use crate::watch::finding::{
-    CurveFound, CycleFound, Decision, Finding, ForecastFound, OtherFound, ReachFound,
+    CurveFound, CycleFound, Decision, Finding, ForecastFound, NowFound, OtherFound, ReachFound,
     StructureFound, ToleranceFound, Verdict, WindowFound,
 };
 use crate::watch::limits::{POINTS_TO_EXAMINE, POINTS_TO_FIT};
@@ -54,6 +54,7 @@ pub fn finding(channel: &Channel, context: &Context<'_>) -> Finding {
             age_from_d: oldest.days_since(cycle.age_zero),
             age_to_d: newest.days_since(cycle.age_zero),
         },
+        now: now_found(channel),
         curve: refit.and_then(curve_found),
         no_curve: no_curve_words(channel),
         structure: structure_found(channel),
@@ -231,13 +232,22 @@ fn tolerance_found(channel: &Channel, rules: &WatchSettings) -> Option<Tolerance
     Some(ToleranceFound { limit, decision, within_until })
 }
 
+fn now_found(channel: &Channel) -> Option<NowFound> {
+    let (deviation, guard) = deviation_now(channel)?;
+    let drawn_from = if by_the_curve(channel).is_some() { "curve" } else { "newest points" };
+    let (low, high) = (deviation - guard, deviation + guard);
+    Some(NowFound { deviation, low, high, level: 0.95, drawn_from })
+}
+
+fn by_the_curve(channel: &Channel) -> Option<Interval> {
+    let trusted = channel.residuals.incident().is_none();
+    channel.refit.as_ref().filter(|_| trusted).and_then(|refit| refit.said.now)
+}
+
 /// The deviation now and its guard band: by the curve where it can be trusted, else by the newest
 /// points themselves. None before there are enough points for either.
 pub fn deviation_now(channel: &Channel) -> Option<Interval> {
-    let trusted = channel.residuals.incident().is_none();
-    if let Some(now) = channel.refit.as_ref().and_then(|refit| refit.said.now)
-        && trusted
-    {
+    if let Some(now) = by_the_curve(channel) {
         return Some(now);
     }
     let points = channel.window.points();

@@ -47,6 +47,21 @@ fn digits_after_point(magnitude: f64) -> usize {
     (2.0 - magnitude.log10().floor()).clamp(0.0, 6.0) as usize
 }
 
+/// Writes values that share a half width of uncertainty: the half width with two significant digits,
+/// the values to the same decimal place (JCGM 100:2008, 7.2.6; from memory).
+///
+/// # Outcomes
+/// The half width, then each value with its sign.
+pub fn with_guard<const N: usize>(half: f64, values: [f64; N]) -> (String, [String; N]) {
+    let usual = 1e-9 * values.iter().fold(0.0_f64, |most, v| most.max(v.abs()));
+    if !(1e-4..1e6).contains(&half) || half < usual {
+        return (number(half, false), values.map(|value| number(value, true)));
+    }
+    let places = digits_after_point(half).saturating_sub(1);
+    let half = format!("{half:.places$}");
+    (half, values.map(|value| format!("{value:+.places$}")))
+}
+
 /// Writes days: whole ones from ten up, one decimal below.
 pub fn days(value: f64) -> String {
     if value >= 10.0 { format!("{value:.0} d") } else { format!("{value:.1} d") }
@@ -137,19 +152,16 @@ pub fn tolerance_ahead(
     within_until: Option<EventTime>,
 ) -> Words {
     let (value, low, high) = forecast;
+    let (_, [value, low, high]) = with_guard((high - low) / 2.0, [value, low, high]);
     let until = within_until.map_or_else(
         || "it cannot be said to stay inside from now on".to_owned(),
         |t| format!("inside with its whole interval only until about {}", minute(t)),
     );
     Words {
         says: format!(
-            "By {} the deviation is forecast at {} {unit} (95 % interval {} to {}), outside the \
-             tolerance of ±{} {unit}; {until}.",
+            "By {} the deviation is forecast at {value} {unit} (95 % interval {low} to {high}), \
+             outside the tolerance of ±{limit} {unit}; {until}.",
             minute(asked),
-            number(value, true),
-            number(low, true),
-            number(high, true),
-            number(limit, false)
         ),
         check_first: list(&["Bring the next calibration forward.", "Have a spare ready."]),
     }
@@ -157,12 +169,11 @@ pub fn tolerance_ahead(
 
 /// The deviation is outside the tolerance now.
 pub fn out_of_tolerance(value: f64, guard: f64, limit: f64, unit: &str) -> Words {
+    let (guard, [value]) = with_guard(guard, [value]);
     Words {
         says: format!(
-            "The deviation is {} {unit} (±{}) now, outside the tolerance of ±{} {unit}.",
-            number(value, true),
-            number(guard, false),
-            number(limit, false)
+            "The deviation is {value} {unit} (±{guard}) now, outside the tolerance of ±{limit} \
+             {unit}.",
         ),
         check_first: list(&[
             "Confirm with a reference.",
@@ -235,6 +246,14 @@ mod tests {
         ] {
             assert_eq!(number(value, signed), text);
         }
+    }
+
+    #[test]
+    fn a_value_is_written_as_far_as_its_uncertainty_reaches() {
+        let (half, [value, low]) = with_guard(0.004_82, [0.200_31, -0.195_49]);
+        assert_eq!((half.as_str(), value.as_str(), low.as_str()), ("0.0048", "+0.2003", "-0.1955"));
+        assert_eq!(with_guard(12.3, [456.7]), ("12".to_owned(), ["+457".to_owned()]));
+        assert_eq!(with_guard(0.0, [4.5]), ("0".to_owned(), ["+4.50".to_owned()]));
     }
 
     #[test]

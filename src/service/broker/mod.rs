@@ -6,13 +6,14 @@
 //! can be acknowledged or sent on a new one. What must survive a connection is kept elsewhere: readings
 //! by the broker's session, alerts by the outbox.
 
+pub mod guest;
 pub mod inbound;
 pub mod inside;
 pub mod outbound;
 mod reason;
 
 use crate::service::clock::Stopwatch;
-use crate::service::settings::Secret;
+use crate::service::settings::{BrokerSection, Secret};
 use rumqttc::v5::MqttOptions;
 use std::time::Duration;
 
@@ -49,6 +50,17 @@ pub struct BrokerSettings {
 }
 
 impl BrokerSettings {
+    /// How to reach the broker of these settings.
+    pub fn of(section: &BrokerSection) -> BrokerSettings {
+        BrokerSettings {
+            host: section.host.clone(),
+            port: section.port,
+            client_id: section.client_id.clone(),
+            username: section.username.clone(),
+            password: section.password.clone(),
+        }
+    }
+
     fn options(&self, suffix: &str) -> MqttOptions {
         let id = format!("{}-{suffix}", self.client_id);
         let mut options = MqttOptions::new(id, &self.host, self.port);

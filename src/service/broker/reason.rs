@@ -1,5 +1,6 @@
 //! Plain words for what brokers and networks answer.
 
+use rumqttc::v5::mqttbytes::QoS;
 use rumqttc::v5::mqttbytes::v5::{
     ConnectReturnCode, DisconnectReasonCode, PubAckReason, SubscribeReasonCode,
 };
@@ -83,7 +84,11 @@ fn of_state(error: &StateError) -> String {
 pub fn of_subscription(code: SubscribeReasonCode) -> Option<String> {
     use SubscribeReasonCode as Code;
     Some(match code {
-        Code::Success(_) => return None,
+        Code::Success(QoS::AtLeastOnce | QoS::ExactlyOnce) => return None,
+        Code::Success(QoS::AtMostOnce) => {
+            "granted without acknowledgement (QoS 0): readings could be lost without a word"
+                .to_owned()
+        }
         Code::NotAuthorized => "not authorised: check the broker's access list".to_owned(),
         Code::TopicFilterInvalid => "the broker does not accept the filter".to_owned(),
         Code::QuotaExceeded => "the broker's quota is exceeded".to_owned(),

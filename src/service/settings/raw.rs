@@ -38,8 +38,8 @@ pub const WINDOW_POINTS_MIN: usize = 60;
 pub const WINDOW_POINTS_MAX: usize = 4096;
 /// Most watches in one file.
 pub const WATCHES_MAX: usize = 256;
-/// Longest unit, bytes.
-pub const UNIT_BYTES_MAX: usize = 16;
+/// Longest unit, bytes: the engine knows it too.
+pub use crate::watch::limits::UNIT_BYTES_MAX;
 /// Longest site name, bytes.
 pub const SITE_BYTES_MAX: usize = 64;
 /// Longest client id and user name, bytes.

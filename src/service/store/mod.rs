@@ -4,9 +4,11 @@
 //! A reading is durable when [`Store::append`] has returned: WAL with `synchronous=FULL`, both read
 //! back, the directory synced once after the file was made. One process has the store open at a time.
 
+mod probe;
 mod schema;
 mod writer;
 
+pub use probe::probe;
 pub use writer::{Writer, WriterGone};
 
 use rusqlite::{Connection, OptionalExtension, params};
