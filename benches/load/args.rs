@@ -11,22 +11,38 @@ pub struct Args {
     pub seconds: u64,
     /// When the daemon is killed, seconds after the first reading.
     pub kill_at: Option<u64>,
+    /// Event time from the first to the last round of readings, hours.
+    pub hours: u64,
     /// Seed of all noise.
     pub seed: u64,
+    /// Leave the run's folder behind.
+    pub keep: bool,
 }
 
 /// How to call it.
 pub const USAGE: &str = "cargo bench --bench load -- [--channels 1000] [--rate 5000] \
-                         [--seconds 60] [--kill-at S] [--seed N]";
+                         [--seconds 60] [--kill-at S] [--hours 100] [--seed N] [--keep]";
 
 impl Args {
     /// Reads the options; the error is one sentence for the user.
     pub fn read(words: impl Iterator<Item = String>) -> Result<Args, String> {
-        let mut args = Args { channels: 1000, rate: 5000, seconds: 60, kill_at: None, seed: 4107 };
+        let mut args = Args {
+            channels: 1000,
+            rate: 5000,
+            seconds: 60,
+            kill_at: None,
+            hours: 100,
+            seed: 4107,
+            keep: false,
+        };
         let mut words = words;
         while let Some(word) = words.next() {
             // `cargo bench` adds this one to every bench program.
             if word == "--bench" {
+                continue;
+            }
+            if word == "--keep" {
+                args.keep = true;
                 continue;
             }
             let value = words
@@ -38,6 +54,7 @@ impl Args {
                 "--rate" => args.rate = value,
                 "--seconds" => args.seconds = value,
                 "--kill-at" => args.kill_at = Some(value),
+                "--hours" => args.hours = value,
                 "--seed" => args.seed = value,
                 _ => return Err(format!("{word} is no option; usage: {USAGE}")),
             }
@@ -49,6 +66,11 @@ impl Args {
         in_range("--channels", args.channels as u64, 100_000)?;
         in_range("--rate", args.rate, 100_000)?;
         in_range("--seconds", args.seconds, 3600)?;
+        // Below, no channel has the points that residuals need to be examined and a few more for the
+        // knock to be seen; above, the window's span would end.
+        if !(90..=2000).contains(&args.hours) {
+            return Err(format!("--hours must be 90 to 2000, not {}", args.hours));
+        }
         if let Some(at) = args.kill_at {
             in_range("--kill-at", at, args.seconds)?;
         }

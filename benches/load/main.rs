@@ -51,19 +51,19 @@ fn main() -> ExitCode {
         }
     };
     introduce(&args, &plant);
-    match measure(&args, &plant, home.path()) {
-        Ok(0) => ExitCode::SUCCESS,
-        Ok(failed) => {
-            println!("{failed} claims fail");
-            log_tail(home.path());
-            ExitCode::FAILURE
-        }
-        Err(why) => {
-            println!("given up: {why}");
-            log_tail(home.path());
-            ExitCode::FAILURE
-        }
+    let trouble = match measure(&args, &plant, home.path()) {
+        Ok(0) => None,
+        Ok(failed) => Some(format!("{failed} claims fail")),
+        Err(why) => Some(format!("given up: {why}")),
+    };
+    if let Some(trouble) = &trouble {
+        println!("{trouble}");
+        log_tail(home.path());
     }
+    if args.keep {
+        println!("kept       {}", home.keep().display());
+    }
+    if trouble.is_none() { ExitCode::SUCCESS } else { ExitCode::FAILURE }
 }
 
 fn introduce(args: &Args, plant: &Plant) {
@@ -87,10 +87,12 @@ fn introduce(args: &Args, plant: &Plant) {
         plant.knocked.len(),
     );
     println!(
-        "event time {} s from one reading of a channel to the next, refit every {REFIT_EVERY}: about \
-         {} refits a second on average; all channels began together, so their refits come together",
+        "event time {:.0} s from one reading of a channel to the next, {} h in all: one point an hour, \
+         refit every {REFIT_EVERY}, about {:.0} refits a second on average; all channels begin \
+         together, so their refits come together",
         plant.step_us as f64 / 1e6,
-        plant.channels as u64 * 4 / args.seconds,
+        args.hours,
+        plant.channels as f64 * args.hours as f64 / 24.0 / args.seconds as f64,
     );
 }
 
@@ -132,7 +134,7 @@ fn tell(args: &Args, plant: &Plant, figures: &Figures) {
     );
     println!(
         "lag        journal complete {:.2} s after the last reading, outbox empty {:.2} s later; at \
-         most {} readings behind",
+         most {} readings behind (looked at once a second)",
         catching_up.as_secs_f64(),
         emptying.as_secs_f64(),
         meter.behind_max

@@ -1,8 +1,8 @@
 //! The made-up plant: its settings, and the same readings for the same seed every time.
 //!
 //! Every channel drifts by a logarithm under autoregressive noise; one in a hundred gets a knock.
-//! All readings of a run span the same 100 hours of event time, however many there are: the refits
-//! and the looks at residuals of a channel do not depend on rate and duration.
+//! All readings of a run span the same event time, however many there are: the refits and the looks
+//! at residuals of a channel do not depend on rate and duration.
 
 use crate::args::Args;
 use crate::noise::{Noise, Random};
@@ -11,10 +11,6 @@ use std::fmt::Write as _;
 
 /// The site's name in the settings.
 pub const SITE: &str = "load";
-/// Hours of event time between the first and the last round of readings.
-const SPAN_H: u64 = 100;
-/// The window's bin is an hour: fewer rounds would leave bins empty.
-const ROUNDS_MIN: u64 = SPAN_H;
 /// 2025-01-01T00:00:00Z: past on every machine, since readings from the future are refused.
 const START_US: i64 = 1_735_689_600_000_000;
 /// One channel in so many is knocked.
@@ -28,7 +24,7 @@ const KNOCK_BAR: f64 = 0.08;
 const NOISE: (f64, f64) = (0.01, 0.3);
 /// Drift, bar per natural logarithm of the age in days.
 const DRIFT_BAR: f64 = 0.02;
-/// How often the settings ask for a refit; four of them fit into the span.
+/// How often the settings ask for a refit.
 pub const REFIT_EVERY: &str = "1d";
 
 /// What is published, and how the daemon is told to look at it.
@@ -60,13 +56,15 @@ impl Plant {
     /// The plant that these options describe; the error is one sentence for the user.
     pub fn new(args: &Args) -> Result<Plant, String> {
         let rounds = args.readings() / args.channels as u64;
-        if rounds < ROUNDS_MIN {
+        // The window's bin is an hour: fewer rounds would leave bins empty.
+        if rounds < args.hours {
             return Err(format!(
-                "rate × seconds / channels is {rounds}; at least {ROUNDS_MIN} readings a channel are \
-                 needed for alerts to arise"
+                "rate × seconds / channels is {rounds}; at least one reading an hour is needed, \
+                 {} in all",
+                args.hours
             ));
         }
-        let span_us = i64::try_from(SPAN_H * 3_600_000_000).expect("a constant that fits");
+        let span_us = i64::try_from(args.hours * 3_600_000_000).expect("at most 2000 hours");
         let step_us = span_us / i64::try_from(rounds).expect("at most 360 million readings");
         let mut random = Random::named(args.seed, "knocks");
         let mut knocked = BTreeSet::new();

@@ -4,7 +4,7 @@ use crate::journal::{Journal, Row};
 use crate::link::Seen;
 use crate::plant::{Plant, name};
 use serde_json::Value;
-use std::collections::{BTreeMap, HashMap};
+use std::collections::{BTreeMap, BTreeSet, HashMap};
 use std::path::Path;
 use std::process::{Command, Stdio};
 
@@ -82,11 +82,19 @@ pub fn alerts_came(plant: &Plant, journal: &Journal, seen: &Seen, verdict: &mut 
     for wrong in seen.wrong.iter().take(DIFFERENCES_MAX) {
         println!("          {wrong}");
     }
-    let told = |channel: &usize| logged.values().any(|text| text.contains(&name(*channel)));
-    let found = plant.knocked.iter().filter(|c| told(c)).count();
+    let named = |text: &str| {
+        let json: Value = serde_json::from_str(text).unwrap_or_default();
+        json["data"]["channel"].as_str().unwrap_or_default().to_owned()
+    };
+    let told: BTreeSet<String> = logged.values().map(|text| named(text)).collect();
+    let found = plant.knocked.iter().filter(|&&channel| told.contains(&name(channel))).count();
     verdict.claim(
         found > 0,
-        &format!("alerts arose: in {found} of the {} knocked channels", plant.knocked.len()),
+        &format!(
+            "alerts arose: in {found} of the {} knocked channels, in {} others",
+            plant.knocked.len(),
+            told.len() - found
+        ),
     );
 }
 
