@@ -20,7 +20,7 @@ pub struct Args {
 }
 
 /// How to call it.
-pub const USAGE: &str = "cargo bench --bench load -- [--channels 1000] [--rate 5000] \
+pub const USAGE: &str = "usage: cargo bench --bench load -- [--channels 1000] [--rate 5000] \
                          [--seconds 60] [--kill-at S] [--hours 100] [--seed N] [--keep]";
 
 impl Args {
@@ -48,7 +48,7 @@ impl Args {
             let value = words
                 .next()
                 .and_then(|text| text.parse::<u64>().ok())
-                .ok_or_else(|| format!("{word} needs a whole number; usage: {USAGE}"))?;
+                .ok_or_else(|| format!("{word} needs a whole number; {USAGE}"))?;
             match word.as_str() {
                 "--channels" => args.channels = usize::try_from(value).unwrap_or(usize::MAX),
                 "--rate" => args.rate = value,
@@ -56,7 +56,7 @@ impl Args {
                 "--kill-at" => args.kill_at = Some(value),
                 "--hours" => args.hours = value,
                 "--seed" => args.seed = value,
-                _ => return Err(format!("{word} is no option; usage: {USAGE}")),
+                _ => return Err(format!("{word} is no option; {USAGE}")),
             }
         }
         let in_range = |name: &str, value: u64, max: u64| {

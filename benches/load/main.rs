@@ -34,6 +34,11 @@ const RATE_PART_MIN: f64 = 0.95;
 const LOG_LINES: usize = 15;
 
 fn main() -> ExitCode {
+    // `cargo bench` says so; `cargo test --all-targets` starts bench programs too, but to try them.
+    if !std::env::args().any(|word| word == "--bench") {
+        println!("a measurement, not a test; {}", args::USAGE);
+        return ExitCode::SUCCESS;
+    }
     let (args, plant) = match Args::read(std::env::args().skip(1))
         .and_then(|args| Plant::new(&args).map(|plant| (args, plant)))
     {

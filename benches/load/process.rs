@@ -8,7 +8,7 @@ use std::time::{Duration, Instant};
 
 /// Pause between two looks at something awaited.
 pub const LOOK_AGAIN: Duration = Duration::from_millis(20);
-/// Where a broker may lie that is not in the search path of ordinary users.
+/// Where the broker lies on systems whose users have no system programs in their search path.
 const MOSQUITTO_ELSEWHERE: &str = "/usr/sbin/mosquitto";
 
 /// A child process that does not outlive its handle.
@@ -79,11 +79,11 @@ impl Process {
             data.display()
         );
         fs::write(&settings, text).map_err(told)?;
-        let program = if Path::new(MOSQUITTO_ELSEWHERE).exists() {
-            PathBuf::from(MOSQUITTO_ELSEWHERE)
-        } else {
-            PathBuf::from("mosquitto")
-        };
+        let path = std::env::var_os("PATH").unwrap_or_default();
+        let program = std::env::split_paths(&path)
+            .map(|folder| folder.join("mosquitto"))
+            .find(|program| program.exists())
+            .unwrap_or_else(|| PathBuf::from(MOSQUITTO_ELSEWHERE));
         let mut command = Command::new(program);
         command.arg("-c").arg(&settings);
         let mut broker = Process::start("mosquitto", &mut command, &folder.join("mosquitto.log"))?;

@@ -110,8 +110,9 @@ pub fn replay_agrees(plant: &Plant, folder: &Path, seen: &Seen, verdict: &mut Ve
         .iter()
         .filter_map(|(id, body)| match received.get(id) {
             None => Some(format!("{id} only in the replay: {body}")),
-            Some(got) if got != body => Some(format!("{id}: {got}\n          replay: {body}")),
-            Some(_) => None,
+            Some(got) => {
+                difference(got, body, "").map(|where_and_what| format!("{id}{where_and_what}"))
+            }
         })
         .chain(
             received
@@ -156,6 +157,17 @@ fn replay(plant: &Plant, folder: &Path) -> Result<BTreeMap<String, Value>, Strin
             Ok((id, body))
         })
         .collect()
+}
+
+/// Where two bodies differ first: path, value received, value of the replay.
+fn difference(got: &Value, expected: &Value, path: &str) -> Option<String> {
+    match (got, expected) {
+        (Value::Object(a), Value::Object(b)) if a.keys().eq(b.keys()) => {
+            a.iter().find_map(|(key, value)| difference(value, &b[key], &format!("{path}/{key}")))
+        }
+        _ if got == expected => None,
+        _ => Some(format!("{path}: {got}, in the replay {expected}")),
+    }
 }
 
 /// An event without the time at which it was recorded.
