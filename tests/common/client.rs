@@ -1,0 +1,308 @@
+//! Clients of the broker, packet by packet over blocking sockets: one that publishes at QoS 1 and
+//! waits for every acknowledgement, one that collects what comes under a filter. Both outlive a
+//! restart of the broker.
+
+use crate::common::broker::{DEADLINE, LOOK_AGAIN};
+use bytes::BytesMut;
+use rumqttc::v5::mqttbytes::v5::{
+    ConnAck, Connect, ConnectProperties, Filter, Packet, PubAck, PubAckReason, Publish, Subscribe,
+};
+use rumqttc::v5::mqttbytes::{Error, QoS};
+use std::collections::BTreeMap;
+use std::io::{ErrorKind, Read, Write};
+use std::net::TcpStream;
+use std::sync::atomic::{AtomicBool, AtomicU32, Ordering};
+use std::sync::{Arc, Condvar, Mutex};
+use std::time::{Duration, Instant};
+
+/// Messages published without acknowledgement at a time.
+const IN_FLIGHT_MAX: usize = 100;
+/// How long the broker keeps a client's session, seconds.
+const SESSION_S: u32 = 600;
+/// A read that brings nothing ends after this, so that a stop is noticed.
+const READ_TURN: Duration = Duration::from_millis(100);
+
+/// Why there is no packet.
+enum Absent {
+    /// Nothing came for a while.
+    Yet,
+    /// The connection is gone.
+    Gone,
+}
+
+struct Connection {
+    stream: TcpStream,
+    input: BytesMut,
+    session_present: bool,
+}
+
+impl Connection {
+    /// Connects; None where nobody answers.
+    fn open(port: u16, client_id: &str) -> Option<Connection> {
+        let stream = TcpStream::connect(("127.0.0.1", port)).ok()?;
+        stream.set_nodelay(true).ok()?;
+        stream.set_read_timeout(Some(READ_TURN)).ok()?;
+        let mut connection = Connection { stream, input: BytesMut::new(), session_present: false };
+        let mut properties = ConnectProperties::new();
+        properties.session_expiry_interval = Some(SESSION_S);
+        let connect = Connect {
+            keep_alive: 0,
+            client_id: client_id.to_owned(),
+            clean_start: false,
+            properties: Some(properties),
+        };
+        connection.send(Packet::Connect(connect, None, None)).ok()?;
+        let start = Instant::now();
+        while start.elapsed() < DEADLINE {
+            match connection.receive() {
+                Ok(Packet::ConnAck(ConnAck { session_present, .. })) => {
+                    connection.session_present = session_present;
+                    return Some(connection);
+                }
+                Ok(other) => panic!("CONNACK was due, not {other:?}"),
+                Err(Absent::Yet) => {}
+                Err(Absent::Gone) => return None,
+            }
+        }
+        None
+    }
+
+    fn send(&mut self, packet: Packet) -> std::io::Result<()> {
+        let mut output = BytesMut::new();
+        packet.write(&mut output, None).expect("a packet that can be written");
+        self.stream.write_all(&output)
+    }
+
+    fn receive(&mut self) -> Result<Packet, Absent> {
+        let mut buffer = [0; 8192];
+        loop {
+            match Packet::read(&mut self.input, None) {
+                Ok(packet) => return Ok(packet),
+                Err(Error::InsufficientBytes(_)) => {}
+                Err(error) => panic!("the broker sent what is no packet: {error}"),
+            }
+            match self.stream.read(&mut buffer) {
+                Ok(0) => return Err(Absent::Gone),
+                Ok(got) => self.input.extend_from_slice(&buffer[..got]),
+                Err(error)
+                    if matches!(error.kind(), ErrorKind::WouldBlock | ErrorKind::TimedOut) =>
+                {
+                    return Err(Absent::Yet);
+                }
+                Err(_) => return Err(Absent::Gone),
+            }
+        }
+    }
+}
+
+/// A message to publish, or one that came.
+#[derive(Clone, Debug, PartialEq)]
+pub struct Message {
+    pub topic: String,
+    pub payload: Vec<u8>,
+    pub retained: bool,
+    pub content_type: Option<String>,
+}
+
+impl Message {
+    pub fn new(topic: impl Into<String>, payload: impl Into<Vec<u8>>) -> Message {
+        Message {
+            topic: topic.into(),
+            payload: payload.into(),
+            retained: false,
+            content_type: None,
+        }
+    }
+
+    pub fn retained(self) -> Message {
+        Message { retained: true, ..self }
+    }
+
+    /// The payload as JSON; null where it is none.
+    pub fn json(&self) -> serde_json::Value {
+        serde_json::from_slice(&self.payload).unwrap_or_default()
+    }
+}
+
+fn client_id(kind: &str) -> String {
+    static MADE: AtomicU32 = AtomicU32::new(0);
+    format!("{kind}-{}", MADE.fetch_add(1, Ordering::Relaxed))
+}
+
+/// Publishes at QoS 1.
+pub struct Publisher {
+    port: u16,
+    client_id: String,
+    connection: Option<Connection>,
+}
+
+impl Publisher {
+    pub fn new(port: u16) -> Publisher {
+        Publisher { port, client_id: client_id("publisher"), connection: None }
+    }
+
+    /// Publishes in order and returns once the broker has acknowledged every message. When the
+    /// connection breaks, what is not acknowledged is sent again, in order.
+    pub fn publish(&mut self, messages: &[Message]) {
+        let mut done = 0;
+        let mut progress = Instant::now();
+        while done < messages.len() {
+            let before = done;
+            self.publish_some(messages, &mut done);
+            if done > before {
+                progress = Instant::now();
+            }
+            assert!(progress.elapsed() < DEADLINE, "the broker acknowledges nothing");
+            if done < messages.len() {
+                std::thread::sleep(LOOK_AGAIN);
+            }
+        }
+    }
+
+    /// Publishes from `done` on over one connection; `done` counts what is acknowledged in a row.
+    fn publish_some(&mut self, messages: &[Message], done: &mut usize) {
+        let mut connection = match self.connection.take() {
+            Some(connection) => connection,
+            None => match Connection::open(self.port, &self.client_id) {
+                Some(connection) => connection,
+                None => return,
+            },
+        };
+        let mut next = *done;
+        let mut open: BTreeMap<u16, usize> = BTreeMap::new();
+        let start = Instant::now();
+        while *done < messages.len() && start.elapsed() < DEADLINE {
+            while next < messages.len() && open.len() < IN_FLIGHT_MAX {
+                let Message { topic, payload, retained, .. } = &messages[next];
+                let mut publish = Publish::new(topic, QoS::AtLeastOnce, payload.clone(), None);
+                publish.retain = *retained;
+                publish.pkid = u16::try_from(next % 60_000).expect("below 60,000") + 1;
+                open.insert(publish.pkid, next);
+                if connection.send(Packet::Publish(publish)).is_err() {
+                    return;
+                }
+                next += 1;
+            }
+            match connection.receive() {
+                Ok(Packet::PubAck(answer)) => {
+                    open.remove(&answer.pkid);
+                    *done = open.values().min().copied().unwrap_or(next);
+                }
+                Ok(Packet::Disconnect(_)) | Err(Absent::Gone) => return,
+                Ok(_) | Err(Absent::Yet) => {}
+            }
+        }
+        self.connection = Some(connection);
+    }
+}
+
+#[derive(Default)]
+struct Collected {
+    messages: Mutex<Vec<Message>>,
+    subscribed: AtomicBool,
+    stopping: AtomicBool,
+    more: Condvar,
+}
+
+/// Collects everything that comes under a filter, in order.
+pub struct Collector {
+    collected: Arc<Collected>,
+    thread: Option<std::thread::JoinHandle<()>>,
+}
+
+impl Collector {
+    /// Returns once the broker has granted the subscription.
+    pub fn on(port: u16, filter: &str) -> Collector {
+        let collected: Arc<Collected> = Arc::default();
+        let shared = Arc::clone(&collected);
+        let filter = filter.to_owned();
+        let name = client_id("collector");
+        let thread = std::thread::spawn(move || {
+            while !shared.stopping.load(Ordering::SeqCst) {
+                if let Some(connection) = Connection::open(port, &name) {
+                    shared.collect(connection, &filter);
+                }
+                std::thread::sleep(LOOK_AGAIN);
+            }
+        });
+        let collector = Collector { collected, thread: Some(thread) };
+        collector.wait_for("the subscription is granted", |_| {
+            collector.collected.subscribed.load(Ordering::SeqCst).then_some(())
+        });
+        collector
+    }
+
+    /// Everything that came so far.
+    pub fn messages(&self) -> Vec<Message> {
+        self.collected.messages.lock().expect("no holder panics").clone()
+    }
+
+    /// Returns what `find` finds among the messages, as soon as it finds something.
+    pub fn wait_for<T>(&self, what: &str, mut find: impl FnMut(&[Message]) -> Option<T>) -> T {
+        let start = Instant::now();
+        let mut messages = self.collected.messages.lock().expect("no holder panics");
+        loop {
+            if let Some(found) = find(&messages) {
+                return found;
+            }
+            let left = DEADLINE.saturating_sub(start.elapsed());
+            assert!(
+                !left.is_zero(),
+                "not within {DEADLINE:?}: {what}; {} messages",
+                messages.len()
+            );
+            messages = self.collected.more.wait_timeout(messages, left).expect("no panic").0;
+        }
+    }
+}
+
+impl Drop for Collector {
+    fn drop(&mut self) {
+        self.collected.stopping.store(true, Ordering::SeqCst);
+        if let Some(thread) = self.thread.take() {
+            drop(thread.join());
+        }
+    }
+}
+
+impl Collected {
+    fn collect(&self, mut connection: Connection, filter: &str) {
+        if !connection.session_present {
+            let filters = vec![Filter::new(filter, QoS::AtLeastOnce)];
+            let subscribe = Subscribe { pkid: 1, filters, properties: None };
+            if connection.send(Packet::Subscribe(subscribe)).is_err() {
+                return;
+            }
+        }
+        while !self.stopping.load(Ordering::SeqCst) {
+            match connection.receive() {
+                Ok(Packet::SubAck(_)) => {
+                    self.subscribed.store(true, Ordering::SeqCst);
+                    self.more.notify_all();
+                }
+                Ok(Packet::Publish(publish)) => {
+                    let reason = PubAckReason::Success;
+                    let answer = PubAck { pkid: publish.pkid, reason, properties: None };
+                    self.keep(publish);
+                    if answer.pkid != 0 && connection.send(Packet::PubAck(answer)).is_err() {
+                        return;
+                    }
+                }
+                Ok(Packet::Disconnect(_)) | Err(Absent::Gone) => return,
+                Ok(_) | Err(Absent::Yet) => {}
+            }
+        }
+    }
+
+    fn keep(&self, publish: Publish) {
+        let Publish { topic, payload, retain, properties, .. } = publish;
+        let message = Message {
+            topic: String::from_utf8_lossy(&topic).into_owned(),
+            payload: payload.to_vec(),
+            retained: retain,
+            content_type: properties.and_then(|properties| properties.content_type),
+        };
+        self.messages.lock().expect("no holder panics").push(message);
+        self.more.notify_all();
+    }
+}

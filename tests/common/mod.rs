@@ -1,0 +1,7 @@
+//! The whole program from outside: a real broker, the daemon as a child process, MQTT clients.
+
+pub mod broker;
+pub mod client;
+pub mod daemon;
+pub mod history;
+pub mod store;

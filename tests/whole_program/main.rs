@@ -1,0 +1,6 @@
+//! The daemon as a whole, from outside: the program itself, a real broker, and a client beside it.
+
+#[path = "../common/mod.rs"]
+mod common;
+
+mod alike;
