@@ -21,10 +21,11 @@ CREATE TABLE journal (
 -- Derived state of one channel after journal row `upto`; crc is CRC-32 over upto and data.
 CREATE TABLE state (
   channel INTEGER PRIMARY KEY, upto INTEGER NOT NULL, crc INTEGER NOT NULL, data BLOB NOT NULL);
--- What is still to be published, oldest first.
+-- What is still to be published, oldest first. AUTOINCREMENT: a number is never used again, so that
+-- what comes after the last one handed over is new, and an acknowledgement names one message only.
 CREATE TABLE outbox (
-  id INTEGER PRIMARY KEY, topic TEXT NOT NULL, payload BLOB NOT NULL, retained INTEGER NOT NULL,
-  content_type TEXT);
+  id INTEGER PRIMARY KEY AUTOINCREMENT, topic TEXT NOT NULL, payload BLOB NOT NULL,
+  retained INTEGER NOT NULL, content_type TEXT);
 CREATE INDEX outbox_topic ON outbox (topic) WHERE retained;
 -- Every alert event ever made, for the log of alerts.
 CREATE TABLE alert (
