@@ -52,3 +52,50 @@ fn a_request_that_cannot_be_done_is_answered_with_its_reason() {
     }
     assert_eq!(daemon.terminate(), Some(0));
 }
+
+#[test]
+fn a_request_is_answered() {
+    let broker = Broker::running();
+    let site = Site::new(broker.port());
+    let daemon = Daemon::listening(&site);
+    let collector = Collector::on(broker.port(), "asfound/saltmarsh/#");
+    let mut publisher = Publisher::new(broker.port());
+    // Until the knock of the press has been found and is still open.
+    let readings = history::three_instruments(4107, 450);
+    let readings: Vec<_> = readings.into_iter().filter(|r| r.tag == "PT-4107").take(300).collect();
+    publisher.publish(&history::messages(&readings));
+    let raised = collector.wait_for("a step", |messages| {
+        messages.iter().map(Message::json).find(|e| e["type"] == "asfound.alert.raised")
+    });
+    let alert = raised["data"]["alert"].as_str().expect("an id").to_owned();
+    store::wait_for_readings(&site, 300);
+
+    let asked = json!({"alert": alert}).to_string();
+    let answer = ask(&mut publisher, &collector, "acknowledge", &asked);
+    assert_eq!(answer["done"], json!(true), "{answer}");
+    let event = event_of_type(&collector, "asfound.alert.acknowledged", &alert);
+    assert_eq!(event["data"]["state"], "acknowledged");
+
+    let again = ask(&mut publisher, &collector, "acknowledge", &asked);
+    assert_eq!(again["done"], json!(false), "{again}");
+
+    let asked = json!({"alert": alert, "for": "7d"}).to_string();
+    let answer = ask(&mut publisher, &collector, "shelve", &asked);
+    assert_eq!(answer["done"], json!(true), "{answer}");
+    let event = event_of_type(&collector, "asfound.alert.shelved", &alert);
+    assert_eq!(event["data"]["state"], "shelved");
+
+    let asked = json!({"channel": "press.PT-4107", "at": "2025-03-10T00:00:00Z",
+        "as_found": 0.2, "as_left": 0.0, "note": "made up"});
+    let answer = ask(&mut publisher, &collector, "calibrated", &asked.to_string());
+    assert_eq!(answer["done"], json!(true), "{answer}");
+    // Acknowledged before it was shelved: with the condition gone the alert is closed.
+    let event = event_of_type(&collector, "asfound.alert.cleared", &alert);
+    assert_eq!(event["data"]["state"], "normal");
+    let standing = collector.wait_for("an empty list of standing alerts", |messages| {
+        let newest = messages.iter().rfind(|m| m.topic == format!("{OWN}/standing/press.PT-4107"));
+        newest.map(Message::json).filter(|list| *list == json!([]))
+    });
+    assert_eq!(standing, json!([]));
+    assert_eq!(daemon.terminate(), Some(0));
+}
