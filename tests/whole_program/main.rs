@@ -4,4 +4,6 @@
 mod common;
 
 mod alike;
+mod intake;
+mod life;
 mod people;
