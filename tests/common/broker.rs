@@ -9,7 +9,7 @@ use tempfile::TempDir;
 /// Everything that is waited for must happen within this.
 pub const DEADLINE: Duration = Duration::from_secs(30);
 /// From one look at something that tells nobody when it happens to the next.
-pub const LOOK_AGAIN: Duration = Duration::from_millis(10);
+pub const LOOK_AGAIN: Duration = Duration::from_millis(2);
 
 /// Returns what `look` finds; panics with `what` when it finds nothing within the deadline.
 pub fn wait_until<T>(what: &str, mut look: impl FnMut() -> Option<T>) -> T {
@@ -40,13 +40,18 @@ impl Broker {
 
     /// A port and a folder, without a broker there yet.
     pub fn not_started() -> Broker {
+        Broker::with("allow_anonymous true")
+    }
+
+    /// The same, with this line about who may do what.
+    pub fn with(access: &str) -> Broker {
         let folder = TempDir::new().expect("a folder for the broker");
         // Whoever asks the system for a free port gets others first: this one stays free a while.
         let free = TcpListener::bind(("127.0.0.1", 0)).expect("a free port");
         let port = free.local_addr().expect("its number").port();
         let settings = format!(
             "listener {port} 127.0.0.1\n\
-             allow_anonymous true\n\
+             {access}\n\
              persistence true\n\
              persistence_location {}/\n\
              max_queued_messages 0\n\
@@ -87,6 +92,13 @@ impl Broker {
         let mut child = self.child.take().expect("the broker runs");
         signal("TERM", child.id());
         wait_until("the broker ends", || child.try_wait().expect("the broker's state"));
+    }
+
+    /// Ends it at once: sessions, queued and retained messages are lost.
+    pub fn crash(&mut self) {
+        let mut child = self.child.take().expect("the broker runs");
+        child.kill().expect("a process of ours");
+        child.wait().expect("the broker's state");
     }
 }
 

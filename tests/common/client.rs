@@ -3,9 +3,10 @@
 //! restart of the broker.
 
 use crate::common::broker::{DEADLINE, LOOK_AGAIN};
-use bytes::BytesMut;
+use bytes::{Bytes, BytesMut};
 use rumqttc::v5::mqttbytes::v5::{
-    ConnAck, Connect, ConnectProperties, Filter, Packet, PubAck, PubAckReason, Publish, Subscribe,
+    ConnAck, Connect, ConnectProperties, Filter, Packet, PubAck, PubAckReason, Publish,
+    PublishProperties, Subscribe,
 };
 use rumqttc::v5::mqttbytes::{Error, QoS};
 use std::collections::BTreeMap;
@@ -102,6 +103,8 @@ pub struct Message {
     pub payload: Vec<u8>,
     pub retained: bool,
     pub content_type: Option<String>,
+    pub response_topic: Option<String>,
+    pub correlation: Option<Vec<u8>>,
 }
 
 impl Message {
@@ -111,11 +114,31 @@ impl Message {
             payload: payload.into(),
             retained: false,
             content_type: None,
+            response_topic: None,
+            correlation: None,
         }
+    }
+
+    /// Asks for an answer there, with these data.
+    pub fn answer_to(self, topic: &str, correlation: &[u8]) -> Message {
+        let correlation = Some(correlation.to_vec());
+        Message { response_topic: Some(topic.to_owned()), correlation, ..self }
     }
 
     pub fn retained(self) -> Message {
         Message { retained: true, ..self }
+    }
+
+    fn packet(&self, packet_id: u16) -> Publish {
+        let properties = PublishProperties {
+            content_type: self.content_type.clone(),
+            response_topic: self.response_topic.clone(),
+            correlation_data: self.correlation.clone().map(Bytes::from),
+            ..PublishProperties::default()
+        };
+        let payload = self.payload.clone();
+        let packet = Publish::new(&self.topic, QoS::AtLeastOnce, payload, Some(properties));
+        Publish { pkid: packet_id, retain: self.retained, ..packet }
     }
 
     /// The payload as JSON; null where it is none.
@@ -173,10 +196,8 @@ impl Publisher {
         let start = Instant::now();
         while *done < messages.len() && start.elapsed() < DEADLINE {
             while next < messages.len() && open.len() < IN_FLIGHT_MAX {
-                let Message { topic, payload, retained, .. } = &messages[next];
-                let mut publish = Publish::new(topic, QoS::AtLeastOnce, payload.clone(), None);
-                publish.retain = *retained;
-                publish.pkid = u16::try_from(next % 60_000).expect("below 60,000") + 1;
+                let packet_id = u16::try_from(next % 60_000).expect("below 60,000") + 1;
+                let publish = messages[next].packet(packet_id);
                 open.insert(publish.pkid, next);
                 if connection.send(Packet::Publish(publish)).is_err() {
                     return;
@@ -296,11 +317,14 @@ impl Collected {
 
     fn keep(&self, publish: Publish) {
         let Publish { topic, payload, retain, properties, .. } = publish;
+        let properties = properties.unwrap_or_default();
         let message = Message {
             topic: String::from_utf8_lossy(&topic).into_owned(),
             payload: payload.to_vec(),
             retained: retain,
-            content_type: properties.and_then(|properties| properties.content_type),
+            content_type: properties.content_type,
+            response_topic: properties.response_topic,
+            correlation: properties.correlation_data.map(|data| data.to_vec()),
         };
         self.messages.lock().expect("no holder panics").push(message);
         self.more.notify_all();

@@ -16,6 +16,12 @@ pub struct Site {
 impl Site {
     /// A site named saltmarsh with one watch over `plant/{area}/{tag}/deviation`.
     pub fn new(broker_port: u16) -> Site {
+        let payload = r#"{ format = "json", value = "/v", time = "/ts" }"#;
+        Site::with_payload(broker_port, payload)
+    }
+
+    /// The same, whose payloads are to be read so.
+    pub fn with_payload(broker_port: u16, payload: &str) -> Site {
         Site::with_settings(&format!(
             r#"
 [site]
@@ -29,7 +35,7 @@ false_alerts_per_year = 0.5
 [[watch]]
 topic = "plant/{{area}}/{{tag}}/deviation"
 channel = "{{area}}.{{tag}}"
-payload = {{ format = "json", value = "/v", time = "/ts" }}
+payload = {payload}
 unit = "bar"
 tolerance = 4.0
 window = {{ span = "90d", points = 360 }}
@@ -112,10 +118,15 @@ impl Lines {
 
     /// The first line with `part` in it, as soon as there is one.
     pub fn wait_for(&self, part: &str) -> String {
+        self.wait_for_count(part, 1)
+    }
+
+    /// The `count`-th line with `part` in it, as soon as there is one.
+    pub fn wait_for_count(&self, part: &str, count: usize) -> String {
         let start = Instant::now();
         let mut lines = self.lines.lock().expect("no holder panics");
         loop {
-            if let Some(line) = lines.iter().find(|line| line.contains(part)) {
+            if let Some(line) = lines.iter().filter(|line| line.contains(part)).nth(count - 1) {
                 return line.clone();
             }
             let left = DEADLINE.saturating_sub(start.elapsed());

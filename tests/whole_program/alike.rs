@@ -167,16 +167,28 @@ fn live_and_replay_give_the_same_alert_events() {
 #[test]
 fn killed_in_the_middle_it_ends_where_an_uninterrupted_run_ends() {
     let mut scene = Scene::new(17);
-    let quarter = scene.messages.len() / 4;
-    let mut daemon = Daemon::listening(&scene.site);
-    for (k, part) in scene.messages.chunks(quarter).enumerate() {
-        // Half of what is published now is worked off, the other half is on its way or waits.
-        scene.publisher.publish(part);
-        let worked_off = k * quarter + part.len() / 2;
-        store::wait_for_readings(&scene.site, worked_off as i64);
-        daemon.kill();
-        daemon = Daemon::start(&scene.site);
+    let Scene { site, publisher, messages, .. } = &mut scene;
+    let mut published = 0;
+    let mut in_the_middle = 0;
+    let mut daemon = Daemon::listening(site);
+    for part in messages.chunks(messages.len().div_ceil(4)) {
+        let enough = published + 20;
+        published += part.len() as i64;
+        daemon = std::thread::scope(|threads| {
+            threads.spawn(|| publisher.publish(part));
+            // Some are worked off, some on their way, some wait at the broker, some still come.
+            store::wait_for_readings(site, enough);
+            daemon.kill();
+            let taken = store::readings(site);
+            let daemon = Daemon::listening(site);
+            let recovered = daemon.log.wait_for("recovered from the store");
+            println!("killed with {taken} of {published} in the journal; {recovered}");
+            let all_worked_off = recovered.contains("rows_replayed=0 ");
+            in_the_middle += usize::from(taken < published || !all_worked_off);
+            daemon
+        });
     }
+    assert!(in_the_middle > 0, "the daemon was never killed while it had something to do");
     scene.check();
     scene.check_kept();
     assert_eq!(daemon.terminate(), Some(0));
@@ -195,5 +207,44 @@ fn broker_restart_loses_nothing() {
     scene.publisher.publish(&scene.messages[half..]);
     scene.check();
     scene.check_kept();
+    assert_eq!(daemon.terminate(), Some(0));
+}
+
+#[test]
+fn broker_and_daemon_both_gone_lose_nothing() {
+    let mut scene = Scene::new(29);
+    let daemon = Daemon::listening(&scene.site);
+    let half = scene.messages.len() / 2;
+    scene.publisher.publish(&scene.messages[..half]);
+    store::wait_for_readings(&scene.site, half as i64 / 2);
+    scene.broker.stop();
+    daemon.kill();
+    // What it had to say waits in the store; it recovers without the broker.
+    let daemon = Daemon::start(&scene.site);
+    daemon.log.wait_for("alerts: not connected");
+    scene.broker.start();
+    scene.publisher.publish(&scene.messages[half..]);
+    scene.check();
+    scene.check_kept();
+    assert_eq!(daemon.terminate(), Some(0));
+}
+
+#[test]
+fn stopped_in_order_it_goes_on_without_working_anything_off_twice() {
+    let mut scene = Scene::new(31);
+    let Scene { site, publisher, messages, .. } = &mut scene;
+    let mut published = 0;
+    for part in messages.chunks(messages.len().div_ceil(3)) {
+        let daemon = Daemon::listening(site);
+        let recovered = daemon.log.wait_for("recovered from the store");
+        assert!(recovered.contains("rows_replayed=0 "), "{recovered}");
+        publisher.publish(part);
+        store::wait_for_readings(site, published + 20);
+        published += part.len() as i64;
+        assert_eq!(daemon.terminate(), Some(0));
+        println!("stopped with {} of {published} in the journal", store::readings(site));
+    }
+    let daemon = Daemon::listening(site);
+    scene.check();
     assert_eq!(daemon.terminate(), Some(0));
 }

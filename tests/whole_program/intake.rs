@@ -136,3 +136,27 @@ fn readings_sent_while_it_is_away_are_taken_when_it_is_back() {
     check_journal(&site, &[1, 2, 3]);
     assert_eq!(daemon.terminate(), Some(0));
 }
+
+#[test]
+fn readings_without_a_time_of_their_own_are_taken_once_each_though_it_was_killed() {
+    let broker = Broker::running();
+    let site = Site::with_payload(broker.port(), r#"{ format = "number" }"#);
+    // Each value twice in a row: equal readings are still two readings.
+    let messages: Vec<Message> =
+        (0..600).map(|k| Message::new(TOPIC, format!("{}", k / 2))).collect();
+    let mut publisher = Publisher::new(broker.port());
+    let daemon = Daemon::listening(&site);
+    let daemon = std::thread::scope(|threads| {
+        threads.spawn(|| publisher.publish(&messages));
+        store::wait_for_readings(&site, 50);
+        daemon.kill();
+        Daemon::listening(&site)
+    });
+    store::wait_for_readings(&site, messages.len() as i64);
+    let counts = end(daemon);
+    println!("{counts}");
+    let journal = store::readings_of(&site, CHANNEL);
+    let values: Vec<String> = journal.iter().map(|(_, value)| value.to_string()).collect();
+    let sent: Vec<String> = (0..600).map(|k| (k / 2).to_string()).collect();
+    assert_eq!(values, sent);
+}

@@ -1,4 +1,4 @@
-//! Beginning and end: without a broker, with wrong settings, twice on one store, and how it goes.
+//! Beginning and end: what others see of them, wrong settings, two daemons on one store.
 
 use crate::common::broker::Broker;
 use crate::common::client::{Collector, Message, Publisher};
@@ -27,31 +27,6 @@ fn next_state(collector: &Collector, seen: &mut usize, state: &str) -> Value {
         *seen += place + 1;
         Some(messages[*seen - 1].json())
     })
-}
-
-#[test]
-fn absent_broker_is_waited_for() {
-    let mut broker = Broker::not_started();
-    let site = Site::new(broker.port());
-    let daemon = Daemon::start(&site);
-    let said = daemon.log.wait_for("readings: not connected");
-    assert!(said.contains("nothing listens there (connection refused)"), "{said}");
-    assert!(said.contains("is the broker running, is the port right?"), "{said}");
-    assert!(said.contains("next attempt in "), "{said}");
-    broker.start();
-    daemon.log.wait_for("readings: subscribed");
-    Publisher::new(broker.port()).publish(&readings(1));
-    store::wait_for_readings(&site, 1);
-    assert_eq!(daemon.terminate(), Some(0));
-}
-
-#[test]
-fn without_a_broker_it_still_ends_in_order() {
-    let broker = Broker::not_started();
-    let site = Site::new(broker.port());
-    let daemon = Daemon::start(&site);
-    daemon.log.wait_for("readings: not connected");
-    assert_eq!(daemon.terminate(), Some(0));
 }
 
 #[test]

@@ -6,4 +6,5 @@ mod common;
 mod alike;
 mod intake;
 mod life;
+mod link;
 mod people;

@@ -79,6 +79,12 @@ fn a_request_is_answered() {
     let again = ask(&mut publisher, &collector, "acknowledge", &asked);
     assert_eq!(again["done"], json!(false), "{again}");
 
+    let asked = json!({"alert": alert, "for": "1s"}).to_string();
+    let answer = ask(&mut publisher, &collector, "shelve", &asked);
+    assert_eq!(answer["done"], json!(true), "{answer}");
+    let event = event_of_type(&collector, "asfound.alert.unshelved", &alert);
+    assert_eq!(event["data"]["state"], "acknowledged");
+
     let asked = json!({"alert": alert, "for": "7d"}).to_string();
     let answer = ask(&mut publisher, &collector, "shelve", &asked);
     assert_eq!(answer["done"], json!(true), "{answer}");
@@ -98,4 +104,21 @@ fn a_request_is_answered() {
     });
     assert_eq!(standing, json!([]));
     assert_eq!(daemon.terminate(), Some(0));
+}
+
+#[test]
+fn the_answer_goes_where_the_request_wants_it() {
+    let broker = Broker::running();
+    let site = Site::new(broker.port());
+    let daemon = Daemon::listening(&site);
+    let collector = Collector::on(broker.port(), "#");
+    let request = Message::new(format!("{OWN}/request/dance"), "{}");
+    Publisher::new(broker.port()).publish(&[request.answer_to("answers/desk-7", b"42")]);
+    let answer = collector.wait_for("an answer", |messages| {
+        messages.iter().find(|m| m.topic == "answers/desk-7").map(Message::json)
+    });
+    assert_eq!(answer["done"], json!(false));
+    assert_eq!(daemon.terminate(), Some(0));
+    let replies = format!("{OWN}/reply/");
+    assert!(!collector.messages().iter().any(|m| m.topic.starts_with(&replies)));
 }
