@@ -3,111 +3,39 @@
 //! restart of the broker.
 
 use crate::common::broker::{DEADLINE, LOOK_AGAIN};
-use bytes::{Bytes, BytesMut};
+use crate::common::connection::{Absent, Connection};
+use bytes::Bytes;
+use rumqttc::v5::mqttbytes::QoS;
 use rumqttc::v5::mqttbytes::v5::{
-    ConnAck, Connect, ConnectProperties, Filter, Packet, PubAck, PubAckReason, Publish,
-    PublishProperties, Subscribe,
+    Filter, Packet, PubAck, PubAckReason, Publish, PublishProperties, Subscribe,
 };
-use rumqttc::v5::mqttbytes::{Error, QoS};
 use std::collections::BTreeMap;
-use std::io::{ErrorKind, Read, Write};
-use std::net::TcpStream;
 use std::sync::atomic::{AtomicBool, AtomicU32, Ordering};
 use std::sync::{Arc, Condvar, Mutex};
-use std::time::{Duration, Instant};
+use std::time::Instant;
 
 /// Messages published without acknowledgement at a time.
 const IN_FLIGHT_MAX: usize = 100;
-/// How long the broker keeps a client's session, seconds.
-const SESSION_S: u32 = 600;
-/// A read that brings nothing ends after this, so that a stop is noticed.
-const READ_TURN: Duration = Duration::from_millis(100);
-
-/// Why there is no packet.
-enum Absent {
-    /// Nothing came for a while.
-    Yet,
-    /// The connection is gone.
-    Gone,
-}
-
-struct Connection {
-    stream: TcpStream,
-    input: BytesMut,
-    session_present: bool,
-}
-
-impl Connection {
-    /// Connects; None where nobody answers.
-    fn open(port: u16, client_id: &str) -> Option<Connection> {
-        let stream = TcpStream::connect(("127.0.0.1", port)).ok()?;
-        stream.set_nodelay(true).ok()?;
-        stream.set_read_timeout(Some(READ_TURN)).ok()?;
-        let mut connection = Connection { stream, input: BytesMut::new(), session_present: false };
-        let mut properties = ConnectProperties::new();
-        properties.session_expiry_interval = Some(SESSION_S);
-        let connect = Connect {
-            keep_alive: 0,
-            client_id: client_id.to_owned(),
-            clean_start: false,
-            properties: Some(properties),
-        };
-        connection.send(Packet::Connect(connect, None, None)).ok()?;
-        let start = Instant::now();
-        while start.elapsed() < DEADLINE {
-            match connection.receive() {
-                Ok(Packet::ConnAck(ConnAck { session_present, .. })) => {
-                    connection.session_present = session_present;
-                    return Some(connection);
-                }
-                Ok(other) => panic!("CONNACK was due, not {other:?}"),
-                Err(Absent::Yet) => {}
-                Err(Absent::Gone) => return None,
-            }
-        }
-        None
-    }
-
-    fn send(&mut self, packet: Packet) -> std::io::Result<()> {
-        let mut output = BytesMut::new();
-        packet.write(&mut output, None).expect("a packet that can be written");
-        self.stream.write_all(&output)
-    }
-
-    fn receive(&mut self) -> Result<Packet, Absent> {
-        let mut buffer = [0; 8192];
-        loop {
-            match Packet::read(&mut self.input, None) {
-                Ok(packet) => return Ok(packet),
-                Err(Error::InsufficientBytes(_)) => {}
-                Err(error) => panic!("the broker sent what is no packet: {error}"),
-            }
-            match self.stream.read(&mut buffer) {
-                Ok(0) => return Err(Absent::Gone),
-                Ok(got) => self.input.extend_from_slice(&buffer[..got]),
-                Err(error)
-                    if matches!(error.kind(), ErrorKind::WouldBlock | ErrorKind::TimedOut) =>
-                {
-                    return Err(Absent::Yet);
-                }
-                Err(_) => return Err(Absent::Gone),
-            }
-        }
-    }
-}
 
 /// A message to publish, or one that came.
 #[derive(Clone, Debug, PartialEq)]
 pub struct Message {
+    /// Its topic.
     pub topic: String,
+    /// Its payload.
     pub payload: Vec<u8>,
+    /// To be kept by the broker, or kept by it from earlier.
     pub retained: bool,
+    /// The payload's media type.
     pub content_type: Option<String>,
+    /// Where an answer is wanted.
     pub response_topic: Option<String>,
+    /// What the answer shall carry to be known by.
     pub correlation: Option<Vec<u8>>,
 }
 
 impl Message {
+    /// A message that is not kept.
     pub fn new(topic: impl Into<String>, payload: impl Into<Vec<u8>>) -> Message {
         Message {
             topic: topic.into(),
@@ -125,6 +53,7 @@ impl Message {
         Message { response_topic: Some(topic.to_owned()), correlation, ..self }
     }
 
+    /// The same, to be kept by the broker.
     pub fn retained(self) -> Message {
         Message { retained: true, ..self }
     }
@@ -160,6 +89,7 @@ pub struct Publisher {
 }
 
 impl Publisher {
+    /// A publisher with a client id of its own; it connects when it has something to publish.
     pub fn new(port: u16) -> Publisher {
         Publisher { port, client_id: client_id("publisher"), connection: None }
     }

@@ -15,17 +15,23 @@ const NOISE_MEMORY: f64 = 0.3;
 /// One reading of one channel.
 #[derive(Clone, Debug, PartialEq)]
 pub struct Reading {
+    /// Where the instrument is.
     pub area: &'static str,
+    /// Its tag.
     pub tag: &'static str,
+    /// When, seconds since 1970.
     pub time_s: i64,
+    /// Deviation, bar.
     pub value: f64,
 }
 
 impl Reading {
+    /// Where it is published.
     pub fn topic(&self) -> String {
         format!("plant/{}/{}/deviation", self.area, self.tag)
     }
 
+    /// As its gateway publishes it.
     pub fn message(&self) -> Message {
         let (value, time) = (self.value, self.time());
         Message::new(self.topic(), format!(r#"{{"v":{value},"ts":"{time}"}}"#))

@@ -2,6 +2,7 @@
 
 pub mod broker;
 pub mod client;
+mod connection;
 pub mod daemon;
 pub mod history;
 pub mod store;

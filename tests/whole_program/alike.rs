@@ -119,6 +119,8 @@ impl Scene {
         for message in self.collector.messages().iter().filter(|m| is_alert(m)) {
             let logged = log.get(&id(&message.json())).map(String::as_bytes);
             assert_eq!(logged, Some(message.payload.as_slice()));
+            let media_type = message.content_type.as_deref().unwrap_or_default();
+            assert!(media_type.starts_with("application/cloudevents+json"), "{media_type}");
         }
         assert_eq!(log.len(), self.expected.len(), "events in the alert log");
     }
