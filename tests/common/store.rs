@@ -1,4 +1,5 @@
-//! A look into the daemon's store while the daemon has it open: read only, as anybody may.
+//! A look into the daemon's store while the daemon has it open: read only, as anybody may. And a
+//! hand on it, for a disk that does not answer.
 
 use crate::common::broker::wait_until;
 use crate::common::daemon::Site;
@@ -49,4 +50,16 @@ pub fn alert_log(site: &Site) -> Vec<(String, String)> {
 /// Messages that the broker has not taken yet.
 pub fn unsent(site: &Site) -> i64 {
     count(site, "SELECT count(*) FROM outbox").expect("the outbox")
+}
+
+/// While it lives, the daemon can commit nothing.
+pub struct Held {
+    _store: Connection,
+}
+
+/// Takes the store's one place for a writer.
+pub fn hold(site: &Site) -> Held {
+    let store = Connection::open(site.store().join("asfound.sqlite")).expect("the store");
+    store.execute_batch("BEGIN IMMEDIATE").expect("no other writer for a moment");
+    Held { _store: store }
 }

@@ -160,3 +160,49 @@ fn readings_without_a_time_of_their_own_are_taken_once_each_though_it_was_killed
     let sent: Vec<String> = (0..600).map(|k| (k / 2).to_string()).collect();
     assert_eq!(values, sent);
 }
+
+/// Sends readings while nothing can be committed; returns once the daemon has them and has had the
+/// time of three further messages to do something wrong with them.
+fn send_what_cannot_be_committed(publisher: &mut Publisher, daemon: &Daemon, readings: &[Message]) {
+    publisher.publish(readings);
+    for (reason, payload) in [("empty", ""), ("not-json", "{"), ("bad-quality", r#"{"v":null}"#)] {
+        publisher.publish(&[Message::new(TOPIC, payload)]);
+        daemon.log.wait_for(&format!("reason=\"{reason}\""));
+    }
+}
+
+#[test]
+fn nothing_is_acknowledged_before_it_is_committed() {
+    let broker = Broker::running();
+    let site = Site::new(broker.port());
+    let daemon = Daemon::listening(&site);
+    let mut publisher = Publisher::new(broker.port());
+    publisher.publish(&[reading(1)]);
+    store::wait_for_readings(&site, 1);
+    let held = store::hold(&site);
+    send_what_cannot_be_committed(&mut publisher, &daemon, &[reading(2), reading(3)]);
+    daemon.kill();
+    drop(held);
+    check_journal(&site, &[1]);
+    let daemon = Daemon::listening(&site);
+    store::wait_for_readings(&site, 3);
+    check_journal(&site, &[1, 2, 3]);
+    assert_eq!(daemon.terminate(), Some(0));
+}
+
+#[test]
+fn store_that_cannot_be_written_ends_it_with_1_and_loses_nothing() {
+    let broker = Broker::running();
+    let site = Site::new(broker.port());
+    let mut daemon = Daemon::listening(&site);
+    let held = store::hold(&site);
+    let mut publisher = Publisher::new(broker.port());
+    send_what_cannot_be_committed(&mut publisher, &daemon, &[reading(1), reading(2)]);
+    assert_eq!(daemon.code(), Some(1));
+    daemon.log.wait_for("nothing was acknowledged after this");
+    drop(held);
+    let daemon = Daemon::listening(&site);
+    store::wait_for_readings(&site, 2);
+    check_journal(&site, &[1, 2]);
+    assert_eq!(daemon.terminate(), Some(0));
+}
