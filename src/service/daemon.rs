@@ -30,6 +30,8 @@ const EVENTS_MAX: usize = 8192;
 const PULSE: Duration = Duration::from_secs(1);
 /// Pulses from one routine saving of states to the next.
 const PULSES_PER_ROUTINE: u32 = 5;
+/// Pulses without an answer of the store, one being due, after which the watchdog is told nothing.
+const PULSES_STOOD_MAX: u32 = 10;
 /// Messages of the outbox handed to the link at a time.
 const PUMP_MAX: i64 = 64;
 /// Unsent messages wait at most so long at a stop.
@@ -100,6 +102,8 @@ struct Daemon {
     handed: i64,
     /// Handed over, not yet taken by the broker.
     in_flight: BTreeMap<i64, ()>,
+    /// Taken by the broker, still to be struck out of the outbox.
+    done: Vec<i64>,
     more_in_outbox: bool,
     out_connected: bool,
     in_connected: bool,
@@ -107,6 +111,10 @@ struct Daemon {
     state_since: crate::watch::time::ShellTime,
     state_told: Option<String>,
     pulses: u32,
+    /// Answers of the store; the same at the last pulse; pulses since one came while one was due.
+    answers: u64,
+    answers_at_pulse: u64,
+    pulses_stood: u32,
     published: u64,
 }
 
@@ -143,6 +151,7 @@ pub async fn run(
         fetching: None,
         handed: 0,
         in_flight: BTreeMap::new(),
+        done: Vec::new(),
         more_in_outbox: true,
         out_connected: false,
         in_connected: false,
@@ -150,6 +159,9 @@ pub async fn run(
         state_since,
         state_told: None,
         pulses: 0,
+        answers: 0,
+        answers_at_pulse: 0,
+        pulses_stood: 0,
         published: 0,
     };
     daemon.desk.collect();
@@ -169,6 +181,9 @@ pub async fn run(
             && let Ok(event) = in_events.try_recv()
         {
             daemon.handle(Event::In(event))?;
+        }
+        while let Ok(event) = out_events.try_recv() {
+            daemon.handle(Event::Out(event))?;
         }
         daemon.after_turn();
         if turn.elapsed() > LONG_TURN {
@@ -214,6 +229,9 @@ impl Daemon {
     }
 
     fn handle(&mut self, event: Event) -> Result<(), DaemonError> {
+        if matches!(event, Event::Committed(_) | Event::Saved(_) | Event::Fetched(_)) {
+            self.answers += 1;
+        }
         match event {
             Event::In(event) => self.on_inbound(event),
             Event::Out(event) => self.on_outbound(event),
@@ -342,8 +360,7 @@ impl Daemon {
         }
         self.published += 1;
         self.in_flight.remove(&token);
-        // Should the store fail here, the message is sent again with the same id: no harm.
-        drop(self.writer.sent(vec![token]));
+        self.done.push(token);
         self.more_in_outbox = true;
     }
 
@@ -371,8 +388,14 @@ impl Daemon {
         self.tell_state();
         self.flood.pulse();
         // Progress, not mere life: a store that no longer answers lets the watchdog run out.
-        let arrivals = &self.desk.arrivals;
-        self.notify.alive(arrivals.journaled, self.desk.engine().overview_count());
+        let asked = self.committing.is_some() || self.saving.is_some() || self.fetching.is_some();
+        let stands = asked && self.answers == self.answers_at_pulse;
+        self.pulses_stood = if stands { self.pulses_stood + 1 } else { 0 };
+        self.answers_at_pulse = self.answers;
+        if self.pulses_stood < PULSES_STOOD_MAX {
+            let journaled = self.desk.arrivals.journaled;
+            self.notify.alive(journaled, self.desk.engine().overview_count());
+        }
     }
 
     /// Publishes the service's own state when it has changed.
@@ -413,6 +436,10 @@ impl Daemon {
                 self.saving = Some(self.writer.save(bundle));
             }
         }
+        if !self.done.is_empty() {
+            // Should the store fail here, the messages are sent again with the same ids: no harm.
+            drop(self.writer.sent(std::mem::take(&mut self.done)));
+        }
         if self.out_connected && self.more_in_outbox && self.fetching.is_none() {
             self.more_in_outbox = false;
             self.fetching = Some(self.writer.unsent_after(self.handed, PUMP_MAX));
@@ -424,8 +451,12 @@ impl Daemon {
         if self.committing.is_some() || !(due || self.waiting.len() >= BATCH_MAX) {
             return;
         }
-        self.first_waits_since = None;
-        let batch = std::mem::take(&mut self.waiting);
+        // Not more at once: refits follow the commit in the same turn, and turns shall stay short.
+        let rest = self.waiting.split_off(BATCH_MAX.min(self.waiting.len()));
+        let batch = std::mem::replace(&mut self.waiting, rest);
+        if self.waiting.is_empty() {
+            self.first_waits_since = None;
+        }
         if batch.iter().all(|(_, entry)| entry.is_none()) {
             self.inbound.acknowledge(batch.into_iter().map(|(token, _)| token).collect());
             return;

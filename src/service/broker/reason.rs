@@ -1,9 +1,9 @@
 //! Plain words for what brokers and networks answer.
 
-use rumqttc::v5::mqttbytes::QoS;
 use rumqttc::v5::mqttbytes::v5::{
     ConnectReturnCode, DisconnectReasonCode, PubAckReason, SubscribeReasonCode,
 };
+use rumqttc::v5::mqttbytes::{Error, QoS};
 use rumqttc::v5::{ConnectionError, StateError};
 use std::io::ErrorKind;
 
@@ -56,7 +56,7 @@ fn of_refusal(code: ConnectReturnCode) -> String {
 
 fn of_state(error: &StateError) -> String {
     match error {
-        StateError::Io(io) => of_io(io),
+        StateError::Io(io) | StateError::Deserialization(Error::Io(io)) => of_io(io),
         StateError::ServerDisconnect { reason_code, reason_string } => {
             let said = reason_string.as_deref().map_or(String::new(), |text| format!(" ({text})"));
             let words = match reason_code {
