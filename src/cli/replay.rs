@@ -25,7 +25,7 @@ pub struct ReplayArgs {
     /// The settings file (TOML)
     #[arg(long, value_name = "FILE")]
     pub config: PathBuf,
-    /// Readings: CSV with the columns time,channel,value[,reference,quality]; .gz welcome; - is stdin
+    /// Readings: CSV with the columns time,channel,value and optionally reference, quality; .gz welcome; - is stdin
     #[arg(value_name = "READINGS.csv")]
     pub readings: PathBuf,
     /// Print events as JSON, one a line, instead of the technician's lines

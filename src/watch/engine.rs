@@ -408,6 +408,9 @@ mod tests {
     fn silence_is_raised_by_the_shells_time_and_lowered_by_a_reading() {
         let mut engine = Engine::new(site(rules()), ShellTime(START));
         feed(&mut engine, 0, &[0.1, 0.2]);
+        // The first reading's due time has been put off by the second: a tick then finds nothing.
+        engine.tick(engine.next_due().unwrap());
+        assert!(engine.effects().is_empty());
         let due = engine.next_due().unwrap();
         assert_eq!(due, ShellTime(START + 2 * STEP_US).plus(Span::from_days(3.0)));
         engine.tick(due);

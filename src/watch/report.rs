@@ -121,22 +121,26 @@ fn structure_found(channel: &Channel) -> Vec<StructureFound> {
     }
     let standing = channel.residuals.incident();
     let date = |index: usize| channel.window.points().get(index).map(|p| p.time);
-    let entry = |kind: Kind, found: crate::drift::structure::Found, score: f64, threshold: f64| {
+    let entry = |kind: Kind, found: crate::drift::structure::Found, newest: f64, threshold: f64| {
         let incident = standing.filter(|incident| incident.kind == kind);
-        let verdict = if incident.is_some() || (score >= threshold && standing.is_none()) {
+        let verdict = if incident.is_some() || (newest >= threshold && standing.is_none()) {
             Verdict::Present
-        } else if score >= threshold - NEAR {
+        } else if newest >= threshold - NEAR {
             Verdict::Watching
         } else {
             Verdict::Absent
         };
         let shown = verdict != Verdict::Absent;
-        let (size, at) = incident.map_or((found.size, date(found.index)), |i| (i.size, Some(i.at)));
+        // What stands is told by the evidence it is named after, not by the newest look.
+        let (score, size, at) = incident
+            .map_or((found.score, found.size, date(found.index)), |i| {
+                (i.score, i.size, Some(i.at))
+            });
         StructureFound {
             kind,
             verdict,
-            statistic: Some(found.score),
-            p: Some(10f64.powf(-found.score.clamp(0.0, 300.0))),
+            statistic: Some(score),
+            p: Some(10f64.powf(-score.clamp(0.0, 300.0))),
             size: shown.then_some(size),
             at: if shown { at } else { None },
         }

@@ -2,7 +2,6 @@
 
 use super::{check, series};
 use serde_json::Value;
-use std::collections::HashSet;
 use std::fmt::Write as _;
 use std::path::Path;
 use std::process::Command;
@@ -98,28 +97,4 @@ fn replay_of_norris_finds_the_certified_line() {
         println!("{name} is {:.2} standard errors from the certified value", off / se);
         assert!(off < se, "{name}: {off} against {se}");
     }
-}
-
-#[test]
-fn standard_resistor_is_not_taken_for_a_plain_line() {
-    // NIST/SEMATECH e-Handbook of Statistical Methods, 1.4.2.7: the residuals of a line through the
-    // 1000 readings are strongly dependent. The readings are not part of this project.
-    let Some(readings) = std::env::var_os("ASFOUND_STANDARD_RESISTOR") else {
-        println!("not checked: ASFOUND_STANDARD_RESISTOR names no file, see tests/reference");
-        return;
-    };
-    let folder = tempfile::tempdir().unwrap();
-    let settings = settings(folder.path(), "ohm", "2200d", "refit_every = \"10d\"");
-    let events = replay(&settings, folder.path(), Path::new(&readings), &[]);
-    let mut ids = HashSet::new();
-    for event in &events {
-        assert_eq!(event["specversion"], "1.0", "{event}");
-        assert!(ids.insert(event["id"].as_str().expect("an id")), "{event}");
-    }
-    let of_the_residuals = |event: &&Value| {
-        event["type"] == "asfound.alert.raised"
-            && ["step", "bend", "dependence"].iter().any(|kind| event["data"]["kind"] == *kind)
-    };
-    let raised = events.iter().filter(of_the_residuals).count();
-    assert!(raised > 0, "{} events, none on the residuals", events.len());
 }

@@ -110,7 +110,7 @@ pub(super) struct RawWatch {
     pub place: Place,
     /// Its path, `watch[1]` for the first.
     pub path: String,
-    /// Topics, a whole level in braces is captured. [needed]
+    /// Topics, a whole level in braces is captured. (needed)
     pub topic: Option<Located<String>>,
     /// Name of the channel, from the captures. [default: all captures joined with `.`]
     pub channel: Option<Located<String>>,
@@ -147,7 +147,7 @@ pub(super) struct RawPayload {
     pub place: Place,
     /// Its path.
     pub path: String,
-    /// `number` or `json`. [needed]
+    /// `number` or `json`. (needed)
     pub format: Option<Located<String>>,
     /// JSON Pointer to the value. [RFC 6901; needed with `json`]
     pub value: Option<Located<String>>,
