@@ -37,7 +37,7 @@ pub struct ReplayArgs {
     /// With --json: also each look at the residuals, as {"look":{…}}
     #[arg(long, requires = "json")]
     pub scores: bool,
-    /// Stop before the first reading later than this time (RFC 3339 with offset)
+    /// Leave out readings later than this time (RFC 3339 with offset)
     #[arg(long, value_name = "TIME")]
     pub until: Option<String>,
 }
@@ -250,7 +250,7 @@ impl Replaying<'_> {
     }
 }
 
-/// One look at the residuals, as the contract spells it.
+/// One look at the residuals, as `--scores` writes it.
 fn look_json(
     channel: &str,
     at: EventTime,

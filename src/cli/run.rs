@@ -39,7 +39,7 @@ pub fn run(args: &RunArgs, environment: &Environment, err: &mut dyn Write) -> u8
         // A closed output must not stop the watch: the alert is published and stored all the same.
         drop(writeln!(std::io::stdout().lock(), "{line}"));
     });
-    match keep_watch(settings, lines, stop_signal()) {
+    match keep_watch(settings, lines) {
         Ok(summary) => {
             tracing::info!(
                 received = summary.arrivals.received,
@@ -93,14 +93,16 @@ pub fn prepare(settings: Settings, clock: Clock) -> Result<Prepared, Box<dyn std
     Ok(Prepared { desk, writer, link })
 }
 
-/// Prepares, and runs the daemon on a runtime of its own until `stop` ends.
-fn keep_watch(
-    settings: Settings,
-    lines: LineSink,
-    stop: impl Future<Output = ()>,
-) -> Result<Summary, Box<dyn std::error::Error>> {
+/// Prepares, and runs the daemon on a runtime of its own until it is told to stop.
+fn keep_watch(settings: Settings, lines: LineSink) -> Result<Summary, Box<dyn std::error::Error>> {
+    let runtime = runtime()?;
+    // Before anything else: a signal during a long recovery is an orderly stop too.
+    let stop = {
+        let _inside = runtime.enter();
+        stop_signal()
+    };
     let Prepared { desk, writer, link } = prepare(settings, Clock::System)?;
-    Ok(runtime()?.block_on(daemon::run(desk, writer, link, lines, stop))?)
+    Ok(runtime.block_on(daemon::run(desk, writer, link, lines, stop))?)
 }
 
 /// The runtime: one thread for the loop, one for what waits beside it.
@@ -112,11 +114,19 @@ pub fn runtime() -> std::io::Result<tokio::runtime::Runtime> {
         .build()
 }
 
-/// Ends with the first SIGTERM or SIGINT.
-pub async fn stop_signal() {
+/// Takes the signals in charge at once; what is returned ends with the first SIGTERM or SIGINT.
+/// To be called inside a runtime.
+pub fn stop_signal() -> impl Future<Output = ()> {
     use tokio::signal::unix::{SignalKind, signal};
     let term = signal(SignalKind::terminate());
     let interrupt = signal(SignalKind::interrupt());
+    async move { first_of(term, interrupt).await }
+}
+
+async fn first_of(
+    term: std::io::Result<tokio::signal::unix::Signal>,
+    interrupt: std::io::Result<tokio::signal::unix::Signal>,
+) {
     match (term, interrupt) {
         (Ok(mut term), Ok(mut interrupt)) => {
             tokio::select! {

@@ -11,12 +11,15 @@ use crate::service::recover::{Recovered, apply, state_bytes};
 use crate::service::request;
 use crate::service::settings::Settings;
 use crate::service::store::{Bundle, NewMessage, NewRow};
-use crate::watch::engine::Engine;
+use crate::watch::engine::{Effect, Engine};
 use crate::watch::time::{DAY_US, ShellTime};
 use std::collections::BTreeMap;
 
 /// A reading may be later than its receipt by so much: clocks differ.
 const FUTURE_MAX_US: i64 = DAY_US;
+/// The longest topic for a reply that is accepted, bytes and levels; else the reply goes to ours.
+const REPLY_TOPIC_BYTES_MAX: usize = 256;
+const REPLY_TOPIC_LEVELS_MAX: usize = 16;
 /// States saved in one transaction when nothing urgent is to be saved.
 const STATES_AT_A_TIME: usize = 256;
 
@@ -35,6 +38,8 @@ pub struct Arrival<'a> {
     pub packet_id: u16,
     /// Where a reply goes, for requests.
     pub response_topic: Option<&'a str>,
+    /// What that reply must carry.
+    pub correlation: Option<&'a [u8]>,
 }
 
 /// What to do with a message.
@@ -54,7 +59,14 @@ pub struct Entry {
     /// The watch, index into the settings.
     pub watch: usize,
     /// Where a reply goes, once done.
-    pub reply_to: Option<String>,
+    pub reply_to: Option<ReplyTo>,
+}
+
+/// Where a reply goes, and what makes the asker know it again.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct ReplyTo {
+    topic: String,
+    correlation: Option<Vec<u8>>,
 }
 
 /// Counts of what arrived, for the summary and the log.
@@ -82,6 +94,7 @@ pub struct Desk {
     /// First journal row that is not in the saved state, by channel.
     unsaved: BTreeMap<String, i64>,
     newest_row: i64,
+    subscribed_before: bool,
     told: Told,
     /// What arrived.
     pub arrivals: Arrivals,
@@ -105,6 +118,7 @@ impl Desk {
             recall: recovered.recall,
             unsaved: recovered.unsaved,
             newest_row,
+            subscribed_before: recovered.subscribed_before,
             told: Told::default(),
             arrivals: Arrivals::default(),
         }
@@ -183,9 +197,7 @@ impl Desk {
     }
 
     fn request(&mut self, verb: &str, arrival: &Arrival<'_>) -> Put {
-        let reply_to = arrival
-            .response_topic
-            .map_or_else(|| format!("{}/reply/{verb}", self.own_topics), str::to_owned);
+        let reply_to = self.reply_to(verb, arrival);
         if arrival.retained {
             // An old request that the broker keeps is nobody's wish of today.
             return Put::Nothing;
@@ -213,9 +225,23 @@ impl Desk {
         }
     }
 
-    fn reply(&mut self, topic: String, done: bool, why: &str) {
+    /// The topic that the request asks its answer on, if an answer may go there; else ours.
+    fn reply_to(&self, verb: &str, arrival: &Arrival<'_>) -> ReplyTo {
+        let asked = arrival.response_topic.filter(|topic| {
+            is_plain_topic(topic)
+                && self.router.route(topic).is_none()
+                && !topic.starts_with(&format!("{}/", self.own_topics))
+        });
+        let own = || format!("{}/reply/{verb}", self.own_topics);
+        let correlation = arrival.correlation.map(|data| data[..data.len().min(256)].to_vec());
+        ReplyTo { topic: asked.map_or_else(own, str::to_owned), correlation }
+    }
+
+    fn reply(&mut self, to: ReplyTo, done: bool, why: &str) {
+        let ReplyTo { topic, correlation } = to;
         self.told.bundle.messages.push(NewMessage {
             topic,
+            correlation,
             payload: serde_json::json!({"done": done, "why": why}).to_string().into_bytes(),
             retained: false,
             content_type: Some("application/json".to_owned()),
@@ -231,9 +257,9 @@ impl Desk {
             self.newest_row = id;
             self.unsaved.entry(row.channel.clone()).or_insert(id);
             let done = apply(&mut self.engine, id, watch, &row.channel, &row, ShellTime(row.got));
-            if let Some(topic) = reply_to {
+            if let Some(to) = reply_to {
                 let why = if done { "done" } else { "nothing to change: no such open alert" };
-                self.reply(topic, done, why);
+                self.reply(to, done, why);
             }
         }
         self.collect();
@@ -267,6 +293,24 @@ impl Desk {
         self.told.bundle.alerts.extend(told.bundle.alerts);
         self.told.changed.extend(told.changed);
         self.told.lines.extend(told.lines);
+    }
+
+    /// Tells once more, retained, the finding and the open alerts of each channel: for a broker that
+    /// has forgotten them.
+    pub fn tell_all_again(&mut self) {
+        let mut effects = Vec::new();
+        for (channel, finding) in self.engine.overview() {
+            let standing = channel.alerts.open().to_vec();
+            effects.push(Effect::Standing { channel: channel.name.clone(), open: standing });
+            effects.extend(finding.map(|finding| Effect::Finding(Box::new(finding))));
+        }
+        let told = tell(&self.engine, effects, &self.own_topics, self.now());
+        self.told.bundle.messages.extend(told.bundle.messages);
+    }
+
+    /// Whether a broker should have a session of ours from before this start.
+    pub fn subscribed_before(&self) -> bool {
+        self.subscribed_before
     }
 
     /// The technician's lines since the last call.
@@ -313,6 +357,17 @@ impl Desk {
     pub fn settings(&self) -> &Settings {
         &self.settings
     }
+}
+
+/// Whether a topic that somebody else names can be published to: a broker ends the connection over
+/// some, and a message that ends the connection would keep all others from going out.
+fn is_plain_topic(topic: &str) -> bool {
+    let levels = topic.split('/').count();
+    !topic.is_empty()
+        && topic.len() <= REPLY_TOPIC_BYTES_MAX
+        && levels <= REPLY_TOPIC_LEVELS_MAX
+        && !topic.starts_with('$')
+        && !topic.contains(|c: char| c == '+' || c == '#' || c.is_control())
 }
 
 fn not_from_the_future(decoded: Decoded, now: ShellTime) -> Result<Decoded, Refusal> {

@@ -33,6 +33,7 @@ pub fn tell(engine: &Engine, effects: Vec<Effect>, own_topics: &str, now: ShellT
                 payload: envelope::finding(&finding).into_bytes(),
                 retained: true,
                 content_type: Some(JSON.to_owned()),
+                correlation: None,
             }),
             Effect::Alert { channel, event, finding } => {
                 let around = Surroundings {
@@ -48,6 +49,7 @@ pub fn tell(engine: &Engine, effects: Vec<Effect>, own_topics: &str, now: ShellT
                     payload: text.clone().into_bytes(),
                     retained: false,
                     content_type: Some(CONTENT_TYPE.to_owned()),
+                    correlation: None,
                 });
                 told.bundle.alerts.push((event.id.clone(), channel.clone(), event.time.0, text));
                 if told.changed.last() != Some(&channel) {
@@ -59,6 +61,7 @@ pub fn tell(engine: &Engine, effects: Vec<Effect>, own_topics: &str, now: ShellT
                 payload: envelope::standing(&open).into_bytes(),
                 retained: true,
                 content_type: Some(JSON.to_owned()),
+                correlation: None,
             }),
             Effect::Looked { .. } => {}
         }

@@ -43,6 +43,8 @@ pub struct Recovered {
     pub recall: Recall,
     /// The journal row up to which each channel's state is saved; absent: not saved yet.
     pub unsaved: BTreeMap<String, i64>,
+    /// A broker should have a session of ours.
+    pub subscribed_before: bool,
     /// Rows replayed.
     pub replayed: u64,
     /// Channels of which no watch speaks any more.
@@ -79,6 +81,7 @@ pub fn recover(
         engine,
         recall: Recall::default(),
         unsaved: BTreeMap::new(),
+        subscribed_before: store.subscribed_before()?,
         replayed: 0,
         unwatched,
     };

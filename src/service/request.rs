@@ -7,6 +7,9 @@ use crate::watch::engine::{Action, Engine};
 use crate::watch::time::ShellTime;
 use serde::Deserialize;
 
+/// A calibration may lie ahead of this clock by so much: clocks differ.
+const AHEAD_MAX_US: i64 = 3_600_000_000;
+
 /// The largest request, bytes.
 const REQUEST_BYTES_MAX: usize = 4096;
 
@@ -80,7 +83,7 @@ pub fn read(
     now: ShellTime,
 ) -> Result<(String, Action), RequestFault> {
     match verb {
-        "calibrated" => calibrated(payload, engine),
+        "calibrated" => calibrated(payload, engine, now),
         "acknowledge" => {
             let asked: OfAlert = json("acknowledge", payload, ACKNOWLEDGE)?;
             let channel = channel_of(&asked.alert, engine)?;
@@ -98,12 +101,19 @@ pub fn read(
     }
 }
 
-fn calibrated(payload: &[u8], engine: &Engine) -> Result<(String, Action), RequestFault> {
+fn calibrated(
+    payload: &[u8],
+    engine: &Engine,
+    now: ShellTime,
+) -> Result<(String, Action), RequestFault> {
     let asked: Calibrated = json("calibrated", payload, CALIBRATED)?;
     let at = read_time(&asked.at)
         .map_err(|why| fault("calibrated", &format!("at: {why}"), CALIBRATED))?;
     if engine.observe(&asked.channel).is_none() {
         return Err(RequestFault::Channel { channel: Excerpt::of(&asked.channel) });
+    }
+    if at.0 > now.0.saturating_add(AHEAD_MAX_US) {
+        return Err(fault("calibrated", "at: a time that is still to come", CALIBRATED));
     }
     let Calibrated { channel, as_found, as_left, note, .. } = asked;
     let note = note.map(|text| text.chars().take(500).collect());

@@ -13,7 +13,7 @@ use crate::watch::wording::Words;
 use serde::{Deserialize, Serialize};
 use sha2::{Digest, Sha256};
 
-/// What an alert is about; the names are the contract's.
+/// What an alert is about; others rely on the names.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, PartialOrd, Ord, Hash, Serialize, Deserialize)]
 #[serde(rename_all = "kebab-case")]
 pub enum Kind {

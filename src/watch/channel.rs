@@ -257,7 +257,8 @@ impl Channel {
         self.refit = Some(Refit { at, fits, choice, standard_errors, not_fitted, reach, said });
     }
 
-    /// Reach is assessed anew every tenth of the window, else carried on, less what has passed.
+    /// Reach is assessed anew every tenth of the window, else carried on: how far ahead of its newest
+    /// point a window like this one carries does not change faster than the window itself.
     fn reach(&mut self, context: &Context<'_>, x: &[f64], y: &[f64], no_curve: bool) -> Reach {
         if no_curve {
             return Reach::none(Limit::NoCurve);

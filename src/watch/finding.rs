@@ -1,6 +1,6 @@
 //! A finding: everything that is known of one channel after a refit, as it is published.
 //!
-//! Field names and shapes are the contract's; numbers that do not exist are null or absent, never NaN.
+//! Others rely on field names and shapes; numbers that do not exist are null or absent, never NaN.
 
 use crate::watch::alert::Kind;
 use crate::watch::time::EventTime;

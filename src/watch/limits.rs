@@ -4,9 +4,6 @@
 /// the known ones go on undisturbed.
 pub const CHANNELS_MAX: usize = 10_000;
 
-/// The longest channel name, bytes. A longer one is refused where the name is made.
-pub const NAME_BYTES_MAX: usize = 256;
-
 /// The longest unit, bytes. A longer one is a mistake in the settings.
 pub const UNIT_BYTES_MAX: usize = 16;
 
@@ -35,9 +32,6 @@ pub const POINTS_AFTER_BREAK: usize = 40;
 
 /// Longest sentence of an alert, bytes; wording is bounded by construction, a test holds it so.
 pub const SENTENCE_BYTES_MAX: usize = 600;
-
-/// The longest time between two points that still counts as spacing when ages are reckoned, days.
-pub const AGE_DAYS_MAX: f64 = 36_525.0;
 
 const _: () = assert!(POINTS_TO_FIT < POINTS_TO_EXAMINE);
 const _: () = assert!(POINTS_TO_EXAMINE <= WINDOW_POINTS_MIN);

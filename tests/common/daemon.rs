@@ -166,6 +166,11 @@ impl Daemon {
         daemon
     }
 
+    /// Its process id.
+    pub fn id(&self) -> u32 {
+        self.child.id()
+    }
+
     /// SIGTERM; returns the exit code.
     pub fn terminate(mut self) -> Option<i32> {
         signal("TERM", self.child.id());

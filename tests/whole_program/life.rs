@@ -1,6 +1,6 @@
 //! Beginning and end: what others see of them, wrong settings, two daemons on one store.
 
-use crate::common::broker::Broker;
+use crate::common::broker::{Broker, signal};
 use crate::common::client::{Collector, Message, Publisher};
 use crate::common::daemon::{Daemon, Site};
 use crate::common::{history, store};
@@ -88,4 +88,16 @@ fn second_daemon_on_the_same_store_is_refused() {
     Publisher::new(broker.port()).publish(&readings(2));
     store::wait_for_readings(&site, 2);
     assert_eq!(first.terminate(), Some(0));
+}
+
+#[test]
+fn sigterm_during_the_start_ends_with_0() {
+    let broker = Broker::running();
+    for _ in 0..20 {
+        let site = Site::new(broker.port());
+        let mut daemon = Daemon::start(&site);
+        crate::common::broker::wait_until("a store", || site.store().exists().then_some(()));
+        signal("TERM", daemon.id());
+        assert_eq!(daemon.code(), Some(0));
+    }
 }

@@ -1,9 +1,12 @@
 //! Trouble with the broker: not there, not willing, forgetful.
 
 use crate::common::broker::Broker;
-use crate::common::client::{Message, Publisher};
+use crate::common::client::{Collector, Message, Publisher};
 use crate::common::daemon::{Daemon, Site};
 use crate::common::{history, store};
+use serde_json::json;
+
+const OWN: &str = "asfound/saltmarsh";
 
 fn readings(n: usize) -> Vec<Message> {
     history::messages(&history::three_instruments(6, n.div_ceil(3))[..n])
@@ -66,4 +69,38 @@ fn a_broker_that_has_forgotten_the_session_is_noticed() {
     assert!(said.contains("not connected: the broker closed the connection"), "{said}");
     assert!(!said.contains("serialization"), "a library's words, not ours: {said}");
     assert_eq!(daemon.terminate(), Some(0));
+}
+
+#[test]
+fn gap_is_noticed_at_the_first_connection_after_a_restart() {
+    let mut broker = Broker::running();
+    let site = Site::new(broker.port());
+    let daemon = Daemon::listening(&site);
+    assert_eq!(daemon.terminate(), Some(0));
+    broker.crash();
+    broker.start();
+    let daemon = Daemon::listening(&site);
+    daemon.log.wait_for("the broker has lost this subscriber's session");
+}
+
+#[test]
+fn what_stands_is_told_again_to_a_broker_that_has_forgotten_it() {
+    let mut broker = Broker::running();
+    let site = Site::new(broker.port());
+    let daemon = Daemon::listening(&site);
+    let readings = history::three_instruments(4107, 450);
+    let readings: Vec<_> = readings.into_iter().filter(|r| r.tag == "PT-4107").take(300).collect();
+    Publisher::new(broker.port()).publish(&history::messages(&readings));
+    let topic = format!("{OWN}/standing/press.PT-4107");
+    let stands = |messages: &[Message]| {
+        let mut lists = messages.iter().filter(|m| m.topic == topic).map(Message::json);
+        lists.any(|list| list != json!([])).then_some(())
+    };
+    Collector::on(broker.port(), "asfound/#").wait_for("a standing alert", stands);
+    store::wait_for_readings(&site, 300);
+    broker.crash();
+    daemon.log.wait_for("readings: not connected");
+    broker.start();
+    daemon.log.wait_for_count("readings: subscribed", 2);
+    Collector::on(broker.port(), "asfound/#").wait_for("the standing alert again", stands);
 }

@@ -4,6 +4,7 @@
 mod common;
 
 mod alike;
+mod answers;
 mod intake;
 mod life;
 mod link;

@@ -4,22 +4,25 @@ use crate::service::line::line_of_json;
 use crate::service::shown::Shown;
 use crate::watch::wording::{days, with_guard};
 use serde_json::Value;
-use std::collections::BTreeMap;
+use std::collections::{BTreeMap, BTreeSet};
 
 /// Channels that are kept; the demo's site has fifteen.
 const CHANNELS_MAX: usize = 1000;
+/// Alert events that are shown; further ones are not.
+const EVENTS_MAX: usize = 100_000;
 
 /// The newest finding and the standing alerts of each channel.
 #[derive(Debug, Default)]
 pub struct Board {
     findings: BTreeMap<String, Value>,
     standing: BTreeMap<String, Vec<String>>,
-    events: u64,
+    /// Ids of the alert events heard: what comes twice counts once.
+    events: BTreeSet<String>,
 }
 
-/// Whether a message on the service's topic says that it is offline.
-pub fn is_offline(payload: &[u8]) -> bool {
-    serde_json::from_slice::<Value>(payload).is_ok_and(|state| state["state"] == "offline")
+/// Whether a message on the service's topic says that it is in that state.
+pub fn is_state(state: &str, payload: &[u8]) -> bool {
+    serde_json::from_slice::<Value>(payload).is_ok_and(|told| told["state"] == state)
 }
 
 impl Board {
@@ -31,8 +34,9 @@ impl Board {
         let room = self.findings.len() < CHANNELS_MAX;
         match what {
             "alert" => {
-                self.events += 1;
-                return line_of_json(&value);
+                let id = value["id"].as_str()?.to_owned();
+                let new = self.events.len() < EVENTS_MAX && self.events.insert(id);
+                return new.then(|| line_of_json(&value)).flatten();
             }
             "finding" if room => drop(self.findings.insert(channel.to_owned(), value)),
             "standing" if room => {
@@ -49,8 +53,8 @@ impl Board {
     }
 
     /// Alert events heard.
-    pub fn events(&self) -> u64 {
-        self.events
+    pub fn events(&self) -> usize {
+        self.events.len()
     }
 
     /// One row a channel, in words; `(over)`: the condition has gone, nobody has acknowledged the alert.
@@ -161,6 +165,6 @@ mod tests {
         assert_eq!(board.hear("alert/x", b"\xff{"), None);
         assert_eq!(board.hear("finding", b"{}"), None);
         assert_eq!(board.events(), 0);
-        assert!(!is_offline(b"[]") && is_offline(br#"{"state":"offline"}"#));
+        assert!(!is_state("online", b"[]") && is_state("online", br#"{"state":"online"}"#));
     }
 }

@@ -104,8 +104,11 @@ async fn tell_history(
     link: BrokerSettings,
     own_topics: String,
 ) -> Result<(), String> {
-    let (mut instruments, _) = Guest::connect(&link, "instruments", Vec::new()).await?;
+    let state = vec![format!("{own_topics}/service")];
+    let (mut instruments, _) = Guest::connect(&link, "instruments", state).await?;
     let gone = || "the connection to the broker ended".to_owned();
+    // What is sent before anybody has subscribed is lost.
+    while !board::is_state("online", &instruments.next().await.ok_or_else(gone)?.payload) {}
     for message in history {
         if !instruments.publish(message.topic, message.payload).await {
             return Err(gone());
@@ -149,7 +152,7 @@ async fn listen(
             finished |= stop.is_some();
             drop(stop.take());
         }
-        if rest == "service" && stop.is_none() && board::is_offline(&payload) {
+        if rest == "service" && stop.is_none() && board::is_state("offline", &payload) {
             break;
         }
         if let Some(line) = board.hear(rest, &payload) {

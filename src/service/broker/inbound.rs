@@ -39,8 +39,10 @@ pub struct Delivery {
     pub duplicate: bool,
     /// Kept by the broker from earlier.
     pub retained: bool,
-    /// Where a reply goes.
+    /// Where a reply goes. Foreign text.
     pub response_topic: Option<String>,
+    /// What the reply must carry, so that the asker knows it again.
+    pub correlation: Option<Bytes>,
 }
 
 impl Delivery {
@@ -97,11 +99,13 @@ impl Inbound {
     /// Starts the task; it connects, and connects again, until it is stopped.
     ///
     /// # Arguments
-    /// `filters` — to subscribe to, at QoS 1, without what the broker has kept; `events` — takes what
-    /// happens; its capacity should exceed [`RECEIVE_MAXIMUM`], so that the task never waits.
+    /// `filters` — to subscribe to, at QoS 1, without what the broker has kept; `been_connected` — the
+    /// broker should have a session of ours, from an earlier start; `events` — takes what happens; its
+    /// capacity should exceed [`RECEIVE_MAXIMUM`], so that the task never waits.
     pub fn start(
         settings: BrokerSettings,
         filters: Vec<String>,
+        been_connected: bool,
         events: mpsc::Sender<InboundEvent>,
     ) -> InboundHandle {
         let current: Current = Arc::default();
@@ -113,7 +117,7 @@ impl Inbound {
             current: Arc::clone(&current),
             stopping: Arc::clone(&stopping),
             epoch: 0,
-            been_connected: false,
+            been_connected,
         };
         InboundHandle { current, stopping, task: tokio::spawn(link.run()) }
     }
@@ -253,6 +257,7 @@ impl Link {
             duplicate: dup,
             retained: retain,
             response_topic: properties.response_topic,
+            correlation: properties.correlation_data,
         }
     }
 

@@ -36,6 +36,8 @@ pub struct OutMessage {
     pub retained: bool,
     /// Content type.
     pub content_type: Option<String>,
+    /// Correlation data, of a reply.
+    pub correlation: Option<Vec<u8>>,
 }
 
 /// What the link reports.
@@ -249,14 +251,16 @@ async fn publish(
     ledger: &Ledger,
     message: OutMessage,
 ) {
-    let OutMessage { token, topic, payload, retained, content_type } = message;
+    let OutMessage { token, topic, payload, retained, content_type, correlation } = message;
     let most = PACKET_BYTES_MAX as usize - OVERHEAD_BYTES;
     if payload.len() > most {
         let reason = format!("{} bytes; at most {most} are sent", payload.len());
         tell(told, OutboundEvent::Refused { token, reason }).await;
         return;
     }
-    let properties = PublishProperties { content_type, ..PublishProperties::default() };
+    let correlation_data = correlation.map(Into::into);
+    let properties =
+        PublishProperties { content_type, correlation_data, ..PublishProperties::default() };
     ledger.entries().handed.push_back(token);
     let handed =
         client.try_publish_with_properties(topic, QoS::AtLeastOnce, retained, payload, properties);

@@ -32,14 +32,9 @@ pub const SILENT_AFTER_LEAST: Span = Span(DAY_US / 24);
 /// Default port of `broker.url` for `mqtt`.
 pub const MQTT_PORT: u16 = 1883;
 
-/// Fewest points a window may hold: below it no structure can be told from noise.
-pub const WINDOW_POINTS_MIN: usize = 60;
-/// Most points a window may hold.
-pub const WINDOW_POINTS_MAX: usize = 4096;
 /// Most watches in one file.
 pub const WATCHES_MAX: usize = 256;
-/// Longest unit, bytes: the engine knows it too.
-pub use crate::watch::limits::UNIT_BYTES_MAX;
+pub use crate::watch::limits::{UNIT_BYTES_MAX, WINDOW_POINTS_MAX, WINDOW_POINTS_MIN};
 /// Longest site name, bytes.
 pub const SITE_BYTES_MAX: usize = 64;
 /// Longest client id and user name, bytes.

@@ -113,7 +113,7 @@ pub struct SavedState {
 }
 
 /// A message to publish.
-#[derive(Clone, Debug, PartialEq)]
+#[derive(Clone, Debug, Default, PartialEq)]
 pub struct NewMessage {
     /// Where to.
     pub topic: String,
@@ -123,6 +123,8 @@ pub struct NewMessage {
     pub retained: bool,
     /// MQTT content type.
     pub content_type: Option<String>,
+    /// MQTT correlation data, of a reply.
+    pub correlation: Option<Vec<u8>>,
 }
 
 /// What is saved together, in one transaction: state, and what followed from it.
@@ -250,14 +252,15 @@ impl Store {
             held += 1;
             transaction
                 .prepare_cached(
-                    "INSERT INTO outbox (topic, payload, retained, content_type)
-                     VALUES (?1, ?2, ?3, ?4)",
+                    "INSERT INTO outbox (topic, payload, retained, content_type, correlation)
+                     VALUES (?1, ?2, ?3, ?4, ?5)",
                 )?
                 .execute(params![
                     message.topic,
                     message.payload,
                     message.retained,
-                    message.content_type
+                    message.content_type,
+                    message.correlation
                 ])?;
         }
         if let Some(from) = bundle.replay_from {
@@ -298,11 +301,26 @@ impl Store {
 
     /// Up to which journal row every state is complete.
     pub fn replay_from(&self) -> Result<i64, StoreError> {
+        Ok(self.fact("replay_from")?.unwrap_or(0))
+    }
+
+    /// Whether a broker has ever granted the subscriptions, and so should have a session of ours.
+    pub fn subscribed_before(&self) -> Result<bool, StoreError> {
+        Ok(self.fact("subscribed")?.is_some())
+    }
+
+    /// Notes that a broker has granted the subscriptions.
+    pub fn note_subscribed(&mut self) -> Result<(), StoreError> {
+        self.connection
+            .execute("INSERT OR IGNORE INTO fact (name, value) VALUES ('subscribed', 1)", [])?;
+        Ok(())
+    }
+
+    fn fact(&self, name: &str) -> Result<Option<i64>, StoreError> {
         Ok(self
             .connection
-            .query_row("SELECT value FROM fact WHERE name = 'replay_from'", [], |row| row.get(0))
-            .optional()?
-            .unwrap_or(0))
+            .query_row("SELECT value FROM fact WHERE name = ?1", [name], |row| row.get(0))
+            .optional()?)
     }
 
     /// At most `rows_max` journal rows after row `after`, in order.
@@ -343,7 +361,7 @@ impl Store {
         rows_max: i64,
     ) -> Result<Vec<(i64, NewMessage)>, StoreError> {
         let mut query = self.connection.prepare_cached(
-            "SELECT id, topic, payload, retained, content_type FROM outbox
+            "SELECT id, topic, payload, retained, content_type, correlation FROM outbox
              WHERE id > ?1 ORDER BY id LIMIT ?2",
         )?;
         let rows = query.query_map([after, rows_max], |row| {
@@ -354,6 +372,7 @@ impl Store {
                     payload: row.get(2)?,
                     retained: row.get(3)?,
                     content_type: row.get(4)?,
+                    correlation: row.get(5)?,
                 },
             ))
         })?;
@@ -420,6 +439,7 @@ mod tests {
             payload: payload.as_bytes().to_vec(),
             retained,
             content_type: None,
+            correlation: None,
         }
     }
 

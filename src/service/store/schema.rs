@@ -25,7 +25,7 @@ CREATE TABLE state (
 -- what comes after the last one handed over is new, and an acknowledgement names one message only.
 CREATE TABLE outbox (
   id INTEGER PRIMARY KEY AUTOINCREMENT, topic TEXT NOT NULL, payload BLOB NOT NULL,
-  retained INTEGER NOT NULL, content_type TEXT);
+  retained INTEGER NOT NULL, content_type TEXT, correlation BLOB);
 CREATE INDEX outbox_topic ON outbox (topic) WHERE retained;
 -- Every alert event ever made, for the log of alerts.
 CREATE TABLE alert (

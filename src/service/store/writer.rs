@@ -52,6 +52,11 @@ impl Writer {
         self.order(move |store| store.unsent_after(after, rows_max))
     }
 
+    /// Notes that a broker has granted the subscriptions.
+    pub fn note_subscribed(&self) -> oneshot::Receiver<Result<(), StoreError>> {
+        self.order(Store::note_subscribed)
+    }
+
     /// Marks messages as taken by the broker.
     pub fn sent(&self, ids: Vec<i64>) -> oneshot::Receiver<Result<(), StoreError>> {
         self.order(move |store| store.sent(&ids))

@@ -4,16 +4,20 @@
 //! follows is saved and published from the outbox. At most one commit runs at a time; the next one
 //! starts when it has ended and something waits 2 ms or fills a batch.
 
+mod publish;
+mod stop;
+
 use crate::service::broker::BrokerSettings;
 use crate::service::broker::inbound::{AckToken, Delivery, Inbound, InboundEvent, InboundHandle};
-use crate::service::broker::outbound::{OutMessage, Outbound, OutboundEvent, OutboundHandle};
+use crate::service::broker::outbound::{Outbound, OutboundEvent, OutboundHandle};
 use crate::service::clock::{self, Stopwatch};
 use crate::service::desk::{Arrival, Arrivals, Desk, Entry, Put};
 use crate::service::flood::Flood;
 use crate::service::notify::Notify;
 use crate::service::shown::Shown;
 use crate::service::store::{NewMessage, StoreError, Writer};
-use std::collections::BTreeMap;
+use publish::service_state;
+use std::collections::BTreeSet;
 use std::time::Duration;
 use tokio::sync::{mpsc, oneshot};
 use tokio::time::Instant;
@@ -34,8 +38,6 @@ const PULSES_PER_ROUTINE: u32 = 5;
 const PULSES_STOOD_MAX: u32 = 10;
 /// Messages of the outbox handed to the link at a time.
 const PUMP_MAX: i64 = 64;
-/// Unsent messages wait at most so long at a stop.
-const DRAIN: Duration = Duration::from_secs(3);
 /// A turn of the loop longer than this is told in the log.
 const LONG_TURN: Duration = Duration::from_millis(250);
 /// The token of the service's own state: no row of the outbox has it.
@@ -96,19 +98,22 @@ struct Daemon {
     waiting: Batch,
     first_waits_since: Option<Instant>,
     committing: Option<(Answer<i64>, Batch)>,
-    saving: Option<Answer<u64>>,
+    /// With the lines that may be printed once it is saved what they tell.
+    saving: Option<(Answer<u64>, Vec<String>)>,
     fetching: Option<Answer<Rows>>,
     /// The newest outbox row handed to the link on this connection.
     handed: i64,
     /// Handed over, not yet taken by the broker.
-    in_flight: BTreeMap<i64, ()>,
+    in_flight: BTreeSet<i64>,
     /// Taken by the broker, still to be struck out of the outbox.
     done: Vec<i64>,
     more_in_outbox: bool,
     out_connected: bool,
     in_connected: bool,
-    subscribed: bool,
-    state_since: crate::watch::time::ShellTime,
+    /// The readings' connection has been missing at least once.
+    in_lost: bool,
+    /// Whether all subscriptions are granted; not known before the broker has answered.
+    subscribed: Option<bool>,
     state_told: Option<String>,
     pulses: u32,
     /// Answers of the store; the same at the last pulse; pulses since one came while one was due.
@@ -133,9 +138,8 @@ pub async fn run(
     let (in_sender, mut in_events) = mpsc::channel(EVENTS_MAX);
     let (out_sender, mut out_events) = mpsc::channel(EVENTS_MAX);
     let will = (desk.service_topic(), service_state("offline", "connection lost", desk.now()));
-    let inbound = Inbound::start(link.clone(), desk.filters(), in_sender);
+    let inbound = Inbound::start(link.clone(), desk.filters(), desk.subscribed_before(), in_sender);
     let outbound = Outbound::start(link, will, out_sender);
-    let state_since = desk.now();
     let mut daemon = Daemon {
         desk,
         writer,
@@ -150,13 +154,13 @@ pub async fn run(
         saving: None,
         fetching: None,
         handed: 0,
-        in_flight: BTreeMap::new(),
+        in_flight: BTreeSet::new(),
         done: Vec::new(),
         more_in_outbox: true,
         out_connected: false,
         in_connected: false,
-        subscribed: false,
-        state_since,
+        in_lost: false,
+        subscribed: None,
         state_told: None,
         pulses: 0,
         answers: 0,
@@ -213,7 +217,7 @@ impl Daemon {
                 Some(result) => Event::Committed(result),
                 None => Event::StoreGone,
             },
-            answer = answer_of(self.saving.as_mut()) => match answer {
+            answer = answer_of(self.saving.as_mut().map(|(r, _)| r)) => match answer {
                 Some(result) => Event::Saved(result),
                 None => Event::StoreGone,
             },
@@ -237,8 +241,9 @@ impl Daemon {
             Event::Out(event) => self.on_outbound(event),
             Event::Committed(result) => self.on_committed(result?),
             Event::Saved(result) => {
-                self.saving = None;
+                let lines = self.saving.take().map_or_else(Vec::new, |(_, lines)| lines);
                 let unkept = result?;
+                self.print(&lines);
                 if unkept > 0 {
                     tracing::error!(
                         unkept,
@@ -260,6 +265,7 @@ impl Daemon {
             InboundEvent::Message(delivery) => self.on_message(&delivery),
             InboundEvent::Connected { session_present, .. } => {
                 self.in_connected = true;
+                self.subscribed = None;
                 tracing::info!(session_present, "readings: connected");
             }
             InboundEvent::Subscribed { granted, refused } => {
@@ -271,23 +277,30 @@ impl Daemon {
                     );
                 }
                 tracing::info!(granted, refused = refused.len(), "readings: subscribed");
-                self.subscribed = granted > 0 && refused.is_empty();
+                self.subscribed = Some(granted > 0 && refused.is_empty());
                 if granted > 0 {
+                    // Not waited for: at worst one gap is not noticed after a crash this instant.
+                    drop(self.writer.note_subscribed());
                     self.notify.ready();
                 }
             }
             InboundEvent::Disconnected { why, retry_in } => {
                 self.in_connected = false;
-                self.subscribed = false;
+                self.in_lost = true;
                 tracing::warn!(
                     "readings: not connected: {}; next attempt in {:.1} s",
                     Shown(&why, 300),
                     retry_in.as_secs_f64()
                 );
             }
-            InboundEvent::PossibleGap => tracing::warn!(
-                "the broker has lost this subscriber's session: readings sent meanwhile may be missing"
-            ),
+            InboundEvent::PossibleGap => {
+                tracing::warn!(
+                    "the broker has lost this subscriber's session: readings sent meanwhile may be \
+                     missing"
+                );
+                // What it had retained for newcomers is most likely lost as well.
+                self.desk.tell_all_again();
+            }
         }
     }
 
@@ -299,6 +312,7 @@ impl Daemon {
             retained: delivery.retained,
             packet_id: delivery.packet_id(),
             response_topic: delivery.response_topic.as_deref(),
+            correlation: delivery.correlation.as_deref(),
         };
         let (put, refusal) = self.desk.receive(&arrival);
         if let Some(refusal) = refusal
@@ -327,58 +341,10 @@ impl Daemon {
         self.desk.committed(first, entries);
     }
 
-    fn on_outbound(&mut self, event: OutboundEvent) {
-        match event {
-            OutboundEvent::Connected => {
-                tracing::info!("alerts: connected");
-                self.out_connected = true;
-                self.handed = 0;
-                self.in_flight.clear();
-                self.more_in_outbox = true;
-                self.state_told = None;
-            }
-            OutboundEvent::Disconnected { why, retry_in } => {
-                self.out_connected = false;
-                self.in_flight.clear();
-                tracing::warn!(
-                    "alerts: not connected: {}; next attempt in {:.1} s",
-                    Shown(&why, 300),
-                    retry_in.as_secs_f64()
-                );
-            }
-            OutboundEvent::Delivered { token } => self.done_with(token),
-            OutboundEvent::Refused { token, reason } => {
-                tracing::error!(token, "the broker refused a message: {}", Shown(&reason, 200));
-                self.done_with(token);
-            }
-        }
-    }
-
-    fn done_with(&mut self, token: i64) {
-        if token == SERVICE_TOKEN {
-            return;
-        }
-        self.published += 1;
-        self.in_flight.remove(&token);
-        self.done.push(token);
-        self.more_in_outbox = true;
-    }
-
-    fn on_fetched(&mut self, rows: Vec<(i64, NewMessage)>) {
-        self.fetching = None;
-        self.more_in_outbox = !rows.is_empty();
-        for (id, message) in rows {
-            if !self.out_connected {
-                return;
-            }
-            let NewMessage { topic, payload, retained, content_type } = message;
-            let message = OutMessage { token: id, topic, payload, retained, content_type };
-            if self.outbound.try_send(message).is_err() {
-                // The link is full; it goes on when something is delivered.
-                return;
-            }
-            self.handed = id;
-            self.in_flight.insert(id, ());
+    /// The technician's lines of alert events that are safely in the store.
+    fn print(&mut self, lines: &[String]) {
+        for line in lines {
+            (self.lines)(line);
         }
     }
 
@@ -398,42 +364,17 @@ impl Daemon {
         }
     }
 
-    /// Publishes the service's own state when it has changed.
-    fn tell_state(&mut self) {
-        let (state, why) = match (self.in_connected, self.subscribed) {
-            (true, true) => ("online", "readings and alerts connected"),
-            (true, false) => ("degraded", "not all subscriptions are granted"),
-            (false, _) => ("degraded", "the readings' connection is down"),
-        };
-        if !self.out_connected || self.state_told.as_deref() == Some(why) {
-            return;
-        }
-        self.state_since = self.desk.now();
-        let message = OutMessage {
-            token: SERVICE_TOKEN,
-            topic: self.desk.service_topic(),
-            payload: service_state(state, why, self.state_since),
-            retained: true,
-            content_type: Some("application/json".to_owned()),
-        };
-        if self.outbound.try_send(message).is_ok() {
-            self.state_told = Some(why.to_owned());
-        }
-    }
-
     /// Starts what can be started after each event.
     fn after_turn(&mut self) {
-        for line in self.desk.lines() {
-            (self.lines)(&line);
-        }
         self.start_commit();
         if self.saving.is_none() {
             let routine = self.pulses >= PULSES_PER_ROUTINE;
             if routine {
                 self.pulses = 0;
             }
+            let lines = self.desk.lines();
             if let Some(bundle) = self.desk.bundle(routine, false) {
-                self.saving = Some(self.writer.save(bundle));
+                self.saving = Some((self.writer.save(bundle), lines));
             }
         }
         if !self.done.is_empty() {
@@ -464,98 +405,6 @@ impl Daemon {
         let rows = batch.iter().filter_map(|(_, e)| e.as_ref()).map(|e| e.row.clone()).collect();
         self.committing = Some((self.writer.append(rows), batch));
     }
-
-    /// An orderly stop: what was received is committed and acknowledged, every state saved, what can
-    /// be published is published, and "offline" is said before the link is closed.
-    async fn stop(
-        mut self,
-        mut out_events: mpsc::Receiver<OutboundEvent>,
-    ) -> Result<Summary, DaemonError> {
-        self.notify.stopping();
-        tracing::info!("stopping");
-        while self.committing.is_some() || !self.waiting.is_empty() {
-            if let Some((receiver, _)) = self.committing.as_mut() {
-                let first = receiver.await.map_err(|_| DaemonError::StoreGone)??;
-                self.on_committed(first);
-            }
-            self.first_waits_since = Some(clock::instant() - LINGER);
-            self.start_commit();
-        }
-        self.inbound.stop().await;
-        for line in self.desk.lines() {
-            (self.lines)(&line);
-        }
-        if let Some(saving) = self.saving.take() {
-            saving.await.map_err(|_| DaemonError::StoreGone)??;
-        }
-        if let Some(bundle) = self.desk.bundle(true, true) {
-            self.writer.save(bundle).await.map_err(|_| DaemonError::StoreGone)??;
-        }
-        drain(
-            &mut self.outbound,
-            &self.writer,
-            &mut out_events,
-            &mut self.published,
-            self.out_connected,
-        )
-        .await?;
-        let last = OutMessage {
-            token: SERVICE_TOKEN,
-            topic: self.desk.service_topic(),
-            payload: service_state("offline", "stopped", self.desk.now()),
-            retained: true,
-            content_type: Some("application/json".to_owned()),
-        };
-        self.outbound.stop(last).await;
-        Ok(Summary { arrivals: self.desk.arrivals, published: self.published })
-    }
-}
-
-/// Publishes what is left in the outbox, as far as it goes in [`DRAIN`].
-async fn drain(
-    outbound: &mut OutboundHandle,
-    writer: &Writer,
-    events: &mut mpsc::Receiver<OutboundEvent>,
-    published: &mut u64,
-    connected: bool,
-) -> Result<(), DaemonError> {
-    if !connected {
-        return Ok(());
-    }
-    let until = clock::instant() + DRAIN;
-    let gone = |_| DaemonError::StoreGone;
-    loop {
-        let rows = writer.unsent_after(0, 16).await.map_err(gone)??;
-        if rows.is_empty() {
-            return Ok(());
-        }
-        let mut open: Vec<i64> = Vec::new();
-        for (id, message) in rows {
-            let NewMessage { topic, payload, retained, content_type } = message;
-            let message = OutMessage { token: id, topic, payload, retained, content_type };
-            if outbound.try_send(message).is_ok() {
-                open.push(id);
-            }
-        }
-        while !open.is_empty() {
-            match tokio::time::timeout_at(until, events.recv()).await {
-                Ok(Some(
-                    OutboundEvent::Delivered { token } | OutboundEvent::Refused { token, .. },
-                )) => {
-                    if let Some(place) = open.iter().position(|&id| id == token) {
-                        open.remove(place);
-                        *published += 1;
-                    }
-                    if token != SERVICE_TOKEN {
-                        writer.sent(vec![token]).await.map_err(gone)??;
-                    }
-                }
-                Ok(Some(OutboundEvent::Connected)) => {}
-                // Disconnected, ended or out of time: the rest stays in the outbox for the next start.
-                _ => return Ok(()),
-            }
-        }
-    }
 }
 
 /// The answer of an order that may not have been given; pending for ever without one.
@@ -564,16 +413,4 @@ async fn answer_of<T>(receiver: Option<&mut oneshot::Receiver<T>>) -> Option<T> 
         Some(receiver) => receiver.await.ok(),
         None => std::future::pending().await,
     }
-}
-
-/// The service's own state as JSON.
-fn service_state(state: &str, why: &str, since: crate::watch::time::ShellTime) -> Vec<u8> {
-    serde_json::json!({
-        "state": state,
-        "since": since.to_string(),
-        "why": why,
-        "version": env!("CARGO_PKG_VERSION"),
-    })
-    .to_string()
-    .into_bytes()
 }
