@@ -4,6 +4,7 @@ pub mod choose;
 pub mod family;
 pub mod fit;
 pub mod forecast;
+pub mod frame;
 pub mod reach;
 pub mod serial;
 pub mod structure;
