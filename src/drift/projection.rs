@@ -1,0 +1,215 @@
+//! Variable projection: with the one nonlinear coefficient given, the rest is a line; what is left
+//! is a search in one dimension.
+
+use crate::drift::family::{Coefficients, Family};
+use crate::drift::outcome::{EXPONENT, EXPONENT_MIN, Undetermined};
+use crate::drift::refine::Data;
+use crate::drift::serial::count;
+
+/// How finely the nonlinear coefficient is looked for.
+#[derive(Clone, Copy, Debug)]
+pub struct Search {
+    /// Grid step of the exponent; must divide the width of its range.
+    exponent_step: f64,
+    /// Grid step of ln tau.
+    log_tau_step: f64,
+    /// Bounds of tau as shares of the range of ages; the lower one is raised where the second age
+    /// lies further off.
+    tau: (f64, f64),
+    /// Golden-section steps between grid points; each keeps 0.618 of the bracket.
+    golden_steps: usize,
+    /// Whether only a start is wanted.
+    quick: bool,
+}
+
+impl Search {
+    /// The upper bound of tau, as a share of the range of ages.
+    pub fn tau_max(self) -> f64 {
+        self.tau.1
+    }
+}
+
+/// To the last digit that a sum of squares can tell. The bound of 10⁴ ranges lies past the slowest
+/// settling that calibrated instruments show as a curve at all (own rule).
+pub const SEARCH_FULL: Search = Search {
+    exponent_step: 0.25,
+    log_tau_step: 0.4,
+    tau: (1e-6, 1e4),
+    golden_steps: 44,
+    quick: false,
+};
+/// A start for the watch, whose robust refinement does the rest.
+pub const SEARCH_QUICK: Search = Search {
+    exponent_step: 0.5,
+    log_tau_step: 0.5,
+    tau: (0.02, 10.0),
+    golden_steps: 8,
+    quick: true,
+};
+
+/// tau is not looked for below this share of the distance to the second age: there only the oldest
+/// readings differ from the rest, by e^−15 and less.
+const SECOND_AGE_SHARE: f64 = 1.0 / 15.0;
+/// A robust start keeps so far from exponent 0, where c and a run off to infinity.
+const EXPONENT_START_MIN: f64 = 0.01;
+const GOLDEN: f64 = 0.618_033_988_749_894_9;
+
+/// Returns the inner coefficients with the smallest sum of squares, or what the data leave open.
+///
+/// # Arguments
+/// `family` — power, offset-power or exponential; `data` — in the family's frame, or as they are.
+///
+/// # Numerics
+/// Grid, then golden section about its best point; each evaluation is one line fitted in closed
+/// form about the means, O(n). Offset-power by (u^b − 1)/b and exponential by tau (1 − e^(−u/tau)),
+/// which pass smoothly into ln u and u.
+///
+/// # Source
+/// Golub and Pereyra (1973), SIAM Journal on Numerical Analysis 10. From memory.
+pub fn project(
+    family: Family,
+    data: &Data<'_>,
+    search: Search,
+) -> Result<Coefficients, Undetermined> {
+    let mut profile = Profile::new(family, data);
+    if profile.total <= 0.0 {
+        return Err(Undetermined::NoChange);
+    }
+    let (low, high, step) = range(family, data, search);
+    let found = profile.least(low, high, step, search.golden_steps);
+    let margin = 1e-3 * step;
+    let (at_low, at_high) = (found <= low + margin, found >= high - margin);
+    match family {
+        Family::Exponential if at_low => {
+            return Err(Undetermined::Step { tau: low.exp() * data.frame.scale });
+        }
+        Family::Exponential if at_high => {
+            return Err(Undetermined::Line { tau: high.exp() * data.frame.scale });
+        }
+        _ if at_low || at_high => return Err(Undetermined::Exponent { exponent: found }),
+        Family::OffsetPower if search.quick && found.abs() < EXPONENT_START_MIN => {
+            return Ok(profile.coefficients(EXPONENT_START_MIN.copysign(found)));
+        }
+        Family::OffsetPower if found.abs() < EXPONENT_MIN => {
+            return Err(Undetermined::Logarithmic { exponent: found });
+        }
+        _ => {}
+    }
+    Ok(profile.coefficients(found))
+}
+
+/// Bounds of the nonlinear coefficient (tau: of its logarithm) and the grid's step.
+fn range(family: Family, data: &Data<'_>, search: Search) -> (f64, f64, f64) {
+    if family != Family::Exponential {
+        return (EXPONENT.0, EXPONENT.1, search.exponent_step);
+    }
+    let second = data.u.iter().copied().filter(|&u| u > 0.0).fold(f64::INFINITY, f64::min);
+    let low = search.tau.0.max(SECOND_AGE_SHARE * second).ln();
+    (low, search.tau.1.ln(), search.log_tau_step)
+}
+
+/// The sum of squares as a function of the nonlinear coefficient.
+struct Profile<'a> {
+    family: Family,
+    data: &'a Data<'a>,
+    /// Mean of y where the family has an intercept, else 0.
+    mean: f64,
+    /// Σ (y − mean)².
+    total: f64,
+    column: Vec<f64>,
+}
+
+/// A line through the transformed ages.
+struct Line {
+    level: f64,
+    slope: f64,
+    left: f64,
+}
+
+impl<'a> Profile<'a> {
+    fn new(family: Family, data: &'a Data<'a>) -> Profile<'a> {
+        let n = count(data.y.len());
+        let mean = if family == Family::Power { 0.0 } else { data.y.iter().sum::<f64>() / n };
+        let total = data.y.iter().map(|v| (v - mean).powi(2)).sum();
+        Profile { family, data, mean, total, column: Vec::with_capacity(data.y.len()) }
+    }
+
+    /// The line with the nonlinear coefficient at `k`; None where it is not finite.
+    fn line(&mut self, k: f64) -> Option<Line> {
+        let family = self.family;
+        self.column.clear();
+        self.column.extend(self.data.u.iter().zip(&self.data.ln_u).map(
+            |(&u, &ln_u)| match family {
+                Family::Exponential => {
+                    let tau = k.exp();
+                    -tau * (-u / tau).exp_m1()
+                }
+                Family::OffsetPower if k == 0.0 => ln_u,
+                Family::OffsetPower => (k * ln_u).exp_m1() / k,
+                _ => (k * ln_u).exp(),
+            },
+        ));
+        let centre = if family == Family::Power {
+            0.0
+        } else {
+            self.column.iter().sum::<f64>() / count(self.column.len())
+        };
+        let (mut squares, mut products) = (0.0, 0.0);
+        for (g, y) in self.column.iter().zip(self.data.y) {
+            squares += (g - centre) * (g - centre);
+            products += (g - centre) * (y - self.mean);
+        }
+        let slope = products / squares;
+        let left = self
+            .column
+            .iter()
+            .zip(self.data.y)
+            .map(|(g, y)| (y - self.mean - slope * (g - centre)).powi(2))
+            .sum::<f64>();
+        let line = Line { level: self.mean - slope * centre, slope, left };
+        (line.left.is_finite() && line.level.is_finite()).then_some(line)
+    }
+
+    fn left(&mut self, k: f64) -> f64 {
+        self.line(k).map_or(f64::INFINITY, |line| line.left)
+    }
+
+    /// The place of the least sum of squares in [low, high].
+    fn least(&mut self, low: f64, high: f64, step: f64, golden_steps: usize) -> f64 {
+        let mut best = (f64::INFINITY, low);
+        let mut k = low;
+        while k < high + 0.5 * step {
+            let at = k.min(high);
+            let left = self.left(at);
+            if left < best.0 {
+                best = (left, at);
+            }
+            k += step;
+        }
+        let (mut a, mut b) = ((best.1 - step).max(low), (best.1 + step).min(high));
+        let (mut c, mut d) = (b - GOLDEN * (b - a), a + GOLDEN * (b - a));
+        let (mut at_c, mut at_d) = (self.left(c), self.left(d));
+        for _ in 0..golden_steps {
+            if at_c < at_d {
+                (b, d, at_d) = (d, c, at_c);
+                c = b - GOLDEN * (b - a);
+                at_c = self.left(c);
+            } else {
+                (a, c, at_c) = (c, d, at_d);
+                d = a + GOLDEN * (b - a);
+                at_d = self.left(d);
+            }
+        }
+        0.5 * (a + b)
+    }
+
+    /// The family's own coefficients with the nonlinear one at `k`.
+    fn coefficients(&mut self, k: f64) -> Coefficients {
+        let Some(Line { level, slope, .. }) = self.line(k) else { return [0.0, 0.0, k, 0.0] };
+        match self.family {
+            Family::Exponential => [level, slope * k.exp(), k.exp(), 0.0],
+            Family::OffsetPower => [level - slope / k, slope / k, k, 0.0],
+            _ => [slope, k, 0.0, 0.0],
+        }
+    }
+}
