@@ -102,11 +102,11 @@ impl Forecaster {
 
 impl Member {
     fn value(&self, x: f64) -> f64 {
-        self.fit.family.value(&self.fit.theta, x)
+        self.fit.value(x)
     }
 
     fn variance(&self, x: f64) -> f64 {
-        let g = Vector4::from(self.fit.family.gradient(&self.fit.theta, x));
+        let g = Vector4::from(self.fit.gradient(x));
         g.dot(&(self.covariance * g)).max(0.0)
     }
 }
@@ -124,8 +124,7 @@ pub fn fit_all(x: &[f64], y: &[f64], families: &[Family]) -> Vec<Fit> {
 
 /// Returns the correlation of a fit's clipped residuals at the median spacing, bias-corrected.
 pub fn own_correlation(fit: &Fit, x: &[f64], y: &[f64], spacing: &[f64]) -> f64 {
-    let mut residuals: Vec<f64> =
-        x.iter().zip(y).map(|(&v, &w)| w - fit.family.value(&fit.theta, v)).collect();
+    let mut residuals = fit.residuals(x, y);
     let limit = CLIP_WINSOR * robust_scale(&residuals);
     if limit > 0.0 {
         residuals.iter_mut().for_each(|r| *r = r.clamp(-limit, limit));
@@ -142,7 +141,8 @@ fn newer_half(x: &[f64], y: &[f64], family: Family, phi: f64) -> Option<Member> 
     Some(Member { fit, weight: 1.0, covariance })
 }
 
-/// Returns the coefficients' covariance with serial dependence allowed for, and the noise variance.
+/// Returns the inner coefficients' covariance with serial dependence allowed for, and the noise
+/// variance; [`Fit::standard_errors_of`] turns it into the data's units.
 ///
 /// V = s² (JᵀJ)⁻¹ JᵀRJ (JᵀJ)⁻¹, s² = RSS/(n − tr[(JᵀJ)⁻¹ JᵀRJ]), R_ij = phi^(|t_i − t_j|/δ).
 ///
@@ -153,8 +153,7 @@ fn newer_half(x: &[f64], y: &[f64], family: Family, phi: f64) -> Option<Member> 
 /// Columns scaled to unit length; JᵀRJ by forward recursion, O(n p²). None when columns are dependent.
 pub fn sandwich(fit: &Fit, x: &[f64], spacing: &[f64], phi: f64) -> Option<(Matrix4<f64>, f64)> {
     let p = fit.family.parameter_count();
-    let mut rows: Vec<Vector4<f64>> =
-        x.iter().map(|&v| Vector4::from(fit.family.gradient(&fit.theta, v))).collect();
+    let mut rows: Vec<Vector4<f64>> = x.iter().map(|&v| Vector4::from(fit.gradient(v))).collect();
     let mut scale = Vector4::repeat(1.0);
     for k in 0..p {
         let length = rows.iter().map(|row| row[k] * row[k]).sum::<f64>().sqrt();

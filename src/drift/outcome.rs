@@ -1,7 +1,8 @@
 //! What comes of a fit: a curve, or the reason why there is none.
 
-use crate::drift::family::{Coefficients, Family};
+use crate::drift::family::{COEFFICIENTS_MAX, Coefficients, Family};
 use crate::drift::frame::Frame;
+use nalgebra::Matrix4;
 use serde::{Deserialize, Serialize};
 
 /// Range of the exponent; an optimum at its edge is not determined by the data.
@@ -48,6 +49,17 @@ impl Fit {
     /// Returns the gradient of the curve to its inner coefficients.
     pub fn gradient(&self, x: f64) -> Coefficients {
         self.family.gradient(&self.inner, self.frame.inside(x))
+    }
+
+    /// Returns the standard errors of `theta` that follow from a covariance of the inner coefficients.
+    pub fn standard_errors_of(&self, covariance: &Matrix4<f64>) -> Coefficients {
+        let (_, turn) = self.frame.outside(self.family, &self.inner);
+        let outer = turn * covariance * turn.transpose();
+        let mut errors = [0.0; COEFFICIENTS_MAX];
+        for k in 0..self.family.parameter_count() {
+            errors[k] = outer[(k, k)].max(0.0).sqrt();
+        }
+        errors
     }
 
     /// Returns y less the curve.
