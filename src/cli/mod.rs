@@ -1,6 +1,7 @@
 //! One file per command.
 
 pub mod check;
+pub mod fit;
 pub mod replay;
 pub mod run;
 
@@ -22,6 +23,7 @@ struct Arguments {
 #[derive(Debug, Subcommand)]
 enum Command {
     Check(check::CheckArgs),
+    Fit(fit::FitArgs),
     Replay(replay::ReplayArgs),
     Run(run::RunArgs),
 }
@@ -42,6 +44,7 @@ pub fn run(arguments: impl IntoIterator<Item = std::ffi::OsString>) -> u8 {
         Command::Check(args) => {
             check::check(&args, &environment, budget_words, |_| Vec::new(), &mut out, &mut err)
         }
+        Command::Fit(args) => fit::fit(&args, &mut out, &mut err),
         Command::Run(args) => {
             drop(out);
             return run::run(&args, &environment, &mut err);

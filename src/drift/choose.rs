@@ -75,6 +75,46 @@ pub fn choose(fits: &[Fit], n_effective: f64, current: Option<Family>) -> Choice
     }
 }
 
+/// Returns the indices of the fits among which to choose for one look: every monotone family, and a
+/// polynomial only where it turns within the readings and is better than each of them by more than
+/// [`SWITCH_ABOVE`]. All of them where there is no monotone family.
+///
+/// # Arguments
+/// `fits` — to the same data; `oldest`, `newest` — the range of ages.
+pub fn eligible(fits: &[Fit], n_effective: f64, oldest: f64, newest: f64) -> Vec<usize> {
+    let turning = |fit: &Fit| matches!(fit.family, Family::Quadratic | Family::Cubic);
+    let best = fits
+        .iter()
+        .filter(|fit| !turning(fit))
+        .filter_map(|fit| aicc(fit, n_effective))
+        .min_by(f64::total_cmp);
+    if fits.iter().all(turning) {
+        return (0..fits.len()).collect();
+    }
+    let better = |fit: &Fit| {
+        let (this, best) = (aicc(fit, n_effective), best);
+        this.zip(best).is_some_and(|(this, best)| this < best - SWITCH_ABOVE)
+    };
+    (0..fits.len())
+        .filter(|&i| {
+            let fit = &fits[i];
+            !turning(fit) || (turns_within(fit, oldest, newest) && better(fit))
+        })
+        .collect()
+}
+
+/// Whether a polynomial changes direction inside the central 80 % of the ages.
+fn turns_within(fit: &Fit, oldest: f64, newest: f64) -> bool {
+    let edge = 0.1 * (newest - oldest);
+    let (from, to) = (fit.frame.inside(oldest + edge), fit.frame.inside(newest - edge));
+    let [_, b1, b2, b3] = fit.inner;
+    let slope = |u: f64| b1 + u * (2.0 * b2 + 3.0 * u * b3);
+    let crosses = |a: f64, b: f64| (slope(a) > 0.0) != (slope(b) > 0.0);
+    // The slope is a parabola: between its vertex and either end it crosses 0 at most once.
+    let vertex = (-b2 / (3.0 * b3)).clamp(from, to);
+    crosses(from, to) || (vertex.is_finite() && (crosses(from, vertex) || crosses(vertex, to)))
+}
+
 /// exp(−Δ/2), normalised; all on the chosen one where no AICc can be had.
 fn weights(values: &[Option<f64>], chosen: usize) -> Vec<f64> {
     let least = values.iter().flatten().copied().fold(f64::INFINITY, f64::min);
