@@ -52,6 +52,8 @@ pub const SEARCH_QUICK: Search = Search {
 const SECOND_AGE_SHARE: f64 = 1.0 / 15.0;
 /// A robust start keeps so far from exponent 0, where c and a run off to infinity.
 const EXPONENT_START_MIN: f64 = 0.01;
+/// Most secants of the polish; each doubles the digits, nearly.
+const SECANTS_MAX: usize = 12;
 const GOLDEN: f64 = 0.618_033_988_749_894_9;
 
 /// Returns the inner coefficients with the smallest sum of squares, or what the data leave open.
@@ -95,6 +97,7 @@ pub fn project(
         }
         _ => {}
     }
+    let found = if search.quick { found } else { profile.polished(family, found, margin) };
     Ok(profile.coefficients(found))
 }
 
@@ -201,6 +204,48 @@ impl<'a> Profile<'a> {
             }
         }
         0.5 * (a + b)
+    }
+
+    /// Half the derivative of the sum of squares, up to a factor that does not change sign: the
+    /// residuals are free of all that the line explains, so that only the nonlinear coefficient's own
+    /// column is left.
+    fn slope(&mut self, family: Family, k: f64) -> Option<f64> {
+        let line = self.line(k)?;
+        let points =
+            self.column.iter().zip(self.data.y).zip(self.data.u.iter().zip(&self.data.ln_u));
+        let sum: f64 = points
+            .map(|((g, y), (&u, &ln_u))| {
+                let own = match family {
+                    Family::Exponential => u * (-u / k.exp()).exp(),
+                    _ => ln_u * (k * ln_u).exp(),
+                };
+                (y - line.level - line.slope * g) * own
+            })
+            .sum();
+        sum.is_finite().then_some(sum)
+    }
+
+    /// The root of the derivative next to a place that the sums of squares gave, by secants: they tell
+    /// the place to half the digits only. The place itself where no root is found within `reach`.
+    fn polished(&mut self, family: Family, found: f64, reach: f64) -> f64 {
+        let (mut before, mut here) = (found + 1e-3 * reach, found);
+        let (Some(mut at_before), Some(mut at_here)) =
+            (self.slope(family, before), self.slope(family, here))
+        else {
+            return found;
+        };
+        for _ in 0..SECANTS_MAX {
+            let next = here - at_here * (here - before) / (at_here - at_before);
+            if !next.is_finite() || (next - found).abs() > reach {
+                break;
+            }
+            let Some(at_next) = self.slope(family, next) else { break };
+            if at_next.abs() >= at_here.abs() {
+                break;
+            }
+            (before, at_before, here, at_here) = (here, at_here, next, at_next);
+        }
+        here
     }
 
     /// The family's own coefficients with the nonlinear one at `k`.

@@ -150,7 +150,8 @@ impl Form<'_> {
             let value = (self.value(z).log - at_saddle).exp() / (z * side);
             value.re * width * w.cosh()
         };
-        let integral = trapezoid(integrand)?;
+        // On the real line logarithms of negative pivots have no side; the value there is known.
+        let integral = trapezoid(width / s, integrand)?;
         let probability = at_saddle.exp() * integral / PI;
         probability.is_finite().then_some(probability.clamp(0.0, 1.0))
     }
@@ -236,8 +237,8 @@ fn saddle(f: impl Fn(f64) -> f64) -> Option<f64> {
     (best.is_finite() && s > 0.0).then_some(s)
 }
 
-/// ∫ f(w) dw over w ≥ 0 of an even analytic function, by halved steps until two sums agree.
-fn trapezoid(f: impl Fn(f64) -> f64) -> Option<f64> {
+/// ∫ f(w) dw over w ≥ 0 of an even analytic function with that value at 0, by halved steps until two sums agree.
+fn trapezoid(at_zero: f64, f: impl Fn(f64) -> f64) -> Option<f64> {
     let mut step = FIRST_STEP;
     let sum = |from: f64, by: f64| {
         let (mut sum, mut w, mut least) = (0.0, from, 0);
@@ -245,12 +246,12 @@ fn trapezoid(f: impl Fn(f64) -> f64) -> Option<f64> {
         while least < 2 && w < 200.0 {
             let term = f(w);
             sum += term;
-            least = if term.abs() <= NEGLIGIBLE * f(0.0).abs() { least + 1 } else { 0 };
+            least = if term.abs() <= NEGLIGIBLE * at_zero { least + 1 } else { 0 };
             w += by;
         }
         sum
     };
-    let mut total = 0.5 * f(0.0) + sum(step, step);
+    let mut total = 0.5 * at_zero + sum(step, step);
     let mut before = total * step;
     for _ in 0..HALVINGS_MAX {
         total += sum(0.5 * step, step);
