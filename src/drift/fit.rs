@@ -211,8 +211,8 @@ fn finish(
     let (theta, turn) = data.frame.outside(family, &inner);
     let factor = turn * solved.factor;
     let mut standard_errors = [0.0; COEFFICIENTS_MAX];
-    for k in 0..p {
-        standard_errors[k] = residual_sd * factor.row(k).norm();
+    for (k, error) in standard_errors.iter_mut().enumerate().take(p) {
+        *error = residual_sd * factor.row(k).norm();
     }
     let numbers = theta.iter().chain(&standard_errors).chain([&residual_ss, &total_ss]);
     if !numbers.into_iter().all(|v| v.is_finite()) {

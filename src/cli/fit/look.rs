@@ -14,6 +14,10 @@ pub const LEVEL: f64 = 0.95;
 /// A test's p-value below this is worth a caution (common practice, no source).
 const TELLING: f64 = 0.01;
 
+/// The caution about predictions beyond the readings.
+pub const EXTRAPOLATED: &str =
+    "beyond the readings nothing here tells whether the curve goes on like this";
+
 /// What was found.
 #[derive(Clone, Debug)]
 pub struct Look {
@@ -104,11 +108,18 @@ fn rank(fits: &[Fit], x: &[f64], y: &[f64], spacing: &[f64]) -> Ranking {
         let choice = choose(&among, n_effective, None);
         (candidates[choice.chosen], choice)
     };
-    let n = crate::drift::serial::effective_count(x.len(), 0.0);
-    let (first, _) = pick(n);
-    let phi = own_correlation(&fits[first], x, y, spacing);
-    let n_effective = effective_count(x.len(), phi);
-    let (chosen, choice) = pick(n_effective);
+    let all = effective_count(x.len(), 0.0);
+    let phi = own_correlation(&fits[pick(all).0], x, y, spacing);
+    let mut n_effective = effective_count(x.len(), phi);
+    // Where dependence leaves too few readings for any comparison, all of them have to do.
+    let few = fits.iter().all(|fit| aicc(fit, n_effective).is_none());
+    if few {
+        n_effective = all;
+    }
+    let (chosen, mut choice) = pick(n_effective);
+    if few && fits.len() > 1 && fits.iter().any(|fit| aicc(fit, all).is_some()) {
+        choice.why.push_str("; compared as if the readings were independent, which they are not");
+    }
     let mut order: Vec<usize> = (0..fits.len()).collect();
     let key = |i: usize| {
         let value = aicc(&fits[i], n_effective);
@@ -177,10 +188,7 @@ impl Curve {
             cautions.push("the scatter changes along the curve".to_owned());
         }
         if self.predictions.iter().any(|p| p.extrapolated) {
-            cautions.push(
-                "beyond the readings nothing here tells whether the curve goes on like this"
-                    .to_owned(),
-            );
+            cautions.push(EXTRAPOLATED.to_owned());
         }
         cautions
     }

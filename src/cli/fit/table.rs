@@ -1,6 +1,6 @@
 //! One look as people read it.
 
-use super::look::{Curve, LEVEL, Look, Prediction};
+use super::look::{Curve, EXTRAPOLATED, LEVEL, Look, Prediction};
 use super::series::Series;
 use std::io::{self, Write};
 
@@ -26,6 +26,9 @@ pub fn write(look: &Look, series: &Series, out: &mut dyn Write) -> io::Result<()
     for curve in &look.curves {
         writeln!(out)?;
         write_curve(curve, out)?;
+    }
+    if look.curves.iter().any(|curve| curve.cautions.iter().any(|c| c == EXTRAPOLATED)) {
+        writeln!(out, "\n{EXTRAPOLATED}")?;
     }
     if !look.not_fitted.is_empty() {
         writeln!(out, "\nnot fitted")?;
@@ -66,7 +69,7 @@ fn write_curve(curve: &Curve, out: &mut dyn Write) -> io::Result<()> {
     for prediction in &curve.predictions {
         writeln!(out, "  {}", prediction_words(prediction))?;
     }
-    for caution in &curve.cautions {
+    for caution in curve.cautions.iter().filter(|caution| *caution != EXTRAPOLATED) {
         writeln!(out, "  caution: {caution}")?;
     }
     Ok(())

@@ -100,13 +100,11 @@ fn moments(basis: &[Coefficients], p: usize) -> (f64, f64) {
     };
     let mut once = [[0.0; COEFFICIENTS_MAX]; COEFFICIENTS_MAX];
     let mut twice = 0.0;
-    for i in 0..n {
-        for k in 0..p {
+    for (i, row) in basis.iter().enumerate() {
+        for (k, sums) in once.iter_mut().enumerate().take(p) {
             let a = difference(i, k);
             twice += a * a;
-            for (l, entry) in once[k].iter_mut().enumerate().take(p) {
-                *entry += a * basis[i][l];
-            }
+            sums.iter_mut().zip(row).for_each(|(sum, v)| *sum += a * v);
         }
     }
     let trace: f64 = (0..p).map(|k| once[k][k]).sum();
@@ -189,16 +187,16 @@ impl Form<'_> {
             negative.0 += usize::from(pivot.re < 0.0);
             log += pivot.ln();
         }
-        for k in 0..self.p {
-            for l in 0..k {
+        for l in 0..self.p {
+            for k in l + 1..self.p {
                 let multiplier = gram[k][l] / gram[l][l];
-                for m in l + 1..=k {
-                    let change = multiplier * gram[m][l];
-                    gram[k][m] -= change;
+                let column: Vec<Complex<f64>> = (l + 1..=k).map(|m| gram[m][l]).collect();
+                for (entry, v) in gram[k][l + 1..=k].iter_mut().zip(column) {
+                    *entry -= multiplier * v;
                 }
             }
-            negative.1 += usize::from(gram[k][k].re < 0.0);
-            log += gram[k][k].ln();
+            negative.1 += usize::from(gram[l][l].re < 0.0);
+            log += gram[l][l].ln();
         }
         // Haynsworth's inertia formula: as many negative pivots as the columns X account for.
         Value { log: log * -0.5, inside: negative.0 == negative.1 }

@@ -63,7 +63,7 @@ fn probability(a: usize, b: usize, r: usize) -> f64 {
         |n: usize, k: usize| if k > n { f64::NEG_INFINITY } else { ln_binomial(big(n), big(k)) };
     let all = choose(a + b, a);
     let k = r / 2;
-    if r % 2 == 0 {
+    if r.is_multiple_of(2) {
         2.0 * (choose(a - 1, k - 1) + choose(b - 1, k - 1) - all).exp()
     } else {
         (choose(a - 1, k) + choose(b - 1, k - 1) - all).exp()
