@@ -10,6 +10,8 @@ pub mod least_squares;
 pub mod outcome;
 pub mod projection;
 pub mod reach;
+#[cfg(test)]
+pub(crate) mod reference;
 pub mod refine;
 pub mod residual_tests;
 pub mod serial;
