@@ -184,4 +184,30 @@ mod tests {
         assert_eq!(family, Family::Logarithmic, "{why}");
         assert!(why.contains("AICc better than"), "{why}");
     }
+
+    /// Fits linear and quadratic to y(x) on 1..=60 and says which may be chosen for one look.
+    fn candidates(y: impl Fn(f64) -> f64) -> Vec<Family> {
+        let x: Vec<f64> = (1..=60).map(f64::from).collect();
+        let y: Vec<f64> = x.iter().map(|&v| y(v) + 0.05 * (v * 7.3).sin()).collect();
+        let fits: Vec<Fit> = [Family::Linear, Family::Quadratic, Family::Cubic]
+            .iter()
+            .filter_map(|&family| match fit(family, &x, &y, false) {
+                FitOutcome::Fitted(fit) => Some(*fit),
+                _ => None,
+            })
+            .collect();
+        eligible(&fits, 60.0, 1.0, 60.0).into_iter().map(|i| fits[i].family).collect()
+    }
+
+    #[test]
+    fn a_polynomial_is_eligible_only_where_it_turns_within_the_readings() {
+        let all = [Family::Linear, Family::Quadratic, Family::Cubic];
+        assert_eq!(candidates(|x| 0.01 * (x - 30.0).powi(2)), all);
+        // Curved, but rising all along; turning, but only past the readings' central part.
+        assert_eq!(candidates(|x| 0.01 * (x + 30.0).powi(2)), all[..1]);
+        assert_eq!(candidates(|x| 0.01 * (x - 4.0).powi(2)), all[..1]);
+        // A cubic that rises, falls and rises has the same sign of slope at both ends.
+        let wave = candidates(|x| 1e-3 * (x - 15.0) * (x - 30.0) * (x - 45.0));
+        assert!(wave.contains(&Family::Cubic), "{wave:?}");
+    }
 }

@@ -79,6 +79,37 @@ fn student_quantile(probability: f64, freedom: f64) -> f64 {
 #[cfg(test)]
 mod tests {
     use super::*;
+    use crate::drift::family::Family;
+    use crate::drift::fit::{FitOutcome, fit};
+    use crate::drift::reference::{CENSUS, MISRA1A, NORRIS};
+
+    /// (value, low, high) of a new reading at `x`.
+    fn check(family: Family, data: &[(f64, f64)], at: f64, want: [f64; 3]) {
+        let (x, y): (Vec<f64>, Vec<f64>) = data.iter().copied().unzip();
+        let FitOutcome::Fitted(fit) = fit(family, &x, &y, false) else { panic!("a curve") };
+        let interval = Intervals::new(&fit, &x, 0.95).unwrap().at(at).unwrap();
+        for (got, want) in [interval.value, interval.low, interval.high].into_iter().zip(want) {
+            assert!((got / want - 1.0).abs() < 1e-9, "{family:?}: {got} against {want}");
+        }
+    }
+
+    #[test]
+    fn reference_prediction_intervals() {
+        // predict() of R, computed again with 80 digits (mpmath); raw years keep their digits too.
+        let line = [1_251.080_947_588_367_4, 1_249.119_308_674_206_5, 1_253.042_586_502_528_4];
+        check(Family::Linear, &NORRIS, 1248.7, line);
+        let cubic = [317.484_195_838_024_8, 295.800_820_693_068, 339.167_570_982_980_84];
+        check(Family::Cubic, &CENSUS, 2015.0, cubic);
+        let settling = [95.972_237_583_090_79, 95.692_070_940_604_57, 96.252_404_225_577_01];
+        check(Family::Exponential, &MISRA1A, 930.6, settling);
+    }
+
+    #[test]
+    fn a_curve_has_no_value_outside_its_domain() {
+        let (x, y): (Vec<f64>, Vec<f64>) = MISRA1A.iter().copied().unzip();
+        let FitOutcome::Fitted(fit) = fit(Family::Power, &x, &y, false) else { panic!("a curve") };
+        assert_eq!(Intervals::new(&fit, &x, 0.95).unwrap().at(0.0), None);
+    }
 
     #[test]
     fn student_quantiles_have_their_table_values() {

@@ -1,5 +1,6 @@
 //! A series from a table: two of its columns, sorted by the first.
 
+use crate::service::intake::csv::split;
 use crate::service::shown::Shown;
 use std::fs::File;
 use std::io::{self, Read};
@@ -31,11 +32,8 @@ pub enum SeriesError {
     /// The file cannot be read.
     #[error("{0}")]
     Unreadable(#[from] io::Error),
-    /// The table cannot be read.
-    #[error("{0}")]
-    Table(#[from] csv::Error),
     /// A column is missing or stands twice.
-    #[error("the header is {header}; the column {name} must stand in it once (see --x, --y)")]
+    #[error("the header is \"{header}\"; the column {name} must stand in it once (see --x, --y)")]
     Column {
         /// The header, ready to show.
         header: String,
@@ -69,19 +67,16 @@ impl Series {
         if limited.limit() == 0 {
             return Err(SeriesError::TooLarge);
         }
-        let mut table = csv::ReaderBuilder::new()
-            .flexible(true)
-            .trim(csv::Trim::All)
-            .from_reader(bytes.as_slice());
-        let header = table.byte_headers()?.clone();
-        let (x_at, y_at) = (column(&header, x_name)?, column(&header, y_name)?);
+        let text = String::from_utf8_lossy(&bytes);
+        let text = text.strip_prefix('\u{feff}').unwrap_or(&text);
+        let mut lines = (1..).zip(text.lines()).filter(|(_, line)| !line.trim().is_empty());
+        let header = lines.next().map_or("", |(_, line)| line);
+        let (x_at, y_at) = (column(header, x_name)?, column(header, y_name)?);
         let (mut series, mut readings) = (Series::default(), Vec::new());
-        let mut row = csv::ByteRecord::new();
-        while table.read_byte_record(&mut row)? {
-            let line = row.position().map_or(0, csv::Position::line);
-            match (number(&row, x_at, x_name), number(&row, y_at, y_name)) {
-                (Ok(x), Ok(y)) => readings.push((x, y)),
-                (Err(why), _) | (_, Err(why)) => series.note(format!("line {line}: {why}")),
+        for (number, line) in lines {
+            match reading(line, (x_at, x_name), (y_at, y_name)) {
+                Ok(reading) => readings.push(reading),
+                Err(why) => series.note(format!("line {number}: {why}")),
             }
             if readings.len() > READINGS_MAX {
                 return Err(SeriesError::TooLong);
@@ -109,29 +104,33 @@ impl Series {
     }
 }
 
-fn column(header: &csv::ByteRecord, name: &str) -> Result<usize, SeriesError> {
-    let mut places = header.iter().enumerate().filter(|(_, text)| *text == name.as_bytes());
+/// The place of a column in the header.
+fn column(header: &str, name: &str) -> Result<usize, SeriesError> {
+    let fields = split(header).unwrap_or_default();
+    let mut places = (0..).zip(&fields).filter(|(_, field)| field.trim() == name);
     match (places.next(), places.next()) {
         (Some((at, _)), None) => Ok(at),
-        _ => {
-            let header: Vec<String> =
-                header.iter().map(|text| String::from_utf8_lossy(text).into_owned()).collect();
-            Err(SeriesError::Column {
-                header: Shown(&header.join(","), 200).to_string(),
-                name: Shown(name, 80).to_string(),
-            })
-        }
+        _ => Err(SeriesError::Column {
+            header: Shown(header, 200).to_string(),
+            name: Shown(name, 80).to_string(),
+        }),
     }
 }
 
-fn number(row: &csv::ByteRecord, at: usize, name: &str) -> Result<f64, String> {
-    let name = Shown(name, 80);
-    let text = String::from_utf8_lossy(row.get(at).unwrap_or_default());
-    match text.parse::<f64>() {
-        Ok(number) if number.is_finite() => Ok(number),
-        _ if text.is_empty() => Err(format!("{name} is missing")),
-        _ => Err(format!("{name} is {:?}, not a finite number", Shown(&text, 40).to_string())),
-    }
+/// Two numbers of a row, each column by its place and name.
+fn reading(line: &str, x: (usize, &str), y: (usize, &str)) -> Result<(f64, f64), String> {
+    let fields =
+        split(line).ok_or("a quotation mark is not closed, or stands inside a field".to_owned())?;
+    let number = |(at, name): (usize, &str)| {
+        let text = fields.get(at).map_or("", |field| field.trim());
+        let name = Shown(name, 80);
+        match text.parse::<f64>() {
+            Ok(number) if number.is_finite() => Ok(number),
+            _ if text.is_empty() => Err(format!("{name} is missing")),
+            _ => Err(format!("{name} is \"{}\", not a finite number", Shown(text, 40))),
+        }
+    };
+    Ok((number(x)?, number(y)?))
 }
 
 #[cfg(test)]
@@ -161,7 +160,7 @@ mod tests {
             [
                 "line 4: x is missing",
                 "line 5: y is \"inf\", not a finite number",
-                "line 6: y is \"\\\\u{1b}[2J\", not a finite number",
+                "line 6: y is \"\\u{1b}[2J\", not a finite number",
                 "line 7: y is missing",
             ]
         );

@@ -262,3 +262,78 @@ fn trapezoid(at_zero: f64, f: impl Fn(f64) -> f64) -> Option<f64> {
     }
     before.is_finite().then_some(before)
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    /// Orthonormal constant and `more` of the difference matrix's own columns, slowest or fastest.
+    fn own_columns(n: usize, more: usize, slowest: bool) -> Vec<Coefficients> {
+        let column = |j: usize, i: usize| {
+            let size = if j == 0 { 1.0 } else { 2.0 } / count(n);
+            size.sqrt() * (PI * count(j) * (count(i) + 0.5) / count(n)).cos()
+        };
+        (0..n)
+            .map(|i| {
+                let mut row = [0.0; COEFFICIENTS_MAX];
+                for (k, entry) in row.iter_mut().enumerate().take(more + 1) {
+                    let j = if slowest || k == 0 { k } else { n - k };
+                    *entry = column(j, i);
+                }
+                row
+            })
+            .collect()
+    }
+
+    #[test]
+    fn reference_bounds_of_savin_and_white() {
+        // Savin and White (1977), Econometrica 45, 5 % points, three decimals (from memory), with more
+        // digits from the eigenvalues 4 sin²(πj/2n) and Imhof's integral: (n, regressors, dL, dU).
+        for (n, k, lower, upper) in [
+            (6, 1, 0.610_181_765_496_911_4, 1.400_144_854_805_714_5),
+            (10, 2, 0.697_150_371_513_901_8, 1.641_341_718_468_434),
+            (20, 2, 1.100_399_469_671_241_7, 1.536_681_325_443_812),
+            (50, 3, 1.420_587_690_068_005, 1.673_845_488_900_251_6),
+            (100, 2, 1.633_690_181_548_343, 1.715_168_473_914_555_8),
+        ] {
+            for (d, slowest) in [(lower, false), (upper, true)] {
+                let basis = own_columns(n, k, slowest);
+                let p = Form { d, basis: &basis, p: k + 1 }.tail(-1.0).unwrap();
+                assert!((p - 0.05).abs() < 1e-7, "n {n}, {k} regressors, d {d}: {p}");
+                let above = Form { d, basis: &basis, p: k + 1 }.tail(1.0).unwrap();
+                assert!((above - 0.95).abs() < 1e-7, "n {n}, {k} regressors, d {d}: {above}");
+            }
+        }
+    }
+
+    #[test]
+    fn moments_are_those_of_the_eigenvalues() {
+        // Within own columns the eigenvalues that remain are known: 4 sin²(πj/2n).
+        let (n, k) = (12, 2);
+        let left: Vec<f64> =
+            (k + 1..n).map(|j| 4.0 * (PI * count(j) / (2.0 * count(n))).sin().powi(2)).collect();
+        let m = count(left.len());
+        let mean = left.iter().sum::<f64>() / m;
+        let spread: f64 = left.iter().map(|v| (v - mean).powi(2)).sum();
+        let (got_mean, got_variance) = moments(&own_columns(n, k, true), k + 1);
+        assert!((got_mean - mean).abs() < 1e-12, "{got_mean}, {mean}");
+        assert!((got_variance - 2.0 * spread / (m * (m + 2.0))).abs() < 1e-12);
+    }
+
+    #[test]
+    fn long_series_get_the_normal_approximation_which_agrees() {
+        let basis = own_columns(400, 1, true);
+        for d in [1.8, 1.95, 2.1] {
+            let exact = Form { d, basis: &basis, p: 2 }.tail(-1.0).unwrap();
+            let near = approximate(d, &basis, 2).p_positive;
+            assert!((exact - near).abs() < 1e-3, "{d}: {exact}, {near}");
+        }
+    }
+
+    #[test]
+    fn nothing_is_said_without_scatter_or_freedom() {
+        let basis = own_columns(5, 3, true);
+        assert_eq!(durbin_watson(&[0.0; 5], &basis, 2), None);
+        assert_eq!(durbin_watson(&[1.0, -1.0, 0.5, 0.2, -0.7], &basis, 4), None);
+    }
+}

@@ -74,3 +74,46 @@ fn probability(a: usize, b: usize, r: usize) -> f64 {
 fn big(n: usize) -> u64 {
     u64::try_from(n).expect("a count fits 64 bits")
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    /// Residuals of the signs given by `+`, `-` and `0`.
+    fn check(signs: &str) -> Option<Runs> {
+        let sign = |c| match c {
+            '+' => 1.0,
+            '-' => -1.0,
+            _ => 0.0,
+        };
+        runs(&signs.chars().map(sign).collect::<Vec<f64>>())
+    }
+
+    #[test]
+    fn reference_exact_distribution() {
+        // Counted by hand: of the C(4, 2) = 6 orders of two and two, 2 have two runs, 2 three, 2 four.
+        for (r, share) in [(2, 2.0), (3, 2.0), (4, 2.0), (5, 0.0)] {
+            assert!((probability(2, 2, r) - share / 6.0).abs() < 1e-12, "{r} runs");
+        }
+        // Swed and Eisenhart (1943), ten and ten: P(at most 6 runs) = 1711/92378 (rational arithmetic).
+        let six = check("++++--++++--++------").unwrap();
+        assert_eq!((six.positive, six.negative, six.runs), (10, 10, 6));
+        assert!((six.p_exact - 2.0 * 1711.0 / 92378.0).abs() < 1e-10, "{six:?}");
+        assert!((six.z + 2.297_341_458_681_703_6).abs() < 1e-12, "{six:?}");
+        assert!((six.p_value - 0.021_599_298_490_998_158).abs() < 1e-12, "{six:?}");
+    }
+
+    #[test]
+    fn residuals_without_sign_are_left_out() {
+        assert_eq!(check("+0+-0--"), check("++---"));
+        assert_eq!(check("+++"), None);
+        assert_eq!(check("000"), None);
+    }
+
+    #[test]
+    fn a_regular_change_of_sign_is_as_telling_as_none() {
+        let (often, seldom) = (check("+-+-+-+-+-+-").unwrap(), check("++++++------").unwrap());
+        assert!(often.z > 2.5 && seldom.z < -2.5, "{often:?} {seldom:?}");
+        assert!((often.p_exact - 2.0 * 2.0 / 924.0).abs() < 1e-10, "{often:?}");
+    }
+}
