@@ -33,7 +33,7 @@ fn reference_strd_danwood_power() {
 #[test]
 fn fit_recovers_an_exact_logarithmic_curve() {
     let data: Vec<(f64, f64)> =
-        (1..200).map(f64::from * 30.0).map(|x| (x, -2.0 + 0.5 * x.ln())).collect();
+        (1..200).map(|i| f64::from(i) * 30.0).map(|x| (x, -2.0 + 0.5 * x.ln())).collect();
     let fit = fitted(Family::Logarithmic, &data, false);
     assert!(digits(fit.theta[0], -2.0) > 11.0 && digits(fit.theta[1], 0.5) > 11.0);
 }
