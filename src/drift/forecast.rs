@@ -70,7 +70,10 @@ impl Forecaster {
         let mut noise = None;
         let mut members = Vec::new();
         for (i, fit) in fits.iter().enumerate() {
-            let (covariance, variance) = sandwich(fit, x, &spacing, phi)?;
+            let Some((covariance, variance)) = sandwich(fit, x, &spacing, phi) else {
+                // A family whose uncertainty cannot be had makes no forecast; the others may.
+                continue;
+            };
             if i == choice.chosen {
                 noise = Some(variance);
             }
@@ -199,9 +202,32 @@ mod tests {
         let y: Vec<f64> = noise(7, 50, 0.0).iter().zip(&x).map(|(e, x)| x + e).collect();
         let FitOutcome::Fitted(fit) = fit(Family::Linear, &x, &y, false) else { panic!() };
         let (v, _) = sandwich(&fit, &x, &[1.0; 50], 0.0).unwrap();
-        for k in 0..2 {
-            assert!((v[(k, k)].sqrt() / fit.standard_errors[k] - 1.0).abs() < 1e-9);
+        let errors = fit.standard_errors_of(&v);
+        for (got, want) in errors.iter().zip(fit.standard_errors).take(2) {
+            assert!((got / want - 1.0).abs() < 1e-9, "{got} against {want}");
         }
+    }
+
+    #[test]
+    fn every_monotone_family_forecasts_from_ages_far_from_zero() {
+        let families = [
+            Family::Linear,
+            Family::Logarithmic,
+            Family::Power,
+            Family::OffsetPower,
+            Family::Exponential,
+        ];
+        let x: Vec<f64> = (0..120).map(|i| 400.0 + 0.5 * f64::from(i)).collect();
+        let y: Vec<f64> = noise(11, 120, 0.3)
+            .iter()
+            .zip(&x)
+            .map(|(e, x)| 8.0 * (1.0 - (-(x - 400.0) / 25.0).exp()) + 0.2 * e)
+            .collect();
+        let forecaster = Forecaster::new(&x, &y, &families, 0.3).unwrap();
+        let expected = forecaster.at(x[119] + 10.0);
+        let truth = 8.0 * (1.0 - (-69.5_f64 / 25.0).exp());
+        assert!((expected.value - truth).abs() < 3.0 * expected.sd, "{expected:?}, {truth}");
+        assert!(expected.sd < 0.5, "{expected:?}");
     }
 
     #[test]
