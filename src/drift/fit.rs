@@ -71,7 +71,8 @@ fn fit_in_frame(
     } else if !family.is_linear_in_coefficients() {
         (inner, iterations) = refine_plain(family, data, inner)?;
     }
-    within_bounds(family, data, &inner)?;
+    let tau_max = if robust { SEARCH_QUICK.tau_max() } else { SEARCH_FULL.tau_max() };
+    within_bounds(family, data, &inner, tau_max)?;
     finish(family, data, inner, first.start, iterations)
 }
 
@@ -153,8 +154,13 @@ fn best_on_grid(x: &[f64], y: &[f64]) -> Option<Coefficients> {
     best.map(|(_, theta)| theta)
 }
 
-/// Whether the data pin the nonlinear coefficient down.
-fn within_bounds(family: Family, data: &Data<'_>, inner: &Coefficients) -> Result<(), FitOutcome> {
+/// Whether the data pin the nonlinear coefficient down; `tau_max` in inner ages.
+fn within_bounds(
+    family: Family,
+    data: &Data<'_>,
+    inner: &Coefficients,
+    tau_max: f64,
+) -> Result<(), FitOutcome> {
     let undetermined = |what| Err(FitOutcome::WeaklyDetermined(what));
     match family {
         Family::Power if !(EXPONENT.0..EXPONENT.1).contains(&inner[1]) => {
@@ -166,8 +172,8 @@ fn within_bounds(family: Family, data: &Data<'_>, inner: &Coefficients) -> Resul
         Family::OffsetPower if inner[2].abs() < EXPONENT_MIN => {
             undetermined(Undetermined::Logarithmic { exponent: inner[2] })
         }
-        Family::Exponential if inner[2] <= 0.0 || inner[2] > SEARCH_FULL.tau_max() => {
-            undetermined(Undetermined::Line { tau: SEARCH_FULL.tau_max() * data.frame.scale })
+        Family::Exponential if inner[2] <= 0.0 || inner[2] > tau_max => {
+            undetermined(Undetermined::Line { tau: tau_max * data.frame.scale })
         }
         Family::Exponential => {
             let time_constants = data.frame.centre / (inner[2] * data.frame.scale);

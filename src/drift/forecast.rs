@@ -127,12 +127,17 @@ pub fn fit_all(x: &[f64], y: &[f64], families: &[Family]) -> Vec<Fit> {
 
 /// Returns the correlation of a fit's clipped residuals at the median spacing, bias-corrected.
 pub fn own_correlation(fit: &Fit, x: &[f64], y: &[f64], spacing: &[f64]) -> f64 {
+    lag_correlation(&winsorised(fit, x, y), spacing, fit.family.parameter_count())
+}
+
+/// Residuals clipped at 3 robust standard deviations.
+pub fn winsorised(fit: &Fit, x: &[f64], y: &[f64]) -> Vec<f64> {
     let mut residuals = fit.residuals(x, y);
     let limit = CLIP_WINSOR * robust_scale(&residuals);
     if limit > 0.0 {
         residuals.iter_mut().for_each(|r| *r = r.clamp(-limit, limit));
     }
-    lag_correlation(&residuals, spacing, fit.family.parameter_count())
+    residuals
 }
 
 fn newer_half(x: &[f64], y: &[f64], family: Family, phi: f64) -> Option<Member> {

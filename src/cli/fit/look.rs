@@ -1,12 +1,12 @@
 //! What one look at one series finds, and its JSON.
 
-use crate::drift::choose::{Choice, aicc, aicc_classical, choose, eligible};
+use crate::drift::choose::{Choice, SWITCH_ABOVE, aicc, aicc_classical, choose, eligible};
 use crate::drift::family::{Coefficients, Family};
 use crate::drift::fit::{Fit, FitOutcome, fit};
-use crate::drift::forecast::{own_correlation, sandwich};
+use crate::drift::forecast::{sandwich, winsorised};
 use crate::drift::interval::{Interval, Intervals};
 use crate::drift::residual_tests::{ResidualTests, test_residuals};
-use crate::drift::serial::{effective_count, spacing_of};
+use crate::drift::serial::{effective_count, lag_correlation_short, spacing_of};
 use serde_json::{Map, Value, json};
 
 /// Level of the intervals.
@@ -91,6 +91,11 @@ fn spacing(x: &[f64]) -> Vec<f64> {
     }
 }
 
+/// Correlation of a curve's neighbouring residuals.
+fn lag1(fit: &Fit, x: &[f64], y: &[f64], spacing: &[f64]) -> f64 {
+    lag_correlation_short(&winsorised(fit, x, y), spacing, fit.family.parameter_count())
+}
+
 struct Ranking {
     order: Vec<usize>,
     choice: Option<Choice>,
@@ -109,7 +114,7 @@ fn rank(fits: &[Fit], x: &[f64], y: &[f64], spacing: &[f64]) -> Ranking {
         (candidates[choice.chosen], choice)
     };
     let all = effective_count(x.len(), 0.0);
-    let phi = own_correlation(&fits[pick(all).0], x, y, spacing);
+    let phi = lag1(&fits[pick(all).0], x, y, spacing);
     let mut n_effective = effective_count(x.len(), phi);
     // Where dependence leaves too few readings for any comparison, all of them have to do.
     let few = fits.iter().all(|fit| aicc(fit, n_effective).is_none());
@@ -119,6 +124,17 @@ fn rank(fits: &[Fit], x: &[f64], y: &[f64], spacing: &[f64]) -> Ranking {
     let (chosen, mut choice) = pick(n_effective);
     if few && fits.len() > 1 && fits.iter().any(|fit| aicc(fit, all).is_some()) {
         choice.why.push_str("; compared as if the readings were independent, which they are not");
+    }
+    let behind = |i: usize| Some(aicc(&fits[chosen], n_effective)? - aicc(&fits[i], n_effective)?);
+    let better = (0..fits.len()).filter_map(|i| Some((behind(i)?, fits[i].family)));
+    if let Some((by, family)) = better.max_by(|a, b| a.0.total_cmp(&b.0))
+        && by > SWITCH_ABOVE
+    {
+        let name = family.name();
+        choice.why.push_str(&format!(
+            "; {name} is {by:.1} AICc better, but does not turn within the readings and would go \
+             astray beyond them"
+        ));
     }
     let mut order: Vec<usize> = (0..fits.len()).collect();
     let key = |i: usize| {
@@ -131,7 +147,7 @@ fn rank(fits: &[Fit], x: &[f64], y: &[f64], spacing: &[f64]) -> Ranking {
 
 impl Curve {
     fn examine(fit: &Fit, x: &[f64], y: &[f64], spacing: &[f64], at: &[f64]) -> Curve {
-        let lag1 = own_correlation(fit, x, y, spacing);
+        let lag1 = lag1(fit, x, y, spacing);
         let serial_errors = sandwich(fit, x, spacing, lag1.clamp(0.0, 0.97))
             .map(|(covariance, _)| fit.standard_errors_of(&covariance));
         let intervals = Intervals::new(fit, x, LEVEL);
