@@ -205,4 +205,14 @@ mod tests {
         assert!(refusal(&["--family", "spline"]).contains("one of linear, logarithmic, power"));
         assert!(refusal(&["--at", "NaN"]).contains("a finite number is needed"));
     }
+
+    #[test]
+    fn a_family_is_not_passed_over_for_having_more_coefficients() {
+        // NIST StRD, Misra1a (US public domain): residuals so alike that few readings are independent.
+        let rows = crate::drift::reference::MISRA1A.map(|(x, y)| format!("{x},{y}\n")).concat();
+        let look = json(&format!("x,y\n{rows}"), &[]);
+        assert_eq!(look["chosen"], "exponential", "{}", look["why"]);
+        let why = look["why"].as_str().unwrap();
+        assert!(why.contains("; compared as if the readings were independent"), "{why}");
+    }
 }

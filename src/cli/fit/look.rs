@@ -116,13 +116,14 @@ fn rank(fits: &[Fit], x: &[f64], y: &[f64], spacing: &[f64]) -> Ranking {
     let all = effective_count(x.len(), 0.0);
     let phi = lag1(&fits[pick(all).0], x, y, spacing);
     let mut n_effective = effective_count(x.len(), phi);
-    // Where dependence leaves too few readings for any comparison, all of them have to do.
-    let few = fits.iter().all(|fit| aicc(fit, n_effective).is_none());
+    // Where dependence leaves too few readings to compare every family, all of them have to do.
+    let lost = |fit: &Fit| aicc(fit, n_effective).is_none() && aicc(fit, all).is_some();
+    let few = fits.iter().any(lost);
     if few {
         n_effective = all;
     }
     let (chosen, mut choice) = pick(n_effective);
-    if few && fits.len() > 1 && fits.iter().any(|fit| aicc(fit, all).is_some()) {
+    if few && fits.len() > 1 {
         choice.why.push_str("; compared as if the readings were independent, which they are not");
     }
     let behind = |i: usize| Some(aicc(&fits[chosen], n_effective)? - aicc(&fits[i], n_effective)?);
