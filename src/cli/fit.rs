@@ -215,4 +215,18 @@ mod tests {
         let why = look["why"].as_str().unwrap();
         assert!(why.contains("; compared as if the readings were independent"), "{why}");
     }
+
+    #[test]
+    fn among_curves_through_every_reading_the_plainest_is_chosen() {
+        let flat = json("x,y\n1,3\n2,3\n3,3\n4,3\n5,3\n6,3\n", &[]);
+        let line = json("x,y\n1,2\n2,4\n3,6\n4,8\n5,10\n6,12\n7,14\n", &[]);
+        for look in [flat, line] {
+            let why = "linear, the plainest curve that passes through every reading";
+            assert_eq!((&look["chosen"], &look["why"]), (&"linear".into(), &why.into()));
+            assert_eq!(look["fits"][0]["residual_tests"]["runs"], serde_json::Value::Null);
+            let caution =
+                "the curve passes through every reading: its errors are those of rounding";
+            assert_eq!(look["fits"][0]["cautions"], serde_json::json!([caution]));
+        }
+    }
 }

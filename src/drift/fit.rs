@@ -96,12 +96,12 @@ fn begin(
     }
     let search = if robust { SEARCH_QUICK } else { SEARCH_FULL };
     if family != Family::Power {
-        let inner = project(family, data, search).map_err(FitOutcome::WeaklyDetermined)?;
+        let inner = project(family, data, search)?;
         return Ok(Beginning { inner, start: Some(outside(&inner)) });
     }
     let start = log_log_line(x, data.y);
     let inner = match start {
-        _ if !robust => project(family, data, search).map_err(FitOutcome::WeaklyDetermined)?,
+        _ if !robust => project(family, data, search)?,
         Some(theta) if (EXPONENT.0..EXPONENT.1).contains(&theta[1]) => theta,
         _ => best_on_grid(x, data.y).ok_or(FitOutcome::Entangled)?,
     };
@@ -221,7 +221,8 @@ fn finish(
         *error = residual_sd * factor.row(k).norm();
     }
     let numbers = theta.iter().chain(&standard_errors).chain([&residual_ss, &total_ss]);
-    if !numbers.into_iter().all(|v| v.is_finite()) {
+    let vanished = residual_ss <= 0.0 && residuals.iter().any(|r| r.abs() > 0.0);
+    if vanished || !numbers.into_iter().all(|v| v.is_finite()) {
         return Err(FitOutcome::NonFinite);
     }
     Ok(Fit {

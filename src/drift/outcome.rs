@@ -189,7 +189,7 @@ impl FitOutcome {
             FitOutcome::NotConverged { iterations } => {
                 format!("the fit did not settle in {iterations} steps")
             }
-            FitOutcome::NonFinite => "a number is not finite or too large".to_owned(),
+            FitOutcome::NonFinite => "a number is not finite, or too large or small".to_owned(),
             FitOutcome::WeaklyDetermined(what) => what.words(),
         })
     }

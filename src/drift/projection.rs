@@ -2,7 +2,7 @@
 //! is a search in one dimension.
 
 use crate::drift::family::{Coefficients, Family};
-use crate::drift::outcome::{EXPONENT, EXPONENT_MIN, Undetermined};
+use crate::drift::outcome::{EXPONENT, EXPONENT_MIN, FitOutcome, Undetermined};
 use crate::drift::refine::Data;
 use crate::drift::serial::count;
 
@@ -56,7 +56,7 @@ const EXPONENT_START_MIN: f64 = 0.01;
 const SECANTS_MAX: usize = 12;
 const GOLDEN: f64 = 0.618_033_988_749_894_9;
 
-/// Returns the inner coefficients with the smallest sum of squares, or what the data leave open.
+/// Returns the inner coefficients with the smallest sum of squares, or why there are none.
 ///
 /// # Arguments
 /// `family` — power, offset-power or exponential; `data` — in the family's frame, or as they are.
@@ -72,10 +72,14 @@ pub fn project(
     family: Family,
     data: &Data<'_>,
     search: Search,
-) -> Result<Coefficients, Undetermined> {
+) -> Result<Coefficients, FitOutcome> {
     let mut profile = Profile::new(family, data);
-    if profile.total <= 0.0 {
-        return Err(Undetermined::NoChange);
+    let undetermined = |what| Err(FitOutcome::WeaklyDetermined(what));
+    if data.y.iter().all(|v| (v - profile.mean).abs() <= 0.0) {
+        return undetermined(Undetermined::NoChange);
+    }
+    if !(profile.total.is_finite() && profile.total > 0.0) {
+        return Err(FitOutcome::NonFinite);
     }
     let (low, high, step) = range(family, data, search);
     let found = profile.least(low, high, step, search.golden_steps);
@@ -83,17 +87,17 @@ pub fn project(
     let (at_low, at_high) = (found <= low + margin, found >= high - margin);
     match family {
         Family::Exponential if at_low => {
-            return Err(Undetermined::Step { tau: low.exp() * data.frame.scale });
+            return undetermined(Undetermined::Step { tau: low.exp() * data.frame.scale });
         }
         Family::Exponential if at_high => {
-            return Err(Undetermined::Line { tau: high.exp() * data.frame.scale });
+            return undetermined(Undetermined::Line { tau: high.exp() * data.frame.scale });
         }
-        _ if at_low || at_high => return Err(Undetermined::Exponent { exponent: found }),
+        _ if at_low || at_high => return undetermined(Undetermined::Exponent { exponent: found }),
         Family::OffsetPower if search.quick && found.abs() < EXPONENT_START_MIN => {
             return Ok(profile.coefficients(EXPONENT_START_MIN.copysign(found)));
         }
         Family::OffsetPower if found.abs() < EXPONENT_MIN => {
-            return Err(Undetermined::Logarithmic { exponent: found });
+            return undetermined(Undetermined::Logarithmic { exponent: found });
         }
         _ => {}
     }
@@ -255,6 +259,56 @@ impl<'a> Profile<'a> {
             Family::Exponential => [level, slope * k.exp(), k.exp(), 0.0],
             Family::OffsetPower => [level - slope / k, slope / k, k, 0.0],
             _ => [slope, k, 0.0, 0.0],
+        }
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::drift::frame::Frame;
+    use crate::drift::reference::MISRA1A;
+
+    #[test]
+    fn slope_agrees_with_central_differences_of_the_sum_of_squares() {
+        let (x, y): (Vec<f64>, Vec<f64>) = MISRA1A.iter().copied().unzip();
+        for (family, places) in [
+            (Family::Power, [-1.0, 0.5, 1.7]),
+            (Family::OffsetPower, [-0.8, 0.3, 2.0]),
+            (Family::Exponential, [-1.5, 0.2, 2.5]),
+        ] {
+            let frame = Frame::of(family, &x).unwrap();
+            let data = Data::new(family, frame, &x, &y);
+            let mut profile = Profile::new(family, &data);
+            for k in places {
+                let h = 1e-5;
+                let numeric = (profile.left(k + h) - profile.left(k - h)) / (2.0 * h);
+                let line = profile.line(k).unwrap().slope;
+                // What stands before the nonlinear coefficient's own column in each family.
+                let factor = match family {
+                    Family::Exponential => -line,
+                    Family::OffsetPower => line / k,
+                    _ => line,
+                };
+                let analytic = -2.0 * factor * profile.slope(family, k).unwrap();
+                let close = (analytic - numeric).abs() < 1e-6 * numeric.abs();
+                assert!(close, "{family:?} at {k}: {analytic} against {numeric}");
+            }
+        }
+    }
+
+    #[test]
+    fn quick_and_full_search_find_the_same_curve() {
+        let (x, y): (Vec<f64>, Vec<f64>) = MISRA1A.iter().copied().unzip();
+        for family in [Family::Power, Family::OffsetPower, Family::Exponential] {
+            let frame = Frame::of(family, &x).unwrap();
+            let data = Data::new(family, frame, &x, &y);
+            let (full, quick) = (
+                project(family, &data, SEARCH_FULL).unwrap(),
+                project(family, &data, SEARCH_QUICK).unwrap(),
+            );
+            let k = family.parameter_count() - 1;
+            assert!((quick[k] / full[k] - 1.0).abs() < 0.05, "{family:?}: {quick:?}, {full:?}");
         }
     }
 }

@@ -1,6 +1,6 @@
 //! What one look at one series finds, and its JSON.
 
-use crate::drift::choose::{Choice, SWITCH_ABOVE, aicc, aicc_classical, choose, eligible};
+use crate::drift::choose::{SWITCH_ABOVE, aicc, aicc_classical, choose, eligible};
 use crate::drift::family::{Coefficients, Family};
 use crate::drift::fit::{Fit, FitOutcome, fit};
 use crate::drift::forecast::{sandwich, winsorised};
@@ -14,9 +14,15 @@ pub const LEVEL: f64 = 0.95;
 /// A test's p-value below this is worth a caution (common practice, no source).
 const TELLING: f64 = 0.01;
 
+/// Residuals below this share of the largest deviation are rounding noise.
+const ROUNDING: f64 = 1e-13;
+
 /// The caution about predictions beyond the readings.
 pub const EXTRAPOLATED: &str =
     "beyond the readings nothing here tells whether the curve goes on like this";
+
+/// The caution about a curve that leaves nothing.
+const EXACT: &str = "the curve passes through every reading: its errors are those of rounding";
 
 /// What was found.
 #[derive(Clone, Debug)]
@@ -79,7 +85,7 @@ pub fn look(x: &[f64], y: &[f64], families: &[Family], at: &[f64]) -> Look {
     let ranking = rank(&fits, x, y, &spacing);
     let curves =
         ranking.order.iter().map(|&i| Curve::examine(&fits[i], x, y, &spacing, at)).collect();
-    Look { n: x.len(), why: ranking.choice.map(|choice| choice.why), curves, not_fitted }
+    Look { n: x.len(), why: ranking.why, curves, not_fitted }
 }
 
 /// Spacings over their median; by rank where ages are shared.
@@ -98,13 +104,34 @@ fn lag1(fit: &Fit, x: &[f64], y: &[f64], spacing: &[f64]) -> f64 {
 
 struct Ranking {
     order: Vec<usize>,
-    choice: Option<Choice>,
+    why: Option<String>,
+}
+
+/// Whether the curve passes through every reading to rounding.
+fn is_exact(fit: &Fit, y: &[f64]) -> bool {
+    let largest = y.iter().fold(0.0_f64, |m, v| m.max(v.abs()));
+    fit.residual_sd <= ROUNDING * largest
+}
+
+/// The ranking where curves pass through every reading: the plainest of them, for AICc would choose
+/// among rounding errors.
+fn exact_plainest(fits: &[Fit], y: &[f64]) -> Option<Ranking> {
+    let mut order: Vec<usize> = (0..fits.len()).collect();
+    let plainness = |i: usize| Family::ALL.iter().position(|&family| family == fits[i].family);
+    order.sort_by_key(|&i| (!is_exact(&fits[i], y), plainness(i)));
+    let first = order.first().filter(|&&i| is_exact(&fits[i], y))?;
+    let name = fits[*first].family.name();
+    let why = format!("{name}, the plainest curve that passes through every reading");
+    Some(Ranking { order, why: Some(why) })
 }
 
 /// The chosen fit first, the others by AICc on the independent readings.
 fn rank(fits: &[Fit], x: &[f64], y: &[f64], spacing: &[f64]) -> Ranking {
     if fits.is_empty() {
-        return Ranking { order: Vec::new(), choice: None };
+        return Ranking { order: Vec::new(), why: None };
+    }
+    if let Some(plainest) = exact_plainest(fits, y) {
+        return plainest;
     }
     let (oldest, newest) = (x[0], x[x.len() - 1]);
     let pick = |n_effective: f64| {
@@ -143,7 +170,7 @@ fn rank(fits: &[Fit], x: &[f64], y: &[f64], spacing: &[f64]) -> Ranking {
         (i != chosen, value.is_none(), value.unwrap_or(fits[i].residual_ss))
     };
     order.sort_by(|&a, &b| key(a).partial_cmp(&key(b)).unwrap_or(std::cmp::Ordering::Equal));
-    Ranking { order, choice: Some(choice) }
+    Ranking { order, why: Some(choice.why) }
 }
 
 impl Curve {
@@ -161,6 +188,7 @@ impl Curve {
                 extrapolated: !(oldest..=newest).contains(&x),
             })
             .collect();
+        let exact = is_exact(fit, y);
         let mut curve = Curve {
             fit: fit.clone(),
             aicc: aicc_classical(fit),
@@ -168,10 +196,13 @@ impl Curve {
             effective_n: effective_count(x.len(), lag1),
             serial_errors,
             predictions,
-            tests: test_residuals(fit, x, y),
+            tests: if exact { ResidualTests::default() } else { test_residuals(fit, x, y) },
             cautions: Vec::new(),
         };
         curve.cautions = curve.cautions();
+        if exact {
+            curve.cautions.push(EXACT.to_owned());
+        }
         curve
     }
 

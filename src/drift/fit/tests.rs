@@ -81,8 +81,15 @@ fn data_that_cannot_carry_a_curve_say_why() {
     assert_eq!(check(Family::Linear, &[2.0; 5], &[1.0; 5]), "all ages are equal");
     assert_eq!(
         check(Family::Linear, &[1.0, 2.0, f64::NAN], &[1.0; 3]),
-        "a number is not finite or too large"
+        "a number is not finite, or too large or small"
     );
+    for (size, family) in
+        [(1e200, Family::Cubic), (1e200, Family::Power), (1e-200, Family::Logarithmic)]
+    {
+        let x = [1.0, 2.0, 3.0, 4.0, 5.0, 6.0].map(|v| size * v);
+        let y = [1.0, 3.0, 2.0, 5.0, 4.0, 7.0].map(|v| size * v);
+        assert_eq!(check(family, &x, &y), "a number is not finite, or too large or small");
+    }
 }
 
 /// Holds every coefficient, its standard error and the residual sum of squares against the values of

@@ -12,7 +12,7 @@ use crate::drift::fit::Fit;
 use crate::drift::interval::Intervals;
 
 /// All tests of one curve's residuals; what cannot be had is None.
-#[derive(Clone, Debug, PartialEq)]
+#[derive(Clone, Debug, Default, PartialEq)]
 pub struct ResidualTests {
     /// Correlation of neighbours.
     pub durbin_watson: Option<durbin_watson::DurbinWatson>,
