@@ -3,6 +3,7 @@
 pub mod check;
 pub mod connect;
 pub mod demo;
+pub mod fit;
 pub mod replay;
 pub mod run;
 
@@ -25,6 +26,7 @@ struct Arguments {
 enum Command {
     Check(check::CheckArgs),
     Demo(demo::DemoArgs),
+    Fit(fit::FitArgs),
     Replay(replay::ReplayArgs),
     Run(run::RunArgs),
 }
@@ -46,6 +48,7 @@ pub fn run(arguments: impl IntoIterator<Item = std::ffi::OsString>) -> u8 {
             check::check(&args, &environment, budget_words, connect::try_all, &mut out, &mut err)
         }
         Command::Demo(_) => demo::demo(&mut out, &mut err),
+        Command::Fit(args) => fit::fit(&args, &mut out, &mut err),
         Command::Run(args) => {
             drop(out);
             return run::run(&args, &environment, &mut err);

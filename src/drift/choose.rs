@@ -75,6 +75,46 @@ pub fn choose(fits: &[Fit], n_effective: f64, current: Option<Family>) -> Choice
     }
 }
 
+/// Returns the indices of the fits among which to choose for one look: every monotone family, and a
+/// polynomial only where it turns within the readings and is better than each of them by more than
+/// [`SWITCH_ABOVE`]. All of them where there is no monotone family.
+///
+/// # Arguments
+/// `fits` — to the same data; `oldest`, `newest` — the range of ages.
+pub fn eligible(fits: &[Fit], n_effective: f64, oldest: f64, newest: f64) -> Vec<usize> {
+    let turning = |fit: &Fit| matches!(fit.family, Family::Quadratic | Family::Cubic);
+    let best = fits
+        .iter()
+        .filter(|fit| !turning(fit))
+        .filter_map(|fit| aicc(fit, n_effective))
+        .min_by(f64::total_cmp);
+    if fits.iter().all(turning) {
+        return (0..fits.len()).collect();
+    }
+    let better = |fit: &Fit| {
+        let (this, best) = (aicc(fit, n_effective), best);
+        this.zip(best).is_some_and(|(this, best)| this < best - SWITCH_ABOVE)
+    };
+    (0..fits.len())
+        .filter(|&i| {
+            let fit = &fits[i];
+            !turning(fit) || (turns_within(fit, oldest, newest) && better(fit))
+        })
+        .collect()
+}
+
+/// Whether a polynomial changes direction inside the central 80 % of the ages.
+fn turns_within(fit: &Fit, oldest: f64, newest: f64) -> bool {
+    let edge = 0.1 * (newest - oldest);
+    let (from, to) = (fit.frame.inside(oldest + edge), fit.frame.inside(newest - edge));
+    let [_, b1, b2, b3] = fit.inner;
+    let slope = |u: f64| b1 + u * (2.0 * b2 + 3.0 * u * b3);
+    let crosses = |a: f64, b: f64| (slope(a) > 0.0) != (slope(b) > 0.0);
+    // The slope is a parabola: between its vertex and either end it crosses 0 at most once.
+    let vertex = (-b2 / (3.0 * b3)).clamp(from, to);
+    crosses(from, to) || (vertex.is_finite() && (crosses(from, vertex) || crosses(vertex, to)))
+}
+
 /// exp(−Δ/2), normalised; all on the chosen one where no AICc can be had.
 fn weights(values: &[Option<f64>], chosen: usize) -> Vec<f64> {
     let least = values.iter().flatten().copied().fold(f64::INFINITY, f64::min);
@@ -143,5 +183,31 @@ mod tests {
         let (family, why) = check(|x| 1.0 + x.ln(), Some(Family::Linear));
         assert_eq!(family, Family::Logarithmic, "{why}");
         assert!(why.contains("AICc better than"), "{why}");
+    }
+
+    /// Fits linear and quadratic to y(x) on 1..=60 and says which may be chosen for one look.
+    fn candidates(y: impl Fn(f64) -> f64) -> Vec<Family> {
+        let x: Vec<f64> = (1..=60).map(f64::from).collect();
+        let y: Vec<f64> = x.iter().map(|&v| y(v) + 0.05 * (v * 7.3).sin()).collect();
+        let fits: Vec<Fit> = [Family::Linear, Family::Quadratic, Family::Cubic]
+            .iter()
+            .filter_map(|&family| match fit(family, &x, &y, false) {
+                FitOutcome::Fitted(fit) => Some(*fit),
+                _ => None,
+            })
+            .collect();
+        eligible(&fits, 60.0, 1.0, 60.0).into_iter().map(|i| fits[i].family).collect()
+    }
+
+    #[test]
+    fn a_polynomial_is_eligible_only_where_it_turns_within_the_readings() {
+        let all = [Family::Linear, Family::Quadratic, Family::Cubic];
+        assert_eq!(candidates(|x| 0.01 * (x - 30.0).powi(2)), all);
+        // Curved, but rising all along; turning, but only past the readings' central part.
+        assert_eq!(candidates(|x| 0.01 * (x + 30.0).powi(2)), all[..1]);
+        assert_eq!(candidates(|x| 0.01 * (x - 4.0).powi(2)), all[..1]);
+        // A cubic that rises, falls and rises has the same sign of slope at both ends.
+        let wave = candidates(|x| 1e-3 * (x - 15.0) * (x - 30.0) * (x - 45.0));
+        assert!(wave.contains(&Family::Cubic), "{wave:?}");
     }
 }

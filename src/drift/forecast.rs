@@ -70,7 +70,10 @@ impl Forecaster {
         let mut noise = None;
         let mut members = Vec::new();
         for (i, fit) in fits.iter().enumerate() {
-            let (covariance, variance) = sandwich(fit, x, &spacing, phi)?;
+            let Some((covariance, variance)) = sandwich(fit, x, &spacing, phi) else {
+                // A family whose uncertainty cannot be had makes no forecast; the others may.
+                continue;
+            };
             if i == choice.chosen {
                 noise = Some(variance);
             }
@@ -102,11 +105,11 @@ impl Forecaster {
 
 impl Member {
     fn value(&self, x: f64) -> f64 {
-        self.fit.family.value(&self.fit.theta, x)
+        self.fit.value(x)
     }
 
     fn variance(&self, x: f64) -> f64 {
-        let g = Vector4::from(self.fit.family.gradient(&self.fit.theta, x));
+        let g = Vector4::from(self.fit.gradient(x));
         g.dot(&(self.covariance * g)).max(0.0)
     }
 }
@@ -124,13 +127,17 @@ pub fn fit_all(x: &[f64], y: &[f64], families: &[Family]) -> Vec<Fit> {
 
 /// Returns the correlation of a fit's clipped residuals at the median spacing, bias-corrected.
 pub fn own_correlation(fit: &Fit, x: &[f64], y: &[f64], spacing: &[f64]) -> f64 {
-    let mut residuals: Vec<f64> =
-        x.iter().zip(y).map(|(&v, &w)| w - fit.family.value(&fit.theta, v)).collect();
+    lag_correlation(&winsorised(fit, x, y), spacing, fit.family.parameter_count())
+}
+
+/// Residuals clipped at 3 robust standard deviations.
+pub fn winsorised(fit: &Fit, x: &[f64], y: &[f64]) -> Vec<f64> {
+    let mut residuals = fit.residuals(x, y);
     let limit = CLIP_WINSOR * robust_scale(&residuals);
     if limit > 0.0 {
         residuals.iter_mut().for_each(|r| *r = r.clamp(-limit, limit));
     }
-    lag_correlation(&residuals, spacing, fit.family.parameter_count())
+    residuals
 }
 
 fn newer_half(x: &[f64], y: &[f64], family: Family, phi: f64) -> Option<Member> {
@@ -142,7 +149,8 @@ fn newer_half(x: &[f64], y: &[f64], family: Family, phi: f64) -> Option<Member> 
     Some(Member { fit, weight: 1.0, covariance })
 }
 
-/// Returns the coefficients' covariance with serial dependence allowed for, and the noise variance.
+/// Returns the inner coefficients' covariance with serial dependence allowed for, and the noise
+/// variance; [`Fit::standard_errors_of`] turns it into the data's units.
 ///
 /// V = s² (JᵀJ)⁻¹ JᵀRJ (JᵀJ)⁻¹, s² = RSS/(n − tr[(JᵀJ)⁻¹ JᵀRJ]), R_ij = phi^(|t_i − t_j|/δ).
 ///
@@ -153,8 +161,7 @@ fn newer_half(x: &[f64], y: &[f64], family: Family, phi: f64) -> Option<Member> 
 /// Columns scaled to unit length; JᵀRJ by forward recursion, O(n p²). None when columns are dependent.
 pub fn sandwich(fit: &Fit, x: &[f64], spacing: &[f64], phi: f64) -> Option<(Matrix4<f64>, f64)> {
     let p = fit.family.parameter_count();
-    let mut rows: Vec<Vector4<f64>> =
-        x.iter().map(|&v| Vector4::from(fit.family.gradient(&fit.theta, v))).collect();
+    let mut rows: Vec<Vector4<f64>> = x.iter().map(|&v| Vector4::from(fit.gradient(v))).collect();
     let mut scale = Vector4::repeat(1.0);
     for k in 0..p {
         let length = rows.iter().map(|row| row[k] * row[k]).sum::<f64>().sqrt();
@@ -200,9 +207,32 @@ mod tests {
         let y: Vec<f64> = noise(7, 50, 0.0).iter().zip(&x).map(|(e, x)| x + e).collect();
         let FitOutcome::Fitted(fit) = fit(Family::Linear, &x, &y, false) else { panic!() };
         let (v, _) = sandwich(&fit, &x, &[1.0; 50], 0.0).unwrap();
-        for k in 0..2 {
-            assert!((v[(k, k)].sqrt() / fit.standard_errors[k] - 1.0).abs() < 1e-9);
+        let errors = fit.standard_errors_of(&v);
+        for (got, want) in errors.iter().zip(fit.standard_errors).take(2) {
+            assert!((got / want - 1.0).abs() < 1e-9, "{got} against {want}");
         }
+    }
+
+    #[test]
+    fn every_monotone_family_forecasts_from_ages_far_from_zero() {
+        let families = [
+            Family::Linear,
+            Family::Logarithmic,
+            Family::Power,
+            Family::OffsetPower,
+            Family::Exponential,
+        ];
+        let x: Vec<f64> = (0..120).map(|i| 400.0 + 0.5 * f64::from(i)).collect();
+        let y: Vec<f64> = noise(11, 120, 0.3)
+            .iter()
+            .zip(&x)
+            .map(|(e, x)| 8.0 * (1.0 - (-(x - 400.0) / 25.0).exp()) + 0.2 * e)
+            .collect();
+        let forecaster = Forecaster::new(&x, &y, &families, 0.3).unwrap();
+        let expected = forecaster.at(x[119] + 10.0);
+        let truth = 8.0 * (1.0 - (-69.5_f64 / 25.0).exp());
+        assert!((expected.value - truth).abs() < 3.0 * expected.sd, "{expected:?}, {truth}");
+        assert!(expected.sd < 0.5, "{expected:?}");
     }
 
     #[test]

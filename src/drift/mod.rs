@@ -4,7 +4,16 @@ pub mod choose;
 pub mod family;
 pub mod fit;
 pub mod forecast;
+pub mod frame;
+pub mod interval;
+pub mod least_squares;
+pub mod outcome;
+pub mod projection;
 pub mod reach;
+#[cfg(test)]
+pub(crate) mod reference;
+pub mod refine;
+pub mod residual_tests;
 pub mod serial;
 pub mod structure;
 pub mod tails;

@@ -3,6 +3,9 @@
 /// Longest memory considered: correlations above this are held there.
 const PHI_MAX: f64 = 0.97;
 
+/// From so many residuals on the correction for bias is smaller than what it corrects (own rule).
+const CORRECTED_FROM: usize = 20;
+
 /// A spacing whose ratio to the median stays within this of 1 counts as regular.
 const REGULAR_WITHIN: f64 = 0.1;
 /// With at least this share of regular spacings, those pairs alone give the correlation.
@@ -47,12 +50,28 @@ pub fn spacing_of(x: &[f64]) -> (f64, Vec<f64>) {
 /// Bias: Kendall (1954), Marriott and Pope (1954), extended to p parameters (own simulation);
 /// irregular: Robinson (1977), Mudelsee (2002). From memory.
 pub fn lag_correlation(residuals: &[f64], spacing: &[f64], parameters: usize) -> f64 {
+    let Some(raw) = raw_correlation(residuals, spacing, parameters) else { return 0.0 };
+    let (n, p) = (count(residuals.len()), count(parameters));
+    ((n * raw + p) / (n - p - 2.0)).clamp(-1.0, PHI_MAX)
+}
+
+/// The same for one short series: below [`CORRECTED_FROM`] residuals the correction, which is right
+/// to the order of 1/n, would be all there is, and is left out.
+pub fn lag_correlation_short(residuals: &[f64], spacing: &[f64], parameters: usize) -> f64 {
+    if residuals.len() >= CORRECTED_FROM {
+        return lag_correlation(residuals, spacing, parameters);
+    }
+    raw_correlation(residuals, spacing, parameters).map_or(0.0, |raw| raw.clamp(-1.0, PHI_MAX))
+}
+
+/// The estimate without correction; None when the residuals are all 0 or too few.
+fn raw_correlation(residuals: &[f64], spacing: &[f64], parameters: usize) -> Option<f64> {
     assert_eq!(residuals.len(), spacing.len(), "one spacing per residual");
     let sum_squares: f64 = residuals.iter().map(|e| e * e).sum();
     if residuals.len() < parameters + 4 || sum_squares <= f64::MIN_POSITIVE {
-        return 0.0;
+        return None;
     }
-    let (n, p) = (count(residuals.len()), count(parameters));
+    let n = count(residuals.len());
     let (mut lagged, mut pairs) = (0.0, 0.0);
     for (w, d) in residuals.windows(2).zip(&spacing[1..]) {
         if (d - 1.0).abs() <= REGULAR_WITHIN {
@@ -60,12 +79,11 @@ pub fn lag_correlation(residuals: &[f64], spacing: &[f64], parameters: usize) ->
             pairs += 1.0;
         }
     }
-    let raw = if pairs >= REGULAR_SHARE * (n - 1.0) {
+    Some(if pairs >= REGULAR_SHARE * (n - 1.0) {
         lagged / sum_squares * n / pairs
     } else {
         irregular_correlation(residuals, spacing)
-    };
-    ((n * raw + p) / (n - p - 2.0)).clamp(-1.0, PHI_MAX)
+    })
 }
 
 /// Minimises the profile likelihood over phi by golden section.
@@ -165,6 +183,19 @@ mod tests {
     fn spacing_is_relative_to_the_median() {
         let (median, ratios) = spacing_of(&[0.0, 1.0, 2.0, 4.0]);
         assert_eq!((median, ratios), (1.0, vec![1.0, 1.0, 1.0, 2.0]));
+    }
+
+    #[test]
+    fn a_handful_of_residuals_is_not_corrected() {
+        let e = [1.0, -0.5, 0.7, -1.2, 0.3, -0.3];
+        let raw =
+            e.windows(2).map(|w| w[0] * w[1]).sum::<f64>() / e.map(|v| v * v).iter().sum::<f64>();
+        let got = lag_correlation_short(&e, &[1.0; 6], 2);
+        assert!((got - raw * 6.0 / 5.0).abs() < 1e-12, "{got}, {raw}");
+        let wave: Vec<f64> = (0..40).map(|i| (f64::from(i) * 0.7).sin()).collect();
+        let (a, b) =
+            (lag_correlation(&wave, &[1.0; 40], 2), lag_correlation_short(&wave, &[1.0; 40], 2));
+        assert!((a - b).abs() < f64::EPSILON);
     }
 
     #[test]

@@ -21,6 +21,11 @@ pub fn normal_q(z: f64) -> f64 {
     (z * z / 2.0 + z.ln() + half_log) / std::f64::consts::LN_10
 }
 
+/// Returns the two-sided normal tail P(|Z| > |z|).
+pub fn normal_two_sided(z: f64) -> f64 {
+    erfc(z.abs() / std::f64::consts::SQRT_2)
+}
+
 /// Returns −log10 of the one-sided normal tail P(Z > z).
 pub fn normal_q_above(z: f64) -> f64 {
     if z > 0.0 {

@@ -241,10 +241,7 @@ impl Channel {
             let place = self.place_free(context);
             self.residuals.refitted(&place, x.len(), own);
             if let Some((v, _)) = sandwich(chosen, &x, &spacing, phi.max(own).clamp(0.0, 0.97)) {
-                for (k, error) in standard_errors.iter_mut().enumerate() {
-                    *error = v[(k, k)].max(0.0).sqrt();
-                }
-                standard_errors[chosen.family.parameter_count()..].fill(0.0);
+                standard_errors = chosen.standard_errors_of(&v);
             }
             choice = Some(best);
         }
@@ -304,7 +301,7 @@ impl Channel {
             return Turn::Nothing;
         }
         let phi = self.residuals.phi(x.len());
-        let Some(window) = Whitened::new(&x, &y, curve.family, &curve.theta, phi) else {
+        let Some(window) = Whitened::new(&x, &y, curve, phi) else {
             return Turn::Nothing;
         };
         let times: Vec<EventTime> = self.window.points().iter().map(|p| p.time).collect();

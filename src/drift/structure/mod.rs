@@ -104,7 +104,7 @@ pub(crate) mod tests {
         let FitOutcome::Fitted(curve) = fit(Family::Logarithmic, &x, &y, true) else {
             panic!("a logarithmic curve can be fitted");
         };
-        let window = Whitened::new(&x, &y, curve.family, &curve.theta, 0.3).unwrap();
+        let window = Whitened::new(&x, &y, &curve, 0.3).unwrap();
         examine(&window, 1.0)
     }
 
@@ -145,8 +145,9 @@ pub(crate) mod tests {
     #[test]
     fn a_window_without_scatter_is_an_outcome() {
         let x: Vec<f64> = (1..=60).map(f64::from).collect();
-        assert!(
-            Whitened::new(&x, &[1.0; 60], Family::Linear, &[1.0, 0.0, 0.0, 0.0], 0.3).is_none()
-        );
+        let FitOutcome::Fitted(curve) = fit(Family::Linear, &x, &[0.0; 60], true) else {
+            panic!("a flat line can be fitted");
+        };
+        assert!(Whitened::new(&x, &[0.0; 60], &curve, 0.3).is_none());
     }
 }

@@ -5,8 +5,8 @@
 //! wild readings are clipped at three noise scales, and a candidate for structure is judged only by
 //! what the curve's own coefficients could not have absorbed (added-variable test).
 
-use crate::drift::family::{COEFFICIENTS_MAX, Coefficients, Family};
-use crate::drift::fit::robust_scale;
+use crate::drift::family::COEFFICIENTS_MAX;
+use crate::drift::fit::{Fit, robust_scale};
 use crate::drift::serial::{count, spacing_of};
 use crate::drift::tails::student_q;
 use nalgebra::{Matrix4, Vector4};
@@ -55,8 +55,8 @@ impl Whitened {
     /// Whitens the residuals of a curve.
     ///
     /// # Arguments
-    /// `x` — ages, days, strictly increasing, at least p + 4; `y` — deviations; `family`, `theta` —
-    /// the curve; `phi` — the channel's usual correlation at the median spacing, 0 ≤ phi < 1.
+    /// `x` — ages, days, strictly increasing, at least p + 4; `y` — deviations; `curve` —
+    /// fitted to them; `phi` — the channel's usual correlation at the median spacing, 0 ≤ phi < 1.
     ///
     /// # Returns
     /// None when the residuals have no scatter at all, or the curve's columns are dependent.
@@ -64,18 +64,11 @@ impl Whitened {
     /// # Source
     /// f_j = phi^(Δt_j/δ), w_j = √((1−phi²)/(1−f_j²))/s, u_j = w_j (e_j − f_j e_(j−1)):
     /// Ornstein–Uhlenbeck process at irregular times. Scale: iterated winsorised mean square.
-    pub fn new(
-        x: &[f64],
-        y: &[f64],
-        family: Family,
-        theta: &Coefficients,
-        phi: f64,
-    ) -> Option<Whitened> {
-        let parameters = family.parameter_count();
+    pub fn new(x: &[f64], y: &[f64], curve: &Fit, phi: f64) -> Option<Whitened> {
+        let parameters = curve.family.parameter_count();
         assert!(x.len() == y.len() && x.len() >= parameters + 4, "enough points, one y each");
-        let residuals: Vec<f64> =
-            x.iter().zip(y).map(|(&v, &w)| w - family.value(theta, v)).collect();
-        let gradients = scaled_gradients(x, family, theta);
+        let residuals = curve.residuals(x, y);
+        let gradients = scaled_gradients(x, curve);
         let (_, spacing) = spacing_of(x);
         let mut whitened = Whitened {
             x: x.to_vec(),
@@ -179,10 +172,9 @@ pub struct Gain {
     pub size: f64,
 }
 
-fn scaled_gradients(x: &[f64], family: Family, theta: &Coefficients) -> Vec<Vector4<f64>> {
-    let mut rows: Vec<Vector4<f64>> =
-        x.iter().map(|&v| Vector4::from(family.gradient(theta, v))).collect();
-    for k in 0..family.parameter_count() {
+fn scaled_gradients(x: &[f64], curve: &Fit) -> Vec<Vector4<f64>> {
+    let mut rows: Vec<Vector4<f64>> = x.iter().map(|&v| Vector4::from(curve.gradient(v))).collect();
+    for k in 0..curve.family.parameter_count() {
         let largest = rows.iter().map(|row| row[k].abs()).fold(0.0, f64::max);
         if largest > 0.0 {
             rows.iter_mut().for_each(|row| row[k] /= largest);

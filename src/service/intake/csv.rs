@@ -229,7 +229,7 @@ fn read_cell(cell: &str) -> Result<f64, Refusal> {
 
 /// The fields of one line, quotation marks taken off (RFC 4180, section 2, within one line); `None`
 /// when a quotation mark is not closed or is followed by something else than a comma.
-fn split(line: &str) -> Option<Vec<String>> {
+pub(crate) fn split(line: &str) -> Option<Vec<String>> {
     let mut fields = Vec::with_capacity(COLUMNS.len());
     let mut rest = line;
     loop {
