@@ -41,6 +41,8 @@ pub enum Limit {
     },
     /// No family can be fitted.
     NoCurve,
+    /// The data change direction inside the window: the curve that turns with them is not carried on.
+    Turns,
     /// Nobody asks for statements here.
     NotAsked,
     /// Too few backtests reach that far.
@@ -72,6 +74,11 @@ impl Limit {
                 format!("{found} usable points, {needed} are needed")
             }
             Limit::NoCurve => "no curve can be fitted".to_owned(),
+            Limit::Turns => {
+                "the drift changes direction inside the window, and a curve that turns is never \
+                 carried past its data"
+                    .to_owned()
+            }
             Limit::NotAsked => "no statement is asked for".to_owned(),
             Limit::TooFewBacktests { at_d } => {
                 format!("fewer than {BACKTESTS_MIN} backtests reach {at_d:.1} d")

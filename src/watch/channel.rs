@@ -4,7 +4,8 @@
 //! history replayed, a live feed and a restart in the middle all come to the same alerts. Only
 //! silence and the shelf follow the shell's time.
 
-use crate::drift::choose::{Choice, choose};
+use crate::drift::choose::{Choice, SWITCH_ABOVE, TURN_ABOVE, choose, eligible};
+use crate::drift::family::Family;
 use crate::drift::fit::{Fit, FitOutcome, fit};
 use crate::drift::forecast::{Forecaster, own_correlation, sandwich};
 use crate::drift::reach::{Limit, Reach, assess};
@@ -230,6 +231,7 @@ impl Channel {
                 }
             }
         }
+        let fits = with_those_that_turn(fits, &x, &y, self.residuals.phi(x.len()), current);
         let (_, spacing) = spacing_of(&x);
         let mut choice = None;
         let mut standard_errors = [0.0; 4];
@@ -245,9 +247,15 @@ impl Channel {
             }
             choice = Some(best);
         }
-        let reach = self.reach(context, &x, &y, fits.is_empty());
-        let forecaster =
-            Forecaster::new(&x, &y, &context.rules.families, self.residuals.phi(x.len()));
+        let turning = choice.as_ref().map(|best| fits[best.chosen].family).filter(|f| f.may_turn());
+        let reach = match turning {
+            Some(_) => Reach::none(Limit::Turns),
+            None => self.reach(context, &x, &y, fits.is_empty()),
+        };
+        // A curve that turns says how large the deviation is now, and nothing of later.
+        let of_now = turning.map(|family| [family]);
+        let families = of_now.as_ref().map_or(&context.rules.families[..], |one| &one[..]);
+        let forecaster = Forecaster::new(&x, &y, families, self.residuals.phi(x.len()));
         let said = forecaster.map_or_else(Said::default, |forecaster| {
             Said::of(&forecaster, &reach, context.rules, at, *x.last().unwrap_or(&0.0))
         });
@@ -350,6 +358,35 @@ impl Channel {
             self.refit.take().map(|refit| Refit { reach: Reach::none(Limit::NoCurve), ..refit });
         self.refit(context, newest);
     }
+}
+
+/// The fits, and a quadratic or cubic where the data change direction inside the window and it is
+/// clearly better than each of them.
+fn with_those_that_turn(
+    mut fits: Vec<Fit>,
+    x: &[f64],
+    y: &[f64],
+    phi: f64,
+    current: Option<Family>,
+) -> Vec<Fit> {
+    if let (Some(&oldest), Some(&newest)) = (x.first(), x.last())
+        && !fits.is_empty()
+    {
+        let settled = fits.len();
+        for family in [Family::Quadratic, Family::Cubic] {
+            if let FitOutcome::Fitted(fit) = fit(family, x, y, true) {
+                fits.push(*fit);
+            }
+        }
+        let better_by = |f| if current == Some(f) { SWITCH_ABOVE } else { TURN_ABOVE };
+        let may = eligible(&fits, effective_count(x.len(), phi), (oldest, newest), better_by);
+        let mut place = 0;
+        fits.retain(|_| {
+            place += 1;
+            place <= settled || may.contains(&(place - 1))
+        });
+    }
+    fits
 }
 
 #[expect(clippy::cast_precision_loss, reason = "point counts are far below 2^53")]

@@ -313,6 +313,7 @@ fn context<'a>(
 #[cfg(test)]
 mod tests {
     use super::*;
+    use crate::drift::reach::{Limit, Reach};
     use crate::drift::structure::tests::noise;
     use crate::watch::settings::tests::watch_settings;
     use crate::watch::settings::{Statement, WatchSettings};
@@ -435,6 +436,30 @@ mod tests {
         let forecast = engine.overview().next().unwrap().1.unwrap().forecast.unwrap();
         assert!(!forecast.supported && forecast.deviation.is_none());
         assert!(forecast.refused.unwrap().starts_with("needs 80 d past the newest reading"));
+    }
+
+    #[test]
+    fn drift_that_changes_direction_gets_a_curve_that_turns_and_no_forecast() {
+        let mut engine = Engine::new(site(rules()), ShellTime(START));
+        let values: Vec<f64> = noise(17, 360, 0.3)
+            .iter()
+            .enumerate()
+            .map(|(i, e)| {
+                let day = i as f64 / 4.0;
+                0.1 * day - 0.0011 * day * day + 0.05 * e
+            })
+            .collect();
+        feed(&mut engine, 0, &values);
+        let finding = engine.overview().next().unwrap().1.unwrap();
+        let family = finding.curve.unwrap().family;
+        assert!(["quadratic", "cubic"].contains(&family), "{family}");
+        let forecast = finding.forecast.unwrap();
+        assert!(!forecast.supported && forecast.deviation.is_none());
+        let refit = engine.observe("press.PT-1").unwrap().refit.clone().unwrap();
+        assert_eq!(refit.reach, Reach::none(Limit::Turns));
+        let (now, half) = refit.said.now.unwrap();
+        let truth = 0.1 * 90.0 - 0.0011 * 90.0 * 90.0;
+        assert!((now - truth).abs() < half && half < 0.25, "{now} ± {half} against {truth}");
     }
 
     #[test]

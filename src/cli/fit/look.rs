@@ -135,7 +135,7 @@ fn rank(fits: &[Fit], x: &[f64], y: &[f64], spacing: &[f64]) -> Ranking {
     }
     let (oldest, newest) = (x[0], x[x.len() - 1]);
     let pick = |n_effective: f64| {
-        let candidates = eligible(fits, n_effective, oldest, newest);
+        let candidates = eligible(fits, n_effective, (oldest, newest), |_| SWITCH_ABOVE);
         let among: Vec<Fit> = candidates.iter().map(|&i| fits[i].clone()).collect();
         let choice = choose(&among, n_effective, None);
         (candidates[choice.chosen], choice)
