@@ -129,6 +129,20 @@ fn a_value_of_the_wrong_kind_says_what_it_is() {
 }
 
 #[test]
+fn a_unit_that_cannot_be_shown_says_why() {
+    let allowed = "allowed: a unit such as \"bar\", 1 to 16 bytes";
+    for (unit, found) in [
+        (r#""bar\n""#, r#""bar\n" (a control character)"#),
+        (r#""\u001b[2J""#, r#""\u{1b}[2J" (a control character)"#),
+        (r#"" bar""#, r#"" bar" (a blank at its beginning or end)"#),
+        (r#""""#, r#""""#),
+    ] {
+        let line = format!("asfound.toml:14: watch[1].unit: found {found}; {allowed}");
+        check(&[("unit = \"bar\"", &format!("unit = {unit}"))], &[&line]);
+    }
+}
+
+#[test]
 fn a_value_out_of_range_says_the_range() {
     check(
         &[

@@ -685,6 +685,23 @@ fn top_folder_holds_what_a_newcomer_expects() {
 }
 
 #[test]
+fn the_unit_leaves_room_for_the_programs_own_limits() {
+    let unit = fs::read_to_string(top().join("systemd/asfound.service")).expect("the unit file");
+    let allowed = unit.lines().find_map(|line| line.strip_prefix("MemoryMax=")).expect("a maximum");
+    let (digits, factor) = match allowed.split_at(allowed.len() - 1) {
+        (digits, "M") => (digits, 1 << 20),
+        (digits, "G") => (digits, 1 << 30),
+        _ => panic!("a unit that this test does not know: {allowed}"),
+    };
+    let allowed: usize = factor * digits.parse::<usize>().expect("a whole number");
+    // Measured with windows of 512 points: 35 MB per 1000 channels, and states of 25 kB each.
+    let channels = asfound::watch::limits::CHANNELS_MAX * (35_000 + 25_000);
+    // As many unacknowledged messages as the broker is allowed, each as large as is taken.
+    let messages = 4000 * (64 << 10);
+    assert!(channels + messages <= allowed, "{channels} + {messages} bytes, {allowed} allowed");
+}
+
+#[test]
 fn lock_file_names_one_registry_and_every_checksum() {
     let package = |source: &str, checksum: &str| format!("[[package]]\n{source}{checksum}");
     let registry = "source = \"registry+https://a.example/index\"\n";

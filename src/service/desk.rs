@@ -225,12 +225,13 @@ impl Desk {
         }
     }
 
-    /// The topic that the request asks its answer on, if an answer may go there; else ours.
+    /// The topic that the request asks its answer on, if an answer may go there; else ours. Not below
+    /// the topic root: what is published there passes for this service's own word, or another site's.
     fn reply_to(&self, verb: &str, arrival: &Arrival<'_>) -> ReplyTo {
         let asked = arrival.response_topic.filter(|topic| {
             is_plain_topic(topic)
                 && self.router.route(topic).is_none()
-                && !topic.starts_with(&format!("{}/", self.own_topics))
+                && !topic.starts_with(&format!("{}/", self.settings.broker.topic_root))
         });
         let own = || format!("{}/reply/{verb}", self.own_topics);
         let correlation = arrival.correlation.map(|data| data[..data.len().min(256)].to_vec());

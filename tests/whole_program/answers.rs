@@ -35,20 +35,33 @@ fn an_answer_topic_of_300_levels_does_not_silence_the_watch() {
     check_still_answers(&"y/".repeat(300));
 }
 
-#[test]
-fn no_answer_is_published_under_an_input_filter() {
+/// A request that wants its answer there, then one of the usual kind: both are answered on topics of
+/// this service's own.
+fn check_not_answered_on(answer_topic: &str) {
     let broker = Broker::running();
     let site = Site::new(broker.port());
     let daemon = Daemon::listening(&site);
     let collector = Collector::on(broker.port(), "#");
     let mut publisher = Publisher::new(broker.port());
-    publisher.publish(&[request("plant/press/PT-1/deviation")]);
+    publisher.publish(&[request(answer_topic)]);
     publisher.publish(&[Message::new(format!("{OWN}/request/acknowledge"), "{}")]);
     collector.wait_for("an answer to the second request", |messages| {
         messages.iter().any(|m| m.topic == format!("{OWN}/reply/acknowledge")).then_some(())
     });
-    assert!(!collector.messages().iter().any(|m| m.topic.starts_with("plant/")));
+    let messages = collector.messages();
+    assert!(!messages.iter().any(|m| m.topic == answer_topic), "{messages:#?}");
+    assert!(messages.iter().any(|m| m.topic == format!("{OWN}/reply/dance")), "{messages:#?}");
     assert_eq!(daemon.terminate(), Some(0));
+}
+
+#[test]
+fn no_answer_is_published_under_an_input_filter() {
+    check_not_answered_on("plant/press/PT-1/deviation");
+}
+
+#[test]
+fn no_answer_is_published_on_another_sites_topics() {
+    check_not_answered_on("asfound/northpier/request/calibrated");
 }
 
 #[test]

@@ -195,13 +195,19 @@ fn check_unit(raw: &RawWatch, problems: &mut Problems) -> String {
         problems.missing(&raw.place, &format!("{}.unit", raw.path), UNIT);
         return String::new();
     };
-    let good = (1..=UNIT_BYTES_MAX).contains(&unit.value.len())
-        && !unit.value.contains(char::is_control)
-        && unit.value.trim() == unit.value;
-    if !good {
-        problems.refuse(&unit.place, &unit.key, quoted(&unit.value), UNIT);
-    }
-    unit.value.clone()
+    let text = &unit.value;
+    // Said in words: what is wrong with these cannot be seen in the text as it is shown.
+    let why = if text.contains(char::is_control) {
+        " (a control character)"
+    } else if text.trim() != text {
+        " (a blank at its beginning or end)"
+    } else if (1..=UNIT_BYTES_MAX).contains(&text.len()) {
+        return text.clone();
+    } else {
+        ""
+    };
+    problems.refuse(&unit.place, &unit.key, format!("{}{why}", quoted(text)), UNIT);
+    text.clone()
 }
 
 fn check_points(points: Option<&Located<i64>>, problems: &mut Problems) -> usize {
