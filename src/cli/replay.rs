@@ -8,6 +8,7 @@ use crate::service::line::line;
 use crate::service::settings::time::read_time;
 use crate::service::settings::{Environment, Settings};
 use crate::service::shown::Shown;
+use crate::watch::channel::{Channel, KnownFrom};
 use crate::watch::engine::{Effect, Engine};
 use crate::watch::reading::{Reading, Taken};
 use crate::watch::time::{EventTime, ShellTime};
@@ -231,6 +232,14 @@ impl Replaying<'_> {
                 writeln!(self.err, "  {:>9}  {}", counts.of(taken), taken.words())?;
             }
         }
+        let unsorted = self.engine.overview().filter(|(channel, _)| began_too_late(channel)).count();
+        if unsorted > 0 {
+            writeln!(
+                self.err,
+                "             in {unsorted} channels age zero is the first row, and older rows came after \
+                 it: sort the table by time, or set `calibrated`"
+            )?;
+        }
         for (code, count) in &self.tally.refused {
             writeln!(self.err, "  {count:>9}  refused: {code}")?;
         }
@@ -248,6 +257,13 @@ impl Replaying<'_> {
         }
         Ok(())
     }
+}
+
+/// Whether a channel took its age zero from its first row and older rows came after that one. The
+/// first row itself is at age zero, not after it.
+fn began_too_late(channel: &Channel) -> bool {
+    channel.cycle.is_some_and(|cycle| cycle.known_from == KnownFrom::FirstReading)
+        && channel.counts.of(Taken::BeforeAgeZero) > 1
 }
 
 /// One look at the residuals, as `--scores` writes it.
@@ -290,5 +306,55 @@ impl<R: Read, F: Fn(u64, Option<u64>)> Read for Counted<R, F> {
         self.read += got as u64;
         (self.progress)(self.read, self.size);
         Ok(got)
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    /// Replays rows under settings with this line more; what stands on the error output.
+    fn check(further: &str, rows: &str) -> String {
+        let folder = tempfile::tempdir().unwrap();
+        let (config, readings) = (folder.path().join("a.toml"), folder.path().join("a.csv"));
+        let settings = format!(
+            "site.name = \"saltmarsh\"\nbroker.url = \"mqtt://127.0.0.1\"\n\
+             [[watch]]\ntopic = \"plant/{{tag}}\"\nunit = \"bar\"\n{further}\n"
+        );
+        std::fs::write(&config, settings).unwrap();
+        std::fs::write(&readings, format!("time,channel,value\n{rows}")).unwrap();
+        let args = ReplayArgs {
+            config,
+            readings,
+            json: false,
+            findings: false,
+            scores: false,
+            until: None,
+        };
+        let mut err = Vec::new();
+        let environment = Environment::default();
+        let code = replay(&args, &environment, &mut Vec::new(), &mut err, |_, _| {});
+        let err = String::from_utf8(err).unwrap();
+        assert_eq!(code, EXIT_DONE, "{err}");
+        err
+    }
+
+    const SORTED: &str = "2026-01-01T00:00:00Z,a,1\n2026-01-02T00:00:00Z,a,2\n\
+                          2026-01-03T00:00:00Z,a,3\n";
+    const REVERSED: &str = "2026-01-03T00:00:00Z,a,3\n2026-01-02T00:00:00Z,a,2\n\
+                            2026-01-01T00:00:00Z,a,1\n";
+    const HINT: &str = "sort the table by time, or set `calibrated`";
+
+    #[test]
+    fn a_table_that_is_not_sorted_is_told_how_to_help_itself() {
+        let said = check("", REVERSED);
+        assert!(said.contains("        3  not after age zero\n"), "{said}");
+        assert!(said.contains(HINT), "{said}");
+    }
+
+    #[test]
+    fn a_sorted_table_or_a_set_age_zero_gets_no_such_hint() {
+        assert!(!check("", SORTED).contains(HINT));
+        assert!(!check("calibrated = \"2026-01-02T12:00:00Z\"", SORTED).contains(HINT));
     }
 }
