@@ -232,7 +232,8 @@ impl Replaying<'_> {
                 writeln!(self.err, "  {:>9}  {}", counts.of(taken), taken.words())?;
             }
         }
-        let unsorted = self.engine.overview().filter(|(channel, _)| began_too_late(channel)).count();
+        let unsorted =
+            self.engine.overview().filter(|(channel, _)| began_too_late(channel)).count();
         if unsorted > 0 {
             writeln!(
                 self.err,

@@ -11,7 +11,7 @@ use crate::service::recover::{Recovered, apply, state_bytes};
 use crate::service::request;
 use crate::service::settings::Settings;
 use crate::service::store::{Bundle, NewMessage, NewRow};
-use crate::watch::engine::{Effect, Engine};
+use crate::watch::engine::{Action, Effect, Engine};
 use crate::watch::time::{DAY_US, ShellTime};
 use std::collections::BTreeMap;
 
@@ -259,7 +259,7 @@ impl Desk {
             self.unsaved.entry(row.channel.clone()).or_insert(id);
             let done = apply(&mut self.engine, id, watch, &row.channel, &row, ShellTime(row.got));
             if let Some(to) = reply_to {
-                let why = if done { "done" } else { "nothing to change: no such open alert" };
+                let why = if done { "done" } else { why_not(&row) };
                 self.reply(to, done, why);
             }
         }
@@ -369,6 +369,16 @@ fn is_plain_topic(topic: &str) -> bool {
         && levels <= REPLY_TOPIC_LEVELS_MAX
         && !topic.starts_with('$')
         && !topic.contains(|c: char| c == '+' || c == '#' || c.is_control())
+}
+
+/// Why a request that was journaled changed nothing: what it needs was there when it was read.
+fn why_not(row: &NewRow) -> &'static str {
+    match row.action.as_deref().map(serde_json::from_str) {
+        Some(Ok(Action::Calibrated { .. })) => {
+            "not done: a later calibration is on record by now, and age zero does not move back"
+        }
+        _ => "nothing to change: no such open alert",
+    }
 }
 
 fn not_from_the_future(decoded: Decoded, now: ShellTime) -> Result<Decoded, Refusal> {

@@ -3,8 +3,9 @@
 use crate::service::intake::Excerpt;
 use crate::service::settings::duration::read_span;
 use crate::service::settings::time::read_time;
+use crate::watch::channel::KnownFrom;
 use crate::watch::engine::{Action, Engine};
-use crate::watch::time::ShellTime;
+use crate::watch::time::{EventTime, ShellTime};
 use serde::Deserialize;
 
 /// A calibration may lie ahead of this clock by so much: clocks differ.
@@ -37,6 +38,18 @@ pub enum RequestFault {
     Channel {
         /// What was asked.
         channel: Excerpt,
+    },
+    /// Age zero is later already.
+    #[error(
+        "{channel} is on record as calibrated at {on_record} by {how}; an older mark does not move age zero back"
+    )]
+    OlderMark {
+        /// The channel.
+        channel: Excerpt,
+        /// Its age zero.
+        on_record: EventTime,
+        /// How that is known.
+        how: &'static str,
     },
     /// No such alert.
     #[error("no alert {alert} is open")]
@@ -109,8 +122,15 @@ fn calibrated(
     let asked: Calibrated = json("calibrated", payload, CALIBRATED)?;
     let at = read_time(&asked.at)
         .map_err(|why| fault("calibrated", &format!("at: {why}"), CALIBRATED))?;
-    if engine.observe(&asked.channel).is_none() {
+    let Some(known) = engine.observe(&asked.channel) else {
         return Err(RequestFault::Channel { channel: Excerpt::of(&asked.channel) });
+    };
+    if let Some(cycle) = known.calibrated_later_than(at) {
+        return Err(RequestFault::OlderMark {
+            channel: Excerpt::of(&asked.channel),
+            on_record: cycle.age_zero,
+            how: if cycle.known_from == KnownFrom::Mark { "a mark" } else { "the settings" },
+        });
     }
     if at.0 > now.0.saturating_add(AHEAD_MAX_US) {
         return Err(fault("calibrated", "at: a time that is still to come", CALIBRATED));
@@ -145,7 +165,10 @@ fn channel_of(alert: &str, engine: &Engine) -> Result<String, RequestFault> {
 #[cfg(test)]
 mod tests {
     use super::*;
-    use crate::watch::settings::SiteSettings;
+    use crate::watch::reading::Reading;
+    use crate::watch::settings::tests::watch_settings;
+    use crate::watch::settings::{SiteSettings, WatchSettings};
+    use crate::watch::time::DAY_US;
 
     fn check(verb: &str, payload: &str) -> String {
         let site = SiteSettings {
@@ -169,5 +192,33 @@ mod tests {
         assert!(check("calibrated", naive).contains("at: "), "{}", check("calibrated", naive));
         let unknown = r#"{"channel":"a","at":"2026-03-01T08:00:00Z"}"#;
         assert_eq!(check("calibrated", unknown), "no channel \"a\" is known here");
+    }
+
+    #[test]
+    fn a_mark_older_than_the_one_on_record_is_refused_with_its_date() {
+        let age_zero = EventTime(1_772_352_000_000_000);
+        let rules = WatchSettings { calibrated: Some(age_zero), ..watch_settings() };
+        let site = SiteSettings {
+            site: "saltmarsh".to_owned(),
+            false_alerts_per_year: 1.0,
+            watches: vec![rules],
+        };
+        let now = ShellTime(age_zero.0 + DAY_US);
+        let mut engine = Engine::new(site, now);
+        let reading = Reading { serial: 1, time: EventTime(now.0), deviation: 0.1 };
+        engine.take("a", 0, &reading, now);
+        let mut ask = |at: &str| {
+            let payload = format!(r#"{{"channel":"a","at":"{at}"}}"#);
+            let (channel, action) = read("calibrated", payload.as_bytes(), &engine, now)?;
+            Ok::<_, RequestFault>(engine.act(&channel, &action, 2, now))
+        };
+        assert_eq!(
+            ask("2026-02-28T00:00:00Z").unwrap_err().to_string(),
+            "\"a\" is on record as calibrated at 2026-03-01T08:00:00Z by the settings; an older mark \
+             does not move age zero back"
+        );
+        assert_eq!(ask("2026-03-01T09:00:00Z"), Ok(true));
+        let why = ask("2026-03-01T08:30:00Z").unwrap_err().to_string();
+        assert!(why.contains("calibrated at 2026-03-01T09:00:00Z by a mark"), "{why}");
     }
 }

@@ -175,6 +175,12 @@ impl Channel {
         cycle.age_zero
     }
 
+    /// Age zero, if a mark or the settings say a later one than `mark`: then that one stays.
+    pub fn calibrated_later_than(&self, mark: EventTime) -> Option<Cycle> {
+        self.cycle
+            .filter(|cycle| cycle.known_from != KnownFrom::FirstReading && mark < cycle.age_zero)
+    }
+
     /// A calibration mark closes the cycle: age zero moves, the window begins anew.
     pub fn calibrated(&mut self, context: &Context<'_>, mark: EventTime) -> Outcome {
         self.cycle = Some(Cycle { age_zero: mark, known_from: KnownFrom::Mark });

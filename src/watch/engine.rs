@@ -141,7 +141,8 @@ impl Engine {
         taken
     }
 
-    /// Does what a person says. False: no such channel or alert, or nothing to change.
+    /// Does what a person says. False: no such channel or alert, nothing to change, or a calibration
+    /// mark that is older than age zero.
     pub fn act(&mut self, channel: &str, action: &Action, serial: u64, now: ShellTime) -> bool {
         let Some(&place) = self.index.get(channel) else { return false };
         let context = context(&self.settings, self.watches[place], &self.births, serial);
@@ -149,6 +150,9 @@ impl Engine {
         let time = known.window.newest_reading().unwrap_or(EventTime(now.0));
         let mut outcome = Outcome::default();
         match action {
+            Action::Calibrated { at, .. } if known.calibrated_later_than(*at).is_some() => {
+                return false;
+            }
             Action::Calibrated { at, .. } => outcome = known.calibrated(&context, *at),
             Action::Acknowledge { alert } => {
                 outcome.events.extend(known.alerts.acknowledge(alert, time));
@@ -492,5 +496,38 @@ mod tests {
         let channel = engine.observe("press.PT-1").unwrap();
         assert_eq!(channel.cycle.unwrap().age_zero, mark);
         assert_eq!(channel.window.points().len(), 100);
+    }
+
+    #[test]
+    fn a_mark_older_than_age_zero_leaves_the_channel_as_it_is() {
+        let calibrated = |day: i64| Action::Calibrated {
+            at: EventTime(START + day * DAY_US),
+            as_found: None,
+            as_left: None,
+            note: None,
+        };
+        let mut engine = Engine::new(site(rules()), ShellTime(START));
+        feed(&mut engine, 0, &curve(400, 16, |_| 0.0));
+        // Age zero is from the settings, then from a mark: neither moves back.
+        for (serial, day, done) in [(401, -1, false), (402, 75, true), (403, 74, false)] {
+            let before = engine.observe("press.PT-1").cloned();
+            assert_eq!(engine.act("press.PT-1", &calibrated(day), serial, ShellTime(START)), done);
+            assert_eq!(engine.observe("press.PT-1").cloned() != before, done, "day {day}");
+        }
+        assert_eq!(
+            engine.observe("press.PT-1").unwrap().cycle.unwrap().age_zero.0,
+            START + 75 * DAY_US
+        );
+    }
+
+    #[test]
+    fn a_mark_older_than_the_first_reading_is_taken() {
+        let rules = WatchSettings { calibrated: None, ..rules() };
+        let mut engine = Engine::new(site(rules), ShellTime(START));
+        feed(&mut engine, 0, &[0.1, 0.2]);
+        let at = EventTime(START - DAY_US);
+        let mark = Action::Calibrated { at, as_found: None, as_left: None, note: None };
+        assert!(engine.act("press.PT-1", &mark, 3, ShellTime(START)));
+        assert_eq!(engine.observe("press.PT-1").unwrap().cycle.unwrap().age_zero, at);
     }
 }
