@@ -3,6 +3,7 @@
 //! Nothing is started and nothing is changed. What holds goes to the output, what is wrong to the
 //! error output.
 
+use crate::service::clock;
 use crate::service::settings::{Environment, Settings};
 use crate::service::shown::Shown;
 use std::io::{self, Write};
@@ -77,7 +78,7 @@ fn report(
     for line in budget.lines() {
         writeln!(out, "# {line}")?;
     }
-    for caution in settings.cautions() {
+    for caution in settings.cautions(clock::now()) {
         writeln!(err, "caution: {caution}")?;
     }
     let mut code = EXIT_DONE;

@@ -2,7 +2,7 @@
 
 use crate::cli::check::{EXIT_DONE, EXIT_FAILED, EXIT_WRONG_USE};
 use crate::service::broker::BrokerSettings;
-use crate::service::clock::{Clock, Stopwatch};
+use crate::service::clock::{self, Clock, Stopwatch};
 use crate::service::daemon::{self, LineSink, Summary};
 use crate::service::desk::Desk;
 use crate::service::intake::Router;
@@ -32,7 +32,7 @@ pub fn run(args: &RunArgs, environment: &Environment, err: &mut dyn Write) -> u8
         }
     };
     start_log();
-    for caution in settings.cautions() {
+    for caution in settings.cautions(clock::now()) {
         tracing::warn!("{caution}");
     }
     let lines: LineSink = Box::new(|line| {

@@ -298,6 +298,69 @@ impl ChannelTemplate {
     }
 }
 
+/// One step of a template as an automaton reads names: a character, or a capture.
+#[derive(Clone, Copy, PartialEq, Eq)]
+enum Step {
+    This(char),
+    /// One or more characters other than `/`.
+    Captured,
+}
+
+impl Step {
+    fn takes(self, other: Step) -> bool {
+        match (self, other) {
+            (Step::This(a), Step::This(b)) => a == b,
+            (Step::This(c), Step::Captured) | (Step::Captured, Step::This(c)) => c != '/',
+            (Step::Captured, Step::Captured) => true,
+        }
+    }
+}
+
+impl ChannelTemplate {
+    fn steps(&self) -> Vec<Step> {
+        let mut steps = Vec::new();
+        for piece in &self.pieces {
+            match piece {
+                Piece::Literal(text) => steps.extend(text.chars().map(Step::This)),
+                Piece::Capture(_) => steps.push(Step::Captured),
+            }
+        }
+        steps
+    }
+
+    /// Whether some name fits both templates: both are read in step, character by character, every
+    /// way in which a capture may end.
+    pub fn may_equal(&self, other: &ChannelTemplate) -> bool {
+        let (mine, theirs) = (self.steps(), other.steps());
+        let width = theirs.len() + 1;
+        let mut reached = vec![false; (mine.len() + 1) * width];
+        reached[0] = true;
+        for i in 0..mine.len() {
+            for j in 0..theirs.len() {
+                if !(reached[i * width + j] && mine[i].takes(theirs[j])) {
+                    continue;
+                }
+                // Whoever is at a capture may stay at it; both staying is nothing new.
+                reached[(i + 1) * width + j + 1] = true;
+                reached[(i + 1) * width + j] |= theirs[j] == Step::Captured;
+                reached[i * width + j + 1] |= mine[i] == Step::Captured;
+            }
+        }
+        reached[mine.len() * width + theirs.len()]
+    }
+
+    /// The captures of its pattern that the name does not have.
+    pub fn left_out<'p>(&self, pattern: &'p TopicPattern) -> impl Iterator<Item = &'p str> {
+        let has = |at: usize| self.pieces.contains(&Piece::Capture(at));
+        pattern
+            .captures
+            .iter()
+            .enumerate()
+            .filter(move |&(at, _)| !has(at))
+            .map(|(_, c)| c.as_str())
+    }
+}
+
 fn may_be_captured(text: &str) -> bool {
     !text.is_empty() && !text.contains('/')
 }
@@ -423,6 +486,28 @@ mod tests {
         ] {
             let pattern = TopicPattern::parse(pattern).unwrap();
             assert_eq!(pattern.reaches_below("asfound/saltmarsh"), expected, "{pattern:?}");
+        }
+    }
+
+    #[test]
+    fn templates_that_can_give_one_name_are_told_from_those_that_cannot() {
+        for (one, other, expected) in [
+            ("{tag}", "{tag}", true),
+            ("{tag}", "{area}.{tag}", true),
+            ("{area}.{tag}", "{area}.{tag}.{part}", true),
+            ("{area}.{tag}", "{area}/{tag}", false),
+            ("press.{tag}", "kiln.{tag}", false),
+            ("press.{tag}", "{area}.7", true),
+            ("{tag}.pressure", "{tag}.temperature", false),
+            ("{tag}.pressure", "{area}.{tag}", true),
+            ("x{tag}", "x", false),
+            ("fixed", "fixed", true),
+            ("fixed", "fixed1", false),
+        ] {
+            let pattern = TopicPattern::parse("{area}/{tag}/{part}").unwrap();
+            let [one, other] = [one, other].map(|t| ChannelTemplate::parse(t, &pattern).unwrap());
+            assert_eq!(one.may_equal(&other), expected, "{} {}", one.as_str(), other.as_str());
+            assert_eq!(other.may_equal(&one), expected, "{} {}", other.as_str(), one.as_str());
         }
     }
 }

@@ -3,6 +3,7 @@
 //! Two stages: `raw` says which keys there are and of which kind; `check` and `watch` turn them into
 //! values that are known to be good. Nothing is used before everything is checked.
 
+mod cautions;
 mod check;
 pub mod duration;
 mod layers;
@@ -85,21 +86,6 @@ impl Settings {
         let settings = check_all(&raw, file, environment, &mut problems);
         problems.sort();
         if problems.count() > 0 { Err(problems) } else { Ok(settings) }
-    }
-
-    /// What should be said although it is allowed; sentences without full stop.
-    pub fn cautions(&self) -> Vec<String> {
-        let mut cautions = Vec::new();
-        let host = &self.broker.host;
-        let here = host == "localhost"
-            || host.parse::<std::net::IpAddr>().is_ok_and(|address| address.is_loopback());
-        if !here {
-            cautions.push(format!(
-                "the connection to {host} is not encrypted: readings{} can be read and changed on the way",
-                if self.broker.password.is_some() { " and the password" } else { "" }
-            ));
-        }
-        cautions
     }
 
     /// The topic below which everything is published: `{topic_root}/{site}`.

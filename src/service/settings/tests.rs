@@ -5,7 +5,7 @@ use super::*;
 use crate::drift::family::Family;
 use crate::service::intake::{PayloadFormat, Pointer, Reference};
 use crate::watch::settings::{Statement, WatchSettings};
-use crate::watch::time::{DAY_US, EventTime, Span};
+use crate::watch::time::{DAY_US, EventTime, ShellTime, Span};
 
 const SHIPPED: &str = include_str!("../../../config/asfound.toml");
 
@@ -188,7 +188,7 @@ fn the_password_is_read_from_its_file_and_never_shown() {
     std::fs::set_permissions(&password, std::fs::Permissions::from_mode(0o600)).unwrap();
     let settings = load(None).unwrap();
     assert_eq!(settings.broker.password.as_ref().map(Secret::expose), Some("canary-7"));
-    let all = format!("{settings:?} {} {:?}", settings.shown(), settings.cautions());
+    let all = format!("{settings:?} {} {:?}", settings.shown(), settings.cautions(ShellTime(0)));
     assert!(all.contains("its content is withheld") && !all.contains("canary"), "{all}");
 
     std::fs::write(credentials.path().join("password"), "from the manager").unwrap();
@@ -236,7 +236,7 @@ fn a_flood_of_problems_is_counted_not_printed() {
 fn only_a_loopback_connection_goes_without_a_caution() {
     for (host, expected) in [("127.0.0.1", 0), ("localhost", 0), ("[::1]", 0), ("10.0.0.7", 1)] {
         let settings = read(&LEAST.replace("broker.example", host), &[]);
-        assert_eq!(settings.cautions().len(), expected, "{host}");
+        assert_eq!(settings.cautions(ShellTime(0)).len(), expected, "{host}");
     }
 }
 
