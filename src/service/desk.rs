@@ -4,7 +4,7 @@
 //! what follows is bundled for the store. The loop around it is in [`crate::service::daemon`].
 
 use crate::service::clock::Clock;
-use crate::service::intake::{Decoded, Refusal, Router};
+use crate::service::intake::{Decoded, Excerpt, Refusal, Router};
 use crate::service::outbox::{Told, tell};
 use crate::service::recall::{Recall, key_of_message, key_of_reading};
 use crate::service::recover::{Recovered, apply, state_bytes};
@@ -94,6 +94,8 @@ pub struct Desk {
     /// First journal row that is not in the saved state, by channel.
     unsaved: BTreeMap<String, i64>,
     newest_row: i64,
+    /// The watch of each channel that the engine will know once what waits is committed.
+    first_waiting: BTreeMap<String, usize>,
     subscribed_before: bool,
     told: Told,
     /// What arrived.
@@ -118,6 +120,7 @@ impl Desk {
             recall: recovered.recall,
             unsaved: recovered.unsaved,
             newest_row,
+            first_waiting: BTreeMap::new(),
             subscribed_before: recovered.subscribed_before,
             told: Told::default(),
             arrivals: Arrivals::default(),
@@ -159,12 +162,27 @@ impl Desk {
             self.clock.saw(decoded.time);
             Ok((watch, not_from_the_future(decoded, self.now())?))
         });
+        let decoded = decoded.and_then(|(watch, decoded)| self.of_its_watch(watch, decoded));
         match decoded {
             Ok((watch, decoded)) => (self.reading(arrival, watch, decoded), None),
             Err(refusal) => {
                 *self.arrivals.refused.entry(refusal.code()).or_default() += 1;
                 (Put::Nothing, Some(refusal))
             }
+        }
+    }
+
+    /// The reading, unless its channel is another watch's: one whose first reading waits for its commit
+    /// included. A row names its channel only, so such a reading must not come into the journal.
+    fn of_its_watch(&self, watch: usize, decoded: Decoded) -> Result<(usize, Decoded), Refusal> {
+        let channel = &decoded.channel;
+        let owner = self.engine.watch_of(channel).or(self.first_waiting.get(channel).copied());
+        match owner.filter(|owner| *owner != watch) {
+            Some(owner) => Err(Refusal::OtherWatch {
+                channel: Excerpt::of(channel),
+                owner: Excerpt::of(self.router.route_of(owner).pattern.as_str()),
+            }),
+            None => Ok((watch, decoded)),
         }
     }
 
@@ -180,6 +198,9 @@ impl Desk {
             return Put::Nothing;
         }
         self.recall.remember(key);
+        if self.engine.watch_of(&channel).is_none() {
+            self.first_waiting.insert(channel.clone(), watch);
+        }
         let row = NewRow {
             channel,
             watch: self.pattern_of(watch),
@@ -256,6 +277,7 @@ impl Desk {
             self.attend(ShellTime(row.got));
             self.arrivals.journaled += 1;
             self.newest_row = id;
+            self.first_waiting.remove(&row.channel);
             self.unsaved.entry(row.channel.clone()).or_insert(id);
             let done = apply(&mut self.engine, id, watch, &row.channel, &row, ShellTime(row.got));
             if let Some(to) = reply_to {

@@ -134,6 +134,10 @@ impl Engine {
             self.refused.note(Taken::TooManyChannels);
             return Taken::TooManyChannels;
         };
+        if self.watches[place] != watch {
+            self.channels[place].counts.note(Taken::OtherWatch);
+            return Taken::OtherWatch;
+        }
         let context = context(&self.settings, self.watches[place], &self.births, reading.serial);
         let (taken, outcome) = self.channels[place].take(&context, reading, now);
         self.tell(place, outcome);
@@ -496,6 +500,23 @@ mod tests {
         let channel = engine.observe("press.PT-1").unwrap();
         assert_eq!(channel.cycle.unwrap().age_zero, mark);
         assert_eq!(channel.window.points().len(), 100);
+    }
+
+    #[test]
+    fn a_reading_of_another_watch_than_its_channel_is_counted_not_fitted() {
+        let kelvin = WatchSettings { unit: "K".to_owned(), ..rules() };
+        let settings = SiteSettings { watches: vec![rules(), kelvin], ..site(rules()) };
+        let mut engine = Engine::new(settings, ShellTime(START));
+        feed(&mut engine, 0, &curve(30, 18, |_| 0.0));
+        let before = engine.observe("press.PT-1").cloned().unwrap();
+        let time = EventTime(START + 40 * STEP_US);
+        let reading = Reading { serial: 41, time, deviation: 290.0 };
+        let taken = engine.take("press.PT-1", 1, &reading, ShellTime(time.0));
+        assert_eq!(taken, Taken::OtherWatch);
+        let after = engine.observe("press.PT-1").unwrap();
+        assert_eq!((&after.window, &after.refit), (&before.window, &before.refit));
+        assert_eq!(after.counts.of(Taken::OtherWatch), 1);
+        assert_eq!(engine.counts().of(Taken::OtherWatch), 1);
     }
 
     #[test]

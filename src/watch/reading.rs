@@ -30,17 +30,20 @@ pub enum Taken {
     BeforeAgeZero,
     /// The engine watches as many channels as it can.
     TooManyChannels,
+    /// Of another watch than its channel: another unit, perhaps, and other rules. Counted, not fitted.
+    OtherWatch,
 }
 
 impl Taken {
     /// All outcomes, in the order in which they are listed to people.
-    pub const ALL: [Taken; 6] = [
+    pub const ALL: [Taken; 7] = [
         Taken::Accepted,
         Taken::Duplicate,
         Taken::Contradicts,
         Taken::Late,
         Taken::BeforeAgeZero,
         Taken::TooManyChannels,
+        Taken::OtherWatch,
     ];
 
     /// The outcome in plain words.
@@ -52,6 +55,7 @@ impl Taken {
             Taken::Late => "late, not fitted",
             Taken::BeforeAgeZero => "not after age zero",
             Taken::TooManyChannels => "too many channels",
+            Taken::OtherWatch => "belongs to another watch",
         }
     }
 }

@@ -206,3 +206,42 @@ fn store_that_cannot_be_written_ends_it_with_1_and_loses_nothing() {
     check_journal(&site, &[1, 2]);
     assert_eq!(daemon.terminate(), Some(0));
 }
+
+#[test]
+fn a_channel_takes_readings_of_one_watch_only() {
+    let broker = Broker::running();
+    let watch = |topic: &str, unit: &str| {
+        format!(
+            "[[watch]]\ntopic = \"{topic}\"\nchannel = \"{{tag}}\"\nunit = \"{unit}\"\n\
+             payload = {{ format = \"json\", value = \"/v\", time = \"/ts\" }}\n"
+        )
+    };
+    let site = Site::with_settings(&format!(
+        "site.name = \"saltmarsh\"\nbroker.url = \"mqtt://127.0.0.1:{}\"\n\
+         store.directory = \"store\"\n{}{}",
+        broker.port(),
+        watch("p/{tag}/pressure", "bar"),
+        watch("p/{tag}/temperature", "K"),
+    ));
+    let reading = |quantity: &str, value: f64, hour: u32| {
+        let payload = format!(r#"{{"v":{value},"ts":"2025-02-01T{hour:02}:00:00Z"}}"#);
+        Message::new(format!("p/T1/{quantity}"), payload)
+    };
+    let mut publisher = Publisher::new(broker.port());
+    // Within one commit, by a daemon that knows the channel already, and after a restart.
+    for (round, known) in [(1, 0), (2, 2), (3, 4)] {
+        let daemon = Daemon::listening(&site);
+        daemon.log.wait_for("can give the same name");
+        publisher.publish(&[
+            reading("pressure", 4.0, 2 * round),
+            reading("temperature", 290.0, 2 * round),
+            reading("pressure", 4.1, 2 * round + 1),
+        ]);
+        daemon.log.wait_for("channel \"T1\" belongs to the watch of \"p/{tag}/pressure\"");
+        store::wait_for_readings(&site, known + 2);
+        let counts = end(daemon);
+        assert!(counts.contains("stored=2") && counts.contains("refused=1"), "{counts}");
+    }
+    let values: Vec<f64> = store::readings_of(&site, "T1").iter().map(|(_, v)| *v).collect();
+    assert_eq!(values, [4.0, 4.1, 4.0, 4.1, 4.0, 4.1]);
+}

@@ -39,6 +39,16 @@ pub enum Refusal {
         /// The topic or channel.
         name: Excerpt,
     },
+    /// The channel is another watch's.
+    #[error(
+        "channel {channel} belongs to the watch of {owner}; give the channels of this watch another name"
+    )]
+    OtherWatch {
+        /// The channel.
+        channel: Excerpt,
+        /// The topic of the watch that has it.
+        owner: Excerpt,
+    },
     /// The captures make a name that is too long.
     #[error("the channel's name has {bytes} bytes; at most {most} are allowed")]
     ChannelTooLong {
@@ -179,6 +189,7 @@ impl Refusal {
     pub const fn code(&self) -> &'static str {
         match self {
             Refusal::NoMatchingWatch { .. } => "no-matching-watch",
+            Refusal::OtherWatch { .. } => "other-watch",
             Refusal::ChannelTooLong { .. } => "channel-too-long",
             Refusal::Retained => "retained",
             Refusal::Empty => "empty",
