@@ -28,7 +28,8 @@ pub fn trace<const N: usize>(
     let sample = |x: f64| -> Sample<N> { (x, curves(x).map(|ys| ys.map(near))) };
     let mut samples = vec![sample(from)];
     for piece in 1..=PIECES {
-        let end = sample(from + (to - from) * (f64::from(piece) / f64::from(PIECES)));
+        let share = f64::from(piece) / f64::from(PIECES);
+        let end = sample(from * (1.0 - share) + to * share);
         let begin = samples[samples.len() - 1];
         halve(&sample, begin, end, HALVINGS_MAX, &mut samples);
     }
