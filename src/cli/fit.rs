@@ -4,6 +4,8 @@
 //! The watch fits robustly and judges differently.
 
 pub mod look;
+pub mod plot;
+pub mod save;
 pub mod series;
 pub mod table;
 
@@ -34,6 +36,9 @@ pub struct FitArgs {
     /// Print JSON
     #[arg(long)]
     pub json: bool,
+    /// Also draw readings, curves and residuals into this file; one that is there is replaced
+    #[arg(long, value_name = "OUT.svg")]
+    pub plot: Option<PathBuf>,
 }
 
 fn family(name: &str) -> Result<Family, String> {
@@ -51,7 +56,8 @@ fn number(text: &str) -> Result<f64, String> {
 /// Runs the command. Returns the exit code.
 ///
 /// # Outcomes
-/// 0: the series was read; families that could not be had say why. 1: the output cannot be written.
+/// 0: the series was read; families that could not be had say why. 1: the output or the picture cannot
+/// be written.
 /// 2: the file cannot be read as a series.
 pub fn fit(args: &FitArgs, out: &mut dyn Write, err: &mut dyn Write) -> u8 {
     // A reader that went away, such as `head`, is no reason for words that nobody sees.
@@ -79,6 +85,13 @@ fn run(args: &FitArgs, out: &mut dyn Write, err: &mut dyn Write) -> io::Result<u
         writeln!(out)?;
     } else {
         table::write(&look, &series, out)?;
+    }
+    if let Some(path) = &args.plot {
+        let names = plot::Names { x: &args.x, y: &args.y };
+        if let Err(why) = save::save(path, &plot::svg(&look, &series, names), &args.file) {
+            writeln!(err, "{}: the picture cannot be written: {why}", path.display())?;
+            return Ok(EXIT_FAILED);
+        }
     }
     Ok(EXIT_DONE)
 }

@@ -13,7 +13,7 @@ pub mod trace;
 use crate::cli::fit::look::Look;
 use crate::cli::fit::series::Series;
 use crate::service::shown::Shown;
-use canvas::{Pen, RGBColor, Stands, Words, picture};
+use canvas::{RGBColor, Stands, Words, picture};
 use header::{Kind, Limits};
 use scene::Scene;
 
@@ -59,11 +59,8 @@ impl Names<'_> {
 /// A whole SVG document.
 pub fn svg(look: &Look, series: &Series, names: Names<'_>) -> String {
     let mut scene = Scene::of(look, series, (EDGE_PX, f64::from(WIDTH_PX) - EDGE_PX));
-    let limits = Limits {
-        drawn: scene.drawn.len(),
-        cut: scene.cut,
-        ages_outside: scene.ages_outside,
-    };
+    let limits =
+        Limits { drawn: scene.drawn.len(), cut: scene.cut, ages_outside: scene.ages_outside };
     let lines = header::lines(look, series, limits, f64::from(WIDTH_PX) - 2.0 * EDGE_PX);
     let top = EDGE_PX + LINE_PX * (lines.len() as f64 + 0.5);
     let bottom = scene.lay_out(top, READINGS_PX, BETWEEN_PX, RESIDUALS_PX);

@@ -5,6 +5,7 @@
 
 use plotters::prelude::*;
 use plotters::style::text_anchor::{HPos, Pos, VPos};
+pub use plotters::style::{RGBColor, WHITE};
 
 /// Steps of the drawing crate in one pixel.
 const STEPS_PER_PX: f64 = 10.0;
@@ -146,8 +147,7 @@ impl Canvas<'_> {
         if stands == Stands::Upwards {
             font = font.transform(FontTransform::Rotate270);
         }
-        let style =
-            TextStyle::from(font).color(&words.colour).pos(Pos::new(across, VPos::Center));
+        let style = TextStyle::from(font).color(&words.colour).pos(Pos::new(across, VPos::Center));
         self.backend.draw_text(text, &style, step_place(place)).expect(IN_MEMORY);
     }
 }

@@ -57,9 +57,9 @@ pub fn lines(look: &Look, series: &Series, limits: Limits, width: f64) -> Vec<(K
         let n = limits.ages_outside;
         said.push((Kind::Caution, format!("ages asked for that lie outside the picture: {n}")));
     }
-    let wrapped = said.into_iter().flat_map(|(kind, text)| {
-        wrap(&text, width).into_iter().map(move |line| (kind, line))
-    });
+    let wrapped = said
+        .into_iter()
+        .flat_map(|(kind, text)| wrap(&text, width).into_iter().map(move |line| (kind, line)));
     wrapped.collect()
 }
 
@@ -73,8 +73,7 @@ fn of_curve(best: &Curve, look: &Look, series: &Series) -> Vec<(Kind, String)> {
         })
         .collect();
     said.push((Kind::Plain, format!("{} (± standard error)", coefficients.join(", "))));
-    let r_squared =
-        fit.r_squared.map_or_else(String::new, |r| format!(", R squared {}", short(r)));
+    let r_squared = fit.r_squared.map_or_else(String::new, |r| format!(", R squared {}", short(r)));
     said.push((
         Kind::Plain,
         format!(

@@ -45,9 +45,13 @@ mod tests {
         assert!(kept.contains(&5_050));
         for (k, pair) in kept.chunks(2).enumerate() {
             let column = &y[100 * k..100 * (k + 1)];
-            let (least, most) = column.iter().fold((f64::MAX, f64::MIN), |(a, b), &v| (a.min(v), b.max(v)));
+            let (least, most) =
+                column.iter().fold((f64::MAX, f64::MIN), |(a, b), &v| (a.min(v), b.max(v)));
             let (a, b) = (y[pair[0]], y[pair[1]]);
-            assert_eq!((a.min(b).total_cmp(&least), a.max(b).total_cmp(&most)), (std::cmp::Ordering::Equal, std::cmp::Ordering::Equal));
+            assert_eq!(
+                (a.min(b).total_cmp(&least), a.max(b).total_cmp(&most)),
+                (std::cmp::Ordering::Equal, std::cmp::Ordering::Equal)
+            );
         }
     }
 
