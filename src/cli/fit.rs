@@ -37,13 +37,20 @@ pub struct FitArgs {
     #[arg(long)]
     pub json: bool,
     /// Also draw readings, curves and residuals into this file; one that is there is replaced
-    #[arg(long, value_name = "OUT.svg")]
+    #[arg(long, value_name = "OUT.svg", value_parser = picture)]
     pub plot: Option<PathBuf>,
 }
 
 fn family(name: &str) -> Result<Family, String> {
     Family::from_name(name)
         .ok_or_else(|| format!("one of {}", Family::ALL.map(Family::name).join(", ")))
+}
+
+fn picture(path: &str) -> Result<PathBuf, String> {
+    match path {
+        "-" => Err("a file is needed; stdout has the numbers".to_owned()),
+        path => Ok(path.into()),
+    }
 }
 
 fn number(text: &str) -> Result<f64, String> {

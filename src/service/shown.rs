@@ -64,7 +64,7 @@ pub(super) fn needs_escape(c: char) -> bool {
             | '\u{2060}'..='\u{206f}'                  // joiner, invisible operators, isolates
             | '\u{fe00}'..='\u{fe0f}'                  // variation selectors
             | '\u{feff}'                               // byte order mark
-            | '\u{fff0}'..='\u{fffd}'                  // interlinear marks, replacement character
+            | '\u{fff0}'..='\u{ffff}'                  // interlinear marks, replacement, no characters
             | '\u{e0000}'..='\u{e0fff}') // tags, further variation selectors
 }
 

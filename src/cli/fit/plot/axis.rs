@@ -4,8 +4,8 @@ use super::canvas::width_px;
 
 /// Numbers beyond this are drawn at it, so that the span of an axis stays finite.
 const NUMBER_MAX: f64 = 4e307;
-/// The smallest span of an axis, as a share of its largest number: ticks keep their digits.
-const SPAN_SHARE_MIN: f64 = 1e-11;
+/// Numbers whose span is this share of the largest differ by rounding; the axis shows them as equal.
+const SPAN_SHARE_MIN: f64 = 1e-12;
 /// The smallest span at all.
 const SPAN_MIN: f64 = 1e-290;
 /// Widest power of ten that numbers are written out with.
@@ -46,9 +46,8 @@ impl Axis {
     pub fn new(least: f64, most: f64, room: f64, (from_px, to_px): (f64, f64)) -> Axis {
         let (least, most) = (held(least), held(most));
         let largest = least.abs().max(most.abs());
-        let half = if most > least {
-            let span = (most - least) * (1.0 + 2.0 * room);
-            0.5 * span.max(SPAN_SHARE_MIN * largest).max(SPAN_MIN)
+        let half = if most - least > SPAN_SHARE_MIN * largest {
+            ((0.5 + room) * (most - least)).max(SPAN_MIN)
         } else if largest > SPAN_MIN {
             0.05 * largest
         } else {
@@ -64,8 +63,9 @@ impl Axis {
         self.from_px + share * (self.to_px - self.from_px)
     }
 
-    /// The number at a share of the axis.
-    pub fn value(&self, share: f64) -> f64 {
+    /// The number that stands at a place.
+    pub fn value_at(&self, px: f64) -> f64 {
+        let share = (px - self.from_px) / (self.to_px - self.from_px);
         self.low + share * (self.high - self.low)
     }
 

@@ -95,14 +95,18 @@ pub fn picture(width_px: u32, height_px: u32, draw: impl FnOnce(&mut Canvas<'_>)
 }
 
 impl Canvas<'_> {
-    /// A line through places.
+    /// A line through places; nothing where they are all the same.
     pub fn line(&mut self, places: &[Place], pen: Pen) {
         let style = ShapeStyle {
             color: pen.colour.mix(pen.opacity),
             filled: false,
             stroke_width: steps(pen.width_px).unsigned_abs(),
         };
-        let places = places.iter().copied().map(step_place);
+        let mut places: Vec<_> = places.iter().copied().map(step_place).collect();
+        places.dedup();
+        if places.len() < 2 {
+            return;
+        }
         self.backend.draw_path(places, &style).expect(IN_MEMORY);
     }
 

@@ -42,20 +42,20 @@ pub fn lines(look: &Look, series: &Series, limits: Limits, width: f64) -> Vec<(K
             (
                 Kind::Title,
                 format!(
-                    "thinned for drawing: {} of {} readings, the highest and lowest of every pixel \
-                     column",
+                    "thinned for drawing: {} of {} readings, among them the highest and lowest of \
+                     every pixel column",
                     limits.drawn, look.n
                 ),
             ),
         );
     }
     if limits.cut {
-        let words = "the curve or its band goes on beyond the upper or lower edge";
+        let words = "the chosen curve or its band goes on beyond the edge of the picture";
         said.push((Kind::Caution, words.to_owned()));
     }
     if limits.ages_outside > 0 {
         let n = limits.ages_outside;
-        said.push((Kind::Caution, format!("ages asked for that lie outside the picture: {n}")));
+        said.push((Kind::Caution, format!("{n} of the ages asked for: too far out to be shown")));
     }
     let wrapped = said
         .into_iter()
@@ -77,10 +77,10 @@ fn of_curve(best: &Curve, look: &Look, series: &Series) -> Vec<(Kind, String)> {
     said.push((
         Kind::Plain,
         format!(
-            "{}, residual sd {} with {} degrees of freedom{r_squared}",
+            "{}, residual sd {} with {} of freedom{r_squared}",
             readings(series),
             short(fit.residual_sd),
-            fit.degrees_of_freedom
+            several(fit.degrees_of_freedom, "degree"),
         ),
     ));
     if let Some(why) = &look.why {
@@ -110,10 +110,15 @@ fn of_no_curve(look: &Look, series: &Series) -> Vec<(Kind, String)> {
 fn readings(series: &Series) -> String {
     match (series.x.first(), series.x.last()) {
         (Some(&oldest), Some(&newest)) => {
-            format!("{} readings, x {} to {}", series.x.len(), short(oldest), short(newest))
+            let readings = several(series.x.len(), "reading");
+            format!("{readings}, x {} to {}", short(oldest), short(newest))
         }
         _ => "no readings".to_owned(),
     }
+}
+
+fn several(n: usize, what: &str) -> String {
+    if n == 1 { format!("1 {what}") } else { format!("{n} {what}s") }
 }
 
 /// Breaks a text between words.

@@ -35,6 +35,8 @@ const HATCH_EVERY_PX: f64 = 9.0;
 const TEXT_PX: f64 = 12.0;
 /// From one curve's name to the next, pixels.
 const NAME_EVERY_PX: f64 = 15.0;
+/// Curves that end at most so far from the panel's side are tied to their names, pixels.
+const THREAD_PX: f64 = 60.0;
 /// Intervals drawn at ages asked for; further ones are only in the table.
 const WHISKERS_MAX: usize = 50;
 const WHISKER_PX: f64 = 4.0;
@@ -59,7 +61,7 @@ pub fn draw(
     series: &Series,
     names: Names<'_>,
 ) {
-    let numbers = scene.across.ticks_across(NUMBER_PX);
+    let numbers = scene.ticks_across();
     let upright = Names::label(names.y, "y", NAME_UPRIGHT_CHARS_MAX);
     let panel = Panel { across: &scene.across, upright: &scene.upright };
     panel.past(canvas, scene);
@@ -155,7 +157,15 @@ impl Panel<'_> {
             } else {
                 ((9.0, 0.5 * wide), Stands::Upwards)
             };
-            let place = (middle, self.top() + half.1 + 6.0);
+            // Where the chosen curve is not.
+            let high = scene.best.as_ref().and_then(|best| best.at(self.across.value_at(middle)));
+            let high = high.map_or(self.bottom(), |i| self.upright.place(i.value));
+            let y = if high > 0.5 * (self.top() + self.bottom()) {
+                self.top() + half.1 + 6.0
+            } else {
+                self.bottom() - half.1 - 6.0
+            };
+            let place = (middle, y);
             let (l, r) = ((middle - half.0).max(left), (middle + half.0).min(right));
             let (t, b) = (place.1 - half.1, place.1 + half.1);
             canvas.fill(&[(l, t), (r, t), (r, b), (l, b)], WHITE, 0.8);
@@ -257,7 +267,8 @@ impl Panel<'_> {
         let room = (self.top() + 8.0, self.bottom() - 8.0);
         for (end, y) in ends.iter().zip(apart(&wanted, NAME_EVERY_PX, room)) {
             let right = self.right();
-            if let Some(place) = end.end {
+            // A thread to a curve that left the panel earlier would cross the others.
+            if let Some(place) = end.end.filter(|&(x, _)| x > right - THREAD_PX) {
                 let thread = Pen { width_px: 0.7, colour: end.pen.colour, opacity: 0.6 };
                 canvas.line(&[place, (right + 6.0, y)], thread);
             }
@@ -295,11 +306,10 @@ impl Panel<'_> {
         let two_sd = 2.0 * best.curve.fit.residual_sd;
         for (level, text) in [(two_sd, "+2 residual sd"), (-two_sd, "-2 residual sd")] {
             let y = self.upright.place(level);
-            if (y - zero).abs() < NUMBER_PX {
-                continue;
-            }
             canvas.dashes((left, y), (right, y), pen(TWO_SD, THIN));
-            canvas.words(text, (right + 6.0, y), Stands::Right, plain(NUMBER_PX));
+            // Beside a far outlier the lines come so close that their words move apart.
+            let apart = (y - zero).signum() * (y - zero).abs().max(0.6 * NUMBER_PX);
+            canvas.words(text, (right + 6.0, zero + apart), Stands::Right, plain(NUMBER_PX));
         }
     }
 }

@@ -21,12 +21,13 @@ const LOOKS: u32 = 256;
 const ROOM: f64 = 0.04;
 /// Ticks of the upright axes.
 const TICKS_READINGS: usize = 7;
-const TICKS_RESIDUALS: usize = 4;
+const TICKS_RESIDUALS: usize = 6;
 /// Height of the font of the numbers, pixels.
 pub const NUMBER_PX: f64 = 11.0;
-/// Space for an upright label, between numbers and axis, for the names of curves, pixels.
-const UPRIGHT_PX: f64 = 24.0;
+/// From a number to its axis, pixels.
 pub const NUMBER_GAP_PX: f64 = 7.0;
+/// Space for an upright label, for the names of curves, pixels.
+const UPRIGHT_PX: f64 = 24.0;
 const CURVE_NAMES_PX: f64 = 118.0;
 
 /// The picture as numbers.
@@ -91,8 +92,9 @@ impl<'a> Scene<'a> {
         let asked: Vec<f64> =
             best.iter().flat_map(|b| b.curve.predictions.iter().map(|p| p.x)).collect();
         let (reach, ages_outside) = reach(readings, &asked);
-        let (low, high, cut) = extent(y, best.as_ref(), readings, reach);
-        let upright = Axis::new(low, high, ROOM, (1.0, 0.0));
+        let (shown, all) = extent(y, best.as_ref(), readings, reach);
+        let upright = Axis::new(shown.0, shown.1, ROOM, (1.0, 0.0));
+        let cut = all.0 < upright.low || all.1 > upright.high;
         let mut numbers = upright.ticks(TICKS_READINGS);
         numbers.extend(best.iter().flat_map(|b| b.upright.ticks(TICKS_RESIDUALS)));
         let widest = numbers.iter().map(|t| width_px(&t.label, NUMBER_PX)).fold(0.0, f64::max);
@@ -123,9 +125,14 @@ impl<'a> Scene<'a> {
         }
     }
 
-    /// Ticks of the readings' upright axis.
+    /// Ticks of the readings' upright axis; none where there are no readings to measure.
     pub fn reading_ticks(&self) -> Vec<Tick> {
-        self.upright.ticks(TICKS_READINGS)
+        if self.drawn.is_empty() { Vec::new() } else { self.upright.ticks(TICKS_READINGS) }
+    }
+
+    /// Ticks across the page, as [`Scene::reading_ticks`].
+    pub fn ticks_across(&self) -> Vec<Tick> {
+        if self.drawn.is_empty() { Vec::new() } else { self.across.ticks_across(NUMBER_PX) }
     }
 }
 
@@ -159,17 +166,17 @@ fn reach((oldest, newest): (f64, f64), asked: &[f64]) -> ((f64, f64), usize) {
     ((from, to), outside)
 }
 
-/// The upright axis' numbers: least, most, and whether the chosen curve or its band goes beyond.
+/// Least and most of what the upright axis shows, and of all that there is.
 fn extent(
     y: &[f64],
     best: Option<&Best<'_>>,
     (oldest, newest): (f64, f64),
     (from, to): (f64, f64),
-) -> (f64, f64, bool) {
+) -> ((f64, f64), (f64, f64)) {
     let fold = |(low, high): (f64, f64), v: f64| (low.min(v), high.max(v));
     let least = y.iter().copied().fold((f64::INFINITY, f64::NEG_INFINITY), fold);
     let (mut low, mut high) = if y.is_empty() { (0.0, 0.0) } else { least };
-    let Some(best) = best else { return (low, high, false) };
+    let Some(best) = best else { return ((low, high), (low, high)) };
     let between = |from: f64, to: f64| {
         (0..=LOOKS).map(move |k| {
             let share = f64::from(k) / f64::from(LOOKS);
@@ -189,8 +196,7 @@ fn extent(
     let (all_among, all_beyond) = (ends(&among), ends(&beyond));
     let (a, b) = (held(all_among, BAND_AMONG_MAX), held(all_beyond, BAND_BEYOND_MAX));
     let wide = if from < oldest || to > newest { (a.0.min(b.0), a.1.max(b.1)) } else { a };
-    let cut = all_beyond.0 < wide.0 || all_beyond.1 > wide.1;
-    (wide.0, wide.1, cut)
+    (wide, all_beyond)
 }
 
 #[cfg(test)]
