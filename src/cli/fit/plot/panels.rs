@@ -4,7 +4,7 @@
 use super::axis::{Axis, Tick};
 use super::canvas::{Canvas, Pen, Place, RGBColor, Stands, WHITE, Words, width_px};
 use super::scene::{Best, NUMBER_GAP_PX, NUMBER_PX, Scene, value};
-use super::trace::{cut, trace};
+use super::trace::{Run, cut, trace};
 use super::{INK, NAME_CHARS_MAX, NAME_UPRIGHT_CHARS_MAX, Names};
 use crate::cli::fit::look::Look;
 use crate::cli::fit::series::Series;
@@ -40,9 +40,13 @@ const THREAD_PX: f64 = 60.0;
 /// Intervals drawn at ages asked for; further ones are only in the table.
 const WHISKERS_MAX: usize = 50;
 const WHISKER_PX: f64 = 4.0;
-/// Radius of a dot by the number of dots, pixels.
-const DOTS: [(usize, f64); 3] = [(150, 2.8), (1_000, 2.0), (usize::MAX, 1.3)];
+/// Radius and opacity of a dot by the number of dots, pixels.
+const DOTS: [(usize, f64, f64); 3] = [(150, 2.8, 0.8), (800, 2.0, 0.8), (usize::MAX, 1.3, 0.5)];
+/// More dots than this lie under the lines, which they would hide.
+const DOTS_ABOVE_MAX: usize = 800;
 
+/// Widths of lines, pixels: of the chosen curve, of all others.
+const BEST_PX: f64 = 2.4;
 const THIN: f64 = 1.0;
 
 fn pen(colour: RGBColor, width_px: f64) -> Pen {
@@ -66,12 +70,15 @@ pub fn draw(
     let panel = Panel { across: &scene.across, upright: &scene.upright };
     panel.past(canvas, scene);
     panel.grid(canvas, &numbers, &scene.reading_ticks(), &upright);
-    if let Some(best) = &scene.best {
-        panel.curves(canvas, scene, best, look);
-    }
-    panel.dots(canvas, scene, &series.x, &series.y);
-    if let Some(best) = &scene.best {
-        panel.whiskers(canvas, best);
+    let dots = |canvas: &mut Canvas<'_>| panel.dots(canvas, scene, &series.x, &series.y);
+    match &scene.best {
+        Some(best) => {
+            let curves = panel.band(canvas, scene, best);
+            let lines = |canvas: &mut Canvas<'_>| panel.curves(canvas, scene, look, &curves);
+            in_order(canvas, scene, lines, dots);
+            panel.whiskers(canvas, best);
+        }
+        None => dots(canvas),
     }
     panel.frame(canvas);
     panel.past_words(canvas, scene);
@@ -80,14 +87,31 @@ pub fn draw(
             let panel = Panel { across: &scene.across, upright: &best.upright };
             panel.past(canvas, scene);
             panel.grid(canvas, &numbers, &best.ticks(), "residual");
-            panel.levels(canvas, best);
-            panel.dots(canvas, scene, &series.x, &best.residuals);
+            let dots =
+                |canvas: &mut Canvas<'_>| panel.dots(canvas, scene, &series.x, &best.residuals);
+            in_order(canvas, scene, |canvas| panel.levels(canvas, best), dots);
             panel.frame(canvas);
             panel
         }
         None => panel,
     };
     lowest.foot(canvas, &numbers, &Names::label(names.x, "x", NAME_CHARS_MAX));
+}
+
+/// Draws lines and dots, the more telling above.
+fn in_order(
+    canvas: &mut Canvas<'_>,
+    scene: &Scene<'_>,
+    lines: impl Fn(&mut Canvas<'_>),
+    dots: impl Fn(&mut Canvas<'_>),
+) {
+    if scene.drawn.len() > DOTS_ABOVE_MAX {
+        dots(canvas);
+        lines(canvas);
+    } else {
+        lines(canvas);
+        dots(canvas);
+    }
 }
 
 struct Panel<'a> {
@@ -207,18 +231,22 @@ impl Panel<'_> {
 
     fn dots(&self, canvas: &mut Canvas<'_>, scene: &Scene<'_>, x: &[f64], y: &[f64]) {
         let many = scene.drawn.len();
-        let radius = DOTS.iter().find(|(most, _)| many <= *most).map_or(THIN, |&(_, r)| r);
+        let fits = |&(most, radius, opacity): &(usize, f64, f64)| {
+            (many <= most).then_some((radius, opacity))
+        };
+        let (radius, opacity) = DOTS.iter().find_map(fits).unwrap_or((1.0, 1.0));
         for &k in &scene.drawn {
             let place = (self.across.place(x[k]), self.upright.place(y[k]));
-            canvas.dot(place, radius, READING, 0.8);
+            canvas.dot(place, radius, READING, opacity);
         }
     }
 
-    fn curves(&self, canvas: &mut Canvas<'_>, scene: &Scene<'_>, best: &Best<'_>, look: &Look) {
+    /// Draws the band; returns the chosen curve and the band's ends.
+    fn band(&self, canvas: &mut Canvas<'_>, scene: &Scene<'_>, best: &Best<'_>) -> Vec<Run<3>> {
         let (from, to) = scene.reach;
-        let band =
+        let ends =
             |x: f64| best.at(x).map(|i| [i.value, i.low, i.high].map(|y| self.upright.place(y)));
-        let chosen = trace(&band, from, to);
+        let chosen = trace(&ends, from, to);
         for run in &chosen {
             let edge = |k: usize| {
                 move |&(x, ys): &(f64, [f64; 3])| (self.across.place(x), self.within(ys[k]))
@@ -227,16 +255,22 @@ impl Panel<'_> {
                 run.iter().map(edge(2)).chain(run.iter().rev().map(edge(1))).collect();
             canvas.fill(&around, BEST, BAND_OPACITY);
         }
+        chosen
+    }
+
+    fn curves(&self, canvas: &mut Canvas<'_>, scene: &Scene<'_>, look: &Look, chosen: &[Run<3>]) {
+        let (from, to) = scene.reach;
         let mut ends = Vec::new();
-        // The best of the others last, on top.
+        // The best of the others last, on top; the chosen one above all.
         let others: Vec<_> = look.curves.iter().skip(1).zip(OTHERS).collect();
         for (curve, colour) in others.into_iter().rev() {
             let line = |x: f64| value(&curve.fit, x).map(|y| [self.upright.place(y)]);
             let end = self.curve(canvas, &trace(&line, from, to), pen(colour, THIN));
             ends.push(End { name: curve.fit.family.name(), end, pen: pen(colour, THIN) });
         }
-        let end = self.curve(canvas, &chosen, pen(BEST, 2.4));
-        ends.push(End { name: best.curve.fit.family.name(), end, pen: pen(BEST, 2.4) });
+        let end = self.curve(canvas, chosen, pen(BEST, BEST_PX));
+        let name = look.curves[0].fit.family.name();
+        ends.push(End { name, end, pen: pen(BEST, BEST_PX) });
         self.curve_names(canvas, ends);
     }
 
@@ -244,7 +278,7 @@ impl Panel<'_> {
     fn curve<const N: usize>(
         &self,
         canvas: &mut Canvas<'_>,
-        runs: &[Vec<(f64, [f64; N])>],
+        runs: &[Run<N>],
         pen: Pen,
     ) -> Option<Place> {
         let mut end = None;

@@ -13,18 +13,16 @@ const FAR_PX: f64 = 2_000.0;
 
 /// Some curves of one x, in pixels; None where they are not defined.
 pub type Curves<'a, const N: usize> = &'a dyn Fn(f64) -> Option<[f64; N]>;
+/// x and the curves' heights, x rising, without a gap.
+pub type Run<const N: usize> = Vec<(f64, [f64; N])>;
 /// x and what the curves are there.
 type Sample<const N: usize> = (f64, Option<[f64; N]>);
 
 /// Traces curves over a range.
 ///
 /// # Returns
-/// Runs of (x, curves) without a gap between them, x rising.
-pub fn trace<const N: usize>(
-    curves: Curves<'_, N>,
-    from: f64,
-    to: f64,
-) -> Vec<Vec<(f64, [f64; N])>> {
+/// The runs in which all of them are defined.
+pub fn trace<const N: usize>(curves: Curves<'_, N>, from: f64, to: f64) -> Vec<Run<N>> {
     let sample = |x: f64| -> Sample<N> { (x, curves(x).map(|ys| ys.map(near))) };
     let mut samples = vec![sample(from)];
     for piece in 1..=PIECES {
