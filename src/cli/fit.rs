@@ -224,6 +224,27 @@ mod tests {
         };
         assert!(refusal(&["--family", "spline"]).contains("one of linear, logarithmic, power"));
         assert!(refusal(&["--at", "NaN"]).contains("a finite number is needed"));
+        assert!(refusal(&["--plot", "-"]).contains("a file is needed"));
+    }
+
+    #[test]
+    fn the_picture_is_written_beside_the_numbers() {
+        let folder = tempfile::tempdir().unwrap();
+        let picture = folder.path().join("out.svg");
+        let (code, out, err) = check(DANWOOD, &["--json", "--plot", picture.to_str().unwrap()]);
+        assert_eq!((code, err.as_str()), (EXIT_DONE, ""));
+        assert!(serde_json::from_str::<serde_json::Value>(&out).is_ok(), "{out}");
+        let svg = std::fs::read_to_string(&picture).unwrap();
+        assert!(svg.starts_with("<svg ") && svg.ends_with("</svg>\n"), "{svg}");
+    }
+
+    #[test]
+    fn a_picture_that_cannot_be_written_leaves_the_numbers_and_exit_code_1() {
+        let (code, out, err) = check(DANWOOD, &["--plot", "/dev/null"]);
+        assert_eq!(code, EXIT_FAILED);
+        let why = "/dev/null: the picture cannot be written: what stands there is not a file\n";
+        assert_eq!(err, why);
+        assert!(out.starts_with("6 readings, "), "{out}");
     }
 
     #[test]

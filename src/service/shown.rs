@@ -101,6 +101,11 @@ mod tests {
     }
 
     #[test]
+    fn what_is_no_character_is_escaped_for_xml_forbids_it() {
+        check("\u{fffe}\u{ffff}", 80, "\\u{fffe}\\u{ffff}");
+    }
+
+    #[test]
     fn an_escape_cannot_be_forged() {
         check("\\u{1b}", 80, "\\\\u{1b}");
     }

@@ -78,3 +78,6 @@ pub fn svg(look: &Look, series: &Series, names: Names<'_>) -> String {
         panels::draw(canvas, &scene, look, series, names);
     })
 }
+
+#[cfg(test)]
+mod tests;

@@ -53,3 +53,59 @@ fn folder(path: &Path) -> PathBuf {
         _ => PathBuf::from("."),
     }
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    /// A folder with a source in it.
+    fn folder_with_source() -> (tempfile::TempDir, PathBuf) {
+        let folder = tempfile::tempdir().unwrap();
+        let source = folder.path().join("series.csv");
+        fs::write(&source, "x,y\n").unwrap();
+        (folder, source)
+    }
+
+    fn names(folder: &Path) -> Vec<String> {
+        let entries = fs::read_dir(folder).unwrap();
+        let mut names: Vec<String> =
+            entries.map(|entry| entry.unwrap().file_name().into_string().unwrap()).collect();
+        names.sort();
+        names
+    }
+
+    #[test]
+    fn a_file_is_replaced_whole_and_nothing_else_stays() {
+        let (folder, source) = folder_with_source();
+        let target = folder.path().join("out.svg");
+        save(&target, "first, and longer", &source).unwrap();
+        fs::set_permissions(&target, Permissions::from_mode(0o640)).unwrap();
+        save(&target, "second", &source).unwrap();
+        assert_eq!(fs::read_to_string(&target).unwrap(), "second");
+        assert_eq!(fs::metadata(&target).unwrap().permissions().mode() & 0o777, 0o640);
+        assert_eq!(names(folder.path()), ["out.svg", "series.csv"]);
+    }
+
+    #[test]
+    fn a_link_stays_and_what_it_names_is_replaced() {
+        let (folder, source) = folder_with_source();
+        let (target, link) = (folder.path().join("out.svg"), folder.path().join("link.svg"));
+        fs::write(&target, "old").unwrap();
+        std::os::unix::fs::symlink(&target, &link).unwrap();
+        save(&link, "new", &source).unwrap();
+        assert!(fs::symlink_metadata(&link).unwrap().is_symlink());
+        assert_eq!(fs::read_to_string(&target).unwrap(), "new");
+    }
+
+    #[test]
+    fn the_series_itself_and_what_is_no_file_are_refused() {
+        let (folder, source) = folder_with_source();
+        let refused = |path: &Path| save(path, "new", &source).unwrap_err().to_string();
+        assert_eq!(refused(&source), "this is the series itself; it would be lost");
+        assert_eq!(refused(folder.path()), "what stands there is not a file");
+        assert_eq!(refused(Path::new("/dev/null")), "what stands there is not a file");
+        assert!(refused(&folder.path().join("none/out.svg")).contains("No such file"));
+        assert_eq!(fs::read_to_string(&source).unwrap(), "x,y\n");
+        assert_eq!(names(folder.path()), ["series.csv"]);
+    }
+}

@@ -13,6 +13,8 @@ const PLAIN_EXPONENTS: std::ops::RangeInclusive<i32> = -3..=6;
 /// Beyond it, numbers of so many digits after the first are still written out: they would be no
 /// shorter with an exponent.
 const PLAIN_DIGITS: i32 = 4;
+/// A tick may lie so many steps beyond the end of its axis.
+const TICK_SLACK: f64 = 1e-9;
 /// Free pixels between two labels along the axis.
 const LABEL_GAP_PX: f64 = 16.0;
 
@@ -80,7 +82,9 @@ impl Axis {
             (step, exponent) = (1, exponent + 1);
         }
         let unit = step as f64 * ten_to(exponent);
-        let (first, last) = ((self.low / unit).ceil() as i64, (self.high / unit).floor() as i64);
+        // An end that is a round number but for rounding has its tick.
+        let first = (self.low / unit - TICK_SLACK).ceil() as i64;
+        let last = (self.high / unit + TICK_SLACK).floor() as i64;
         let units: Vec<i64> = (first..=last).map(|k| k * step).collect();
         let largest = units.iter().map(|n| n.unsigned_abs()).max().unwrap_or(0);
         let numerals = Numerals::of(largest, exponent);

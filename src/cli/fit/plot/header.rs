@@ -126,7 +126,7 @@ fn wrap(text: &str, width: f64) -> Vec<String> {
     let mut lines: Vec<String> = Vec::new();
     for word in text.split(' ') {
         match lines.last_mut() {
-            Some(line) if width_px(line, SIZE_PX) + width_px(word, SIZE_PX) < width => {
+            Some(line) if width_px(&format!("{line} {word}"), SIZE_PX) <= width => {
                 line.push(' ');
                 line.push_str(word);
             }
