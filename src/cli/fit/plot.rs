@@ -4,6 +4,7 @@
 
 pub mod axis;
 pub mod canvas;
+pub mod curves;
 pub mod header;
 pub mod panels;
 pub mod scene;

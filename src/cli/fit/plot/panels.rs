@@ -1,25 +1,13 @@
-//! The two panels, from the lowest layer up: what lies past the data, the grid, the band, the curves,
-//! the readings, the frame.
+//! The two panels, from the lowest layer up: what lies past the data, the grid, curves and band, the
+//! readings, the frame.
 
 use super::axis::{Axis, Tick};
 use super::canvas::{Canvas, Pen, Place, RGBColor, Stands, WHITE, Words, width_px};
-use super::scene::{Best, NUMBER_GAP_PX, NUMBER_PX, Scene, value};
-use super::trace::{Run, cut, trace};
+use super::scene::{Best, NUMBER_GAP_PX, NUMBER_PX, Scene};
 use super::{INK, NAME_CHARS_MAX, NAME_UPRIGHT_CHARS_MAX, Names};
 use crate::cli::fit::look::Look;
 use crate::cli::fit::series::Series;
 
-/// The chosen curve; the readings; the others in turn. Okabe and Ito (2008), told apart by people
-/// who see fewer colours; from memory.
-pub const BEST: RGBColor = RGBColor(0, 114, 178);
-const OTHERS: [RGBColor; 6] = [
-    RGBColor(230, 159, 0),
-    RGBColor(0, 158, 115),
-    RGBColor(204, 121, 167),
-    RGBColor(213, 94, 0),
-    RGBColor(86, 180, 233),
-    RGBColor(120, 120, 120),
-];
 const READING: RGBColor = RGBColor(40, 40, 40);
 /// The line at residual 0.
 pub const ZERO: RGBColor = RGBColor(90, 90, 90);
@@ -29,31 +17,25 @@ pub const TWO_SD: RGBColor = RGBColor(150, 60, 60);
 pub const PAST: RGBColor = RGBColor(236, 232, 222);
 const HATCH: RGBColor = RGBColor(205, 198, 182);
 const GRID: RGBColor = RGBColor(225, 225, 225);
-const BAND_OPACITY: f64 = 0.16;
 
 const HATCH_EVERY_PX: f64 = 9.0;
-const TEXT_PX: f64 = 12.0;
-/// From one curve's name to the next, pixels.
-const NAME_EVERY_PX: f64 = 15.0;
-/// Curves that end at most so far from the panel's side are tied to their names, pixels.
-const THREAD_PX: f64 = 60.0;
-/// Intervals drawn at ages asked for; further ones are only in the table.
-const WHISKERS_MAX: usize = 50;
-const WHISKER_PX: f64 = 4.0;
+/// Height of the font of words, pixels.
+pub const TEXT_PX: f64 = 12.0;
 /// Radius and opacity of a dot by the number of dots, pixels.
 const DOTS: [(usize, f64, f64); 3] = [(150, 2.8, 0.8), (800, 2.0, 0.8), (usize::MAX, 1.3, 0.5)];
 /// More dots than this lie under the lines, which they would hide.
 const DOTS_ABOVE_MAX: usize = 800;
 
-/// Widths of lines, pixels: of the chosen curve, of all others.
-const BEST_PX: f64 = 2.4;
-const THIN: f64 = 1.0;
+/// Width of all lines but the chosen curve, pixels.
+pub const THIN: f64 = 1.0;
 
-fn pen(colour: RGBColor, width_px: f64) -> Pen {
+/// A solid pen.
+pub fn pen(colour: RGBColor, width_px: f64) -> Pen {
     Pen { width_px, colour, opacity: 1.0 }
 }
 
-fn plain(size_px: f64) -> Words {
+/// Words in plain ink.
+pub fn plain(size_px: f64) -> Words {
     Words { size_px, colour: INK, bold: false }
 }
 
@@ -114,30 +96,37 @@ fn in_order(
     }
 }
 
-struct Panel<'a> {
-    across: &'a Axis,
-    upright: &'a Axis,
+/// One panel.
+pub struct Panel<'a> {
+    /// Its ages.
+    pub across: &'a Axis,
+    /// Its heights.
+    pub upright: &'a Axis,
 }
 
 impl Panel<'_> {
-    fn left(&self) -> f64 {
+    /// Where it begins.
+    pub fn left(&self) -> f64 {
         self.across.from_px
     }
 
-    fn right(&self) -> f64 {
+    /// Where it ends.
+    pub fn right(&self) -> f64 {
         self.across.to_px
     }
 
-    fn top(&self) -> f64 {
+    /// Its upper end.
+    pub fn top(&self) -> f64 {
         self.upright.to_px
     }
 
-    fn bottom(&self) -> f64 {
+    /// Its lower end.
+    pub fn bottom(&self) -> f64 {
         self.upright.from_px
     }
 
     /// A height within the panel.
-    fn within(&self, y_px: f64) -> f64 {
+    pub fn within(&self, y_px: f64) -> f64 {
         y_px.clamp(self.top(), self.bottom())
     }
 
@@ -241,97 +230,6 @@ impl Panel<'_> {
         }
     }
 
-    /// Draws the band; returns the chosen curve and the band's ends.
-    fn band(&self, canvas: &mut Canvas<'_>, scene: &Scene<'_>, best: &Best<'_>) -> Vec<Run<3>> {
-        let (from, to) = scene.reach;
-        let ends =
-            |x: f64| best.at(x).map(|i| [i.value, i.low, i.high].map(|y| self.upright.place(y)));
-        let chosen = trace(&ends, from, to);
-        for run in &chosen {
-            let edge = |k: usize| {
-                move |&(x, ys): &(f64, [f64; 3])| (self.across.place(x), self.within(ys[k]))
-            };
-            let around: Vec<Place> =
-                run.iter().map(edge(2)).chain(run.iter().rev().map(edge(1))).collect();
-            canvas.fill(&around, BEST, BAND_OPACITY);
-        }
-        chosen
-    }
-
-    fn curves(&self, canvas: &mut Canvas<'_>, scene: &Scene<'_>, look: &Look, chosen: &[Run<3>]) {
-        let (from, to) = scene.reach;
-        let mut ends = Vec::new();
-        // The best of the others last, on top; the chosen one above all.
-        let others: Vec<_> = look.curves.iter().skip(1).zip(OTHERS).collect();
-        for (curve, colour) in others.into_iter().rev() {
-            let line = |x: f64| value(&curve.fit, x).map(|y| [self.upright.place(y)]);
-            let end = self.curve(canvas, &trace(&line, from, to), pen(colour, THIN));
-            ends.push(End { name: curve.fit.family.name(), end, pen: pen(colour, THIN) });
-        }
-        let end = self.curve(canvas, chosen, pen(BEST, BEST_PX));
-        let name = look.curves[0].fit.family.name();
-        ends.push(End { name, end, pen: pen(BEST, BEST_PX) });
-        self.curve_names(canvas, ends);
-    }
-
-    /// Draws the first of some curves; returns where it was last seen.
-    fn curve<const N: usize>(
-        &self,
-        canvas: &mut Canvas<'_>,
-        runs: &[Run<N>],
-        pen: Pen,
-    ) -> Option<Place> {
-        let mut end = None;
-        for run in runs {
-            let line: Vec<Place> =
-                run.iter().map(|&(x, ys)| (self.across.place(x), ys[0])).collect();
-            for part in cut(&line, self.top(), self.bottom()) {
-                canvas.line(&part, pen);
-                end = part.last().copied();
-            }
-        }
-        end
-    }
-
-    /// Names beside the panel, each as near to the end of its curve as the others allow.
-    fn curve_names(&self, canvas: &mut Canvas<'_>, mut ends: Vec<End>) {
-        let height = |end: &End| end.end.map_or(self.bottom(), |(_, y)| y);
-        ends.sort_by(|a, b| height(a).total_cmp(&height(b)));
-        let wanted: Vec<f64> = ends.iter().map(height).collect();
-        let room = (self.top() + 8.0, self.bottom() - 8.0);
-        for (end, y) in ends.iter().zip(apart(&wanted, NAME_EVERY_PX, room)) {
-            let right = self.right();
-            // A thread to a curve that left the panel earlier would cross the others.
-            if let Some(place) = end.end.filter(|&(x, _)| x > right - THREAD_PX) {
-                let thread = Pen { width_px: 0.7, colour: end.pen.colour, opacity: 0.6 };
-                canvas.line(&[place, (right + 6.0, y)], thread);
-            }
-            canvas.line(&[(right + 6.0, y), (right + 22.0, y)], end.pen);
-            let bold = end.pen.width_px > THIN;
-            let words = Words { bold, ..plain(TEXT_PX) };
-            canvas.words(end.name, (right + 27.0, y), Stands::Right, words);
-        }
-    }
-
-    /// The intervals at ages asked for.
-    fn whiskers(&self, canvas: &mut Canvas<'_>, best: &Best<'_>) {
-        let shown = best.curve.predictions.iter().take(WHISKERS_MAX);
-        for (x, interval) in shown.filter_map(|p| Some((p.x, p.interval?))) {
-            let x = self.across.place(x);
-            if !(self.left()..=self.right()).contains(&x) {
-                continue;
-            }
-            let [low, value, high] =
-                [interval.low, interval.value, interval.high].map(|y| self.upright.place(y));
-            canvas.line(&[(x, self.within(low)), (x, self.within(high))], pen(BEST, 1.4));
-            for (y, half) in [(low, WHISKER_PX), (value, 1.5 * WHISKER_PX), (high, WHISKER_PX)] {
-                if (self.top()..=self.bottom()).contains(&y) {
-                    canvas.line(&[(x - half, y), (x + half, y)], pen(BEST, 1.4));
-                }
-            }
-        }
-    }
-
     /// Residual 0 and two residual sd to either side.
     fn levels(&self, canvas: &mut Canvas<'_>, best: &Best<'_>) {
         let (left, right) = (self.left(), self.right());
@@ -345,45 +243,5 @@ impl Panel<'_> {
             let apart = (y - zero).signum() * (y - zero).abs().max(0.6 * NUMBER_PX);
             canvas.words(text, (right + 6.0, zero + apart), Stands::Right, plain(NUMBER_PX));
         }
-    }
-}
-
-/// The end of a curve, and how it looks.
-struct End {
-    name: &'static str,
-    /// Where it was last seen; None for one that is wholly outside.
-    end: Option<Place>,
-    pen: Pen,
-}
-
-/// Moves heights apart.
-///
-/// # Arguments
-/// `wanted` — in order; `every` — least distance; `room` — upper and lower end, enough for all.
-fn apart(wanted: &[f64], every: f64, (top, bottom): (f64, f64)) -> Vec<f64> {
-    let mut heights = Vec::with_capacity(wanted.len());
-    let mut next = top;
-    for &y in wanted {
-        heights.push(y.max(next));
-        next = heights[heights.len() - 1] + every;
-    }
-    let mut most = bottom;
-    for y in heights.iter_mut().rev() {
-        *y = y.min(most);
-        most = *y - every;
-    }
-    heights
-}
-
-#[cfg(test)]
-mod tests {
-    use super::*;
-
-    #[test]
-    fn names_move_apart_and_stay_beside_the_panel() {
-        assert_eq!(apart(&[10.0, 50.0], 15.0, (8.0, 90.0)), [10.0, 50.0]);
-        assert_eq!(apart(&[10.0, 11.0, 12.0], 15.0, (8.0, 90.0)), [10.0, 25.0, 40.0]);
-        assert_eq!(apart(&[88.0, 89.0, 95.0], 15.0, (8.0, 90.0)), [60.0, 75.0, 90.0]);
-        assert_eq!(apart(&[-900.0, 900.0], 15.0, (8.0, 90.0)), [8.0, 90.0]);
     }
 }

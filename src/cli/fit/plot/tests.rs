@@ -2,7 +2,8 @@
 
 use super::axis::Axis;
 use super::canvas::{RGBColor, width_px};
-use super::panels::{BEST, PAST, TWO_SD, ZERO};
+use super::curves::BEST;
+use super::panels::{PAST, TWO_SD, ZERO};
 use super::*;
 use crate::cli::fit::look::look;
 use crate::drift::family::Family;
@@ -318,7 +319,7 @@ fn without_a_curve_the_readings_and_the_reasons_are_drawn() {
 
 proptest! {
     #![proptest_config(ProptestConfig {
-        cases: 64,
+        cases: 96,
         rng_seed: RngSeed::Fixed(20_260_402),
         failure_persistence: None,
         ..ProptestConfig::default()
@@ -326,9 +327,12 @@ proptest! {
 
     #[test]
     fn any_finite_readings_have_a_picture_within_its_edges(
-        mut readings in prop::collection::vec(
-            (prop::num::f64::NORMAL | prop::num::f64::SUBNORMAL, any::<f64>()), 0..9),
-        at in prop::collection::vec(prop::num::f64::NORMAL, 0..3),
+        mut readings in prop_oneof![
+            prop::collection::vec((prop::num::f64::NORMAL, any::<f64>()), 0..9),
+            prop::collection::vec((-9.0..99.0_f64, -9.0..9.0_f64), 0..30),
+            prop::collection::vec((0.0..1e-300_f64, prop::num::f64::SUBNORMAL), 0..9),
+        ],
+        at in prop::collection::vec(prop_oneof![prop::num::f64::NORMAL, -99.0..200.0_f64], 0..3),
     ) {
         readings.retain(|(x, y)| x.is_finite() && y.is_finite());
         readings.sort_by(|a, b| a.0.total_cmp(&b.0));
