@@ -87,20 +87,22 @@ fn run(args: &FitArgs, out: &mut dyn Write, err: &mut dyn Write) -> io::Result<u
     }
     let families = if args.family.is_empty() { &Family::ALL[..] } else { &args.family };
     let look = look::look(&series.x, &series.y, families, &args.at);
+    // First, for a reader of the numbers may go away early.
+    let mut code = EXIT_DONE;
+    if let Some(path) = &args.plot {
+        let names = plot::Names { x: &args.x, y: &args.y };
+        if let Err(why) = save::save(path, &plot::svg(&look, &series, names), &args.file) {
+            writeln!(err, "{}: the picture cannot be written: {why}", path.display())?;
+            code = EXIT_FAILED;
+        }
+    }
     if args.json {
         serde_json::to_writer_pretty(&mut *out, &look.json())?;
         writeln!(out)?;
     } else {
         table::write(&look, &series, out)?;
     }
-    if let Some(path) = &args.plot {
-        let names = plot::Names { x: &args.x, y: &args.y };
-        if let Err(why) = save::save(path, &plot::svg(&look, &series, names), &args.file) {
-            writeln!(err, "{}: the picture cannot be written: {why}", path.display())?;
-            return Ok(EXIT_FAILED);
-        }
-    }
-    Ok(EXIT_DONE)
+    Ok(code)
 }
 
 #[cfg(test)]

@@ -17,6 +17,12 @@ pub enum SaveError {
     /// It is the file that was read.
     #[error("this is the series itself; it would be lost")]
     Source,
+    /// Nothing can be put beside it.
+    #[error("there is no such folder")]
+    NoFolder,
+    /// Nothing may be put beside it.
+    #[error("its folder takes no new file: {0}")]
+    Folder(io::ErrorKind),
     /// The system refuses.
     #[error("{0}")]
     Unwritable(#[from] io::Error),
@@ -40,7 +46,11 @@ pub fn save(path: &Path, text: &str, source: &Path) -> Result<(), SaveError> {
     let mut file = tempfile::Builder::new()
         .prefix(".asfound-")
         .permissions(Permissions::from_mode(mode))
-        .tempfile_in(folder(&target))?;
+        .tempfile_in(folder(&target))
+        .map_err(|why| match why.kind() {
+            io::ErrorKind::NotFound => SaveError::NoFolder,
+            kind => SaveError::Folder(kind),
+        })?;
     file.write_all(text.as_bytes())?;
     file.as_file().sync_all()?;
     file.persist(&target).map_err(|why| why.error)?;
@@ -104,7 +114,7 @@ mod tests {
         assert_eq!(refused(&source), "this is the series itself; it would be lost");
         assert_eq!(refused(folder.path()), "what stands there is not a file");
         assert_eq!(refused(Path::new("/dev/null")), "what stands there is not a file");
-        assert!(refused(&folder.path().join("none/out.svg")).contains("No such file"));
+        assert_eq!(refused(&folder.path().join("none/out.svg")), "there is no such folder");
         assert_eq!(fs::read_to_string(&source).unwrap(), "x,y\n");
         assert_eq!(names(folder.path()), ["series.csv"]);
     }
