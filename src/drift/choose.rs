@@ -63,6 +63,9 @@ pub fn aicc_classical(fit: &Fit) -> Option<f64> {
 /// `current` — the family chosen last time, kept unless another is better by more than 4.
 pub fn choose(fits: &[Fit], n_effective: f64, current: Option<Family>) -> Choice {
     assert!(!fits.is_empty(), "a choice needs a fit");
+    if let Some(choice) = plainest_exact(fits) {
+        return choice;
+    }
     let values: Vec<Option<f64>> = fits.iter().map(|fit| aicc(fit, n_effective)).collect();
     // Without AICc (a perfect fit, a tiny sample) the smaller residual sum of squares decides.
     let rank = |i: usize| (values[i].is_none(), values[i].unwrap_or(fits[i].residual_ss));
@@ -82,6 +85,21 @@ pub fn choose(fits: &[Fit], n_effective: f64, current: Option<Family>) -> Choice
         chosen,
         differences,
     }
+}
+
+/// The plainest curve that passes through every reading, if one does: AICc would choose among rounding
+/// errors.
+fn plainest_exact(fits: &[Fit]) -> Option<Choice> {
+    let plainness = |i: usize| Family::ALL.iter().position(|&family| family == fits[i].family);
+    let chosen = (0..fits.len()).filter(|&i| fits[i].is_exact()).min_by_key(|&i| plainness(i))?;
+    let weights = (0..fits.len()).map(|i| if i == chosen { 1.0 } else { 0.0 }).collect();
+    let name = fits[chosen].family.name();
+    Some(Choice {
+        chosen,
+        differences: vec![None; fits.len()],
+        weights,
+        why: format!("{name}, the plainest curve that passes through every reading"),
+    })
 }
 
 /// Returns the indices of the fits among which to choose: every monotone family, and a

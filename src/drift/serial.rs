@@ -17,12 +17,15 @@ const SEARCH_STEPS: usize = 22;
 /// Returns the median spacing of ages and each spacing's ratio to it.
 ///
 /// # Arguments
-/// `x` — ages in days, strictly increasing, at least two.
+/// `x` — ages in days, strictly increasing.
 ///
 /// # Returns
-/// Median spacing in days (> 0), and ratios of the length of `x`; the first is 1 by convention.
+/// Median spacing in days (> 0; 1 of fewer than two ages), and ratios of the length of `x`; the first
+/// is 1 by convention.
 pub fn spacing_of(x: &[f64]) -> (f64, Vec<f64>) {
-    assert!(x.len() >= 2, "spacing needs two ages");
+    if x.len() < 2 {
+        return (1.0, vec![1.0; x.len()]);
+    }
     let mut sorted: Vec<f64> = x.windows(2).map(|w| w[1] - w[0]).collect();
     let raw = sorted.clone();
     sorted.sort_by(f64::total_cmp);

@@ -8,7 +8,7 @@ use crate::drift::choose::{Choice, SWITCH_ABOVE, TURN_ABOVE, choose, eligible};
 use crate::drift::family::Family;
 use crate::drift::fit::{Fit, FitOutcome, fit};
 use crate::drift::forecast::{Forecaster, own_correlation, sandwich};
-use crate::drift::reach::{Limit, Reach, assess};
+use crate::drift::reach::{Limit, Reach, assess, cap};
 use crate::drift::serial::{count, effective_count, spacing_of};
 use crate::drift::structure::whitened::Whitened;
 use crate::watch::alert::{AlertBook, AlertEvent, Owner};
@@ -17,7 +17,7 @@ use crate::watch::finding::Finding;
 use crate::watch::incident::{Incident, Place, ResidualWatch, Turn};
 use crate::watch::limits::{POINTS_AFTER_BREAK, POINTS_TO_EXAMINE, POINTS_TO_FIT};
 use crate::watch::reading::{Counts, Reading, Taken};
-use crate::watch::said::Said;
+use crate::watch::said::{Said, asked_day};
 use crate::watch::settings::WatchSettings;
 use crate::watch::time::{EventTime, ShellTime};
 use crate::watch::window::Window;
@@ -89,8 +89,10 @@ pub struct Channel {
     pub alerts: AlertBook,
     /// What became of its readings.
     pub counts: Counts,
-    /// When something last arrived.
+    /// When a reading that could be used last arrived; before the first, when the channel began.
     pub last_arrival: ShellTime,
+    /// Why the newest arrival could not be used; None: it could.
+    pub unusable: Option<Taken>,
     /// Counters for conditions that must hold several refits.
     pub patience: judge::Patience,
     points_ever: u64,
@@ -134,6 +136,7 @@ impl Channel {
             alerts: AlertBook::default(),
             counts: Counts::default(),
             last_arrival: now,
+            unusable: None,
             patience: judge::Patience::default(),
             points_ever: 0,
             points_at_refit: 0,
@@ -149,9 +152,7 @@ impl Channel {
         reading: &Reading,
         now: ShellTime,
     ) -> (Taken, Outcome) {
-        self.last_arrival = self.last_arrival.max(now);
         let mut outcome = Outcome::default();
-        judge::no_longer_silent(self, context, reading.time, &mut outcome);
         let age_zero = self.age_zero(context, reading.time);
         let taken = if reading.time <= age_zero {
             Taken::BeforeAgeZero
@@ -159,6 +160,11 @@ impl Channel {
             self.window.take(reading.time, reading.deviation)
         };
         self.counts.note(taken);
+        self.unusable = (taken != Taken::Accepted).then_some(taken);
+        if taken == Taken::Accepted {
+            self.last_arrival = self.last_arrival.max(now);
+            judge::no_longer_silent(self, context, reading.time, &mut outcome);
+        }
         while let Some(point) = self.window.next_point(context.rules) {
             self.points_ever += 1;
             self.on_point(context, point.time, &mut outcome);
@@ -182,13 +188,18 @@ impl Channel {
     }
 
     /// A calibration mark closes the cycle: age zero moves, the window begins anew.
-    pub fn calibrated(&mut self, context: &Context<'_>, mark: EventTime) -> Outcome {
+    pub fn calibrated(
+        &mut self,
+        context: &Context<'_>,
+        mark: EventTime,
+        as_left: Option<f64>,
+    ) -> Outcome {
         self.cycle = Some(Cycle { age_zero: mark, known_from: KnownFrom::Mark });
         self.window.begin_cycle(mark);
         self.refit = None;
         self.residuals.begin_cycle();
         let mut outcome = Outcome::default();
-        judge::new_cycle(self, context, mark, &mut outcome);
+        judge::new_cycle(self, context, mark, as_left, &mut outcome);
         outcome
     }
 
@@ -204,6 +215,12 @@ impl Channel {
     }
 
     fn on_point(&mut self, context: &Context<'_>, newest: EventTime, outcome: &mut Outcome) {
+        if self.refit.is_some() && self.window.points().len() < POINTS_TO_FIT {
+            // A pause longer than the window spans has emptied it: nothing of the old one is left.
+            self.refit = None;
+            self.residuals.begin_cycle();
+            judge::gathers_anew(self, context, newest, outcome);
+        }
         let due = match &self.refit {
             None => self.window.points().len() >= POINTS_TO_FIT,
             Some(refit) => refit.at.plus(context.rules.refit_every) <= newest,
@@ -254,35 +271,62 @@ impl Channel {
             choice = Some(best);
         }
         let turning = choice.as_ref().map(|best| fits[best.chosen].family).filter(|f| f.may_turn());
-        let reach = match turning {
-            Some(_) => Reach::none(Limit::Turns),
+        let exact = choice.as_ref().is_some_and(|best| fits[best.chosen].is_exact());
+        let (mut reach, carried) = match turning {
+            _ if exact => (Reach::none(Limit::NoScatter), false),
+            Some(_) => (Reach::none(Limit::Turns), false),
             None => self.reach(context, &x, &y, fits.is_empty()),
         };
         // A curve that turns says how large the deviation is now, and nothing of later.
         let of_now = turning.map(|family| [family]);
         let families = of_now.as_ref().map_or(&context.rules.families[..], |one| &one[..]);
         let forecaster = Forecaster::new(&x, &y, families, self.residuals.phi(x.len()));
-        let said = forecaster.map_or_else(Said::default, |forecaster| {
-            Said::of(&forecaster, &reach, context.rules, at, *x.last().unwrap_or(&0.0))
-        });
+        let newest = x.last().copied().unwrap_or(0.0);
+        let says = |reach: &Reach| {
+            let forecaster = forecaster.as_ref().filter(|_| !exact);
+            forecaster.map_or_else(Said::default, |forecaster| {
+                Said::of(forecaster, reach, context.rules, at, newest)
+            })
+        };
+        let mut said = says(&reach);
+        // Nothing is refused by an older window's reach, where this one's own could differ.
+        let could_differ = |(_, days): (EventTime, f64)| {
+            days <= cap(x.len()) * (newest - x.first().copied().unwrap_or(newest))
+        };
+        if carried && said.ahead.is_none() && said.asked.is_some_and(could_differ) {
+            reach = self.assessed(context, &x, &y);
+            said = says(&reach);
+        }
+        said.asked = said.asked.or_else(|| asked_day(context.rules, at));
         self.refit = Some(Refit { at, fits, choice, standard_errors, not_fitted, reach, said });
     }
 
     /// Reach is assessed anew every tenth of the window, else carried on: how far ahead of its newest
     /// point a window like this one carries does not change faster than the window itself.
-    fn reach(&mut self, context: &Context<'_>, x: &[f64], y: &[f64], no_curve: bool) -> Reach {
+    /// True: carried on.
+    fn reach(
+        &mut self,
+        context: &Context<'_>,
+        x: &[f64],
+        y: &[f64],
+        no_curve: bool,
+    ) -> (Reach, bool) {
         if no_curve {
-            return Reach::none(Limit::NoCurve);
+            return (Reach::none(Limit::NoCurve), false);
         }
         if context.rules.statement.is_none() && context.rules.tolerance.is_none() {
-            return Reach::none(Limit::NotAsked);
+            return (Reach::none(Limit::NotAsked), false);
         }
         if let Some(refit) = &self.refit
             && refit.reach.days_past_newest > 0.0
             && points(self.points_ever, self.points_at_reach) < count(x.len() / 10)
         {
-            return refit.reach.clone();
+            return (refit.reach.clone(), true);
         }
+        (self.assessed(context, x, y), false)
+    }
+
+    fn assessed(&mut self, context: &Context<'_>, x: &[f64], y: &[f64]) -> Reach {
         self.points_at_reach = self.points_ever;
         assess(x, y, &context.rules.families, self.residuals.phi(x.len()))
     }
@@ -311,7 +355,8 @@ impl Channel {
     ) -> Turn {
         let (x, y) = self.series();
         let Some(curve) = self.refit.as_ref().and_then(Refit::curve) else { return Turn::Nothing };
-        if x.len() < POINTS_TO_EXAMINE {
+        // A curve through every reading leaves rounding errors: they have structure, and mean nothing.
+        if x.len() < POINTS_TO_EXAMINE || curve.is_exact() {
             return Turn::Nothing;
         }
         let phi = self.residuals.phi(x.len());
