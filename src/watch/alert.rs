@@ -205,6 +205,8 @@ pub enum Ending {
     WindowAnew,
     /// The deviation is outside the tolerance by now, which has its own alert.
     OutsideNow,
+    /// By the settings, readings are measured otherwise from now on.
+    Reconfigured,
 }
 
 /// One alert from raising to clearing.

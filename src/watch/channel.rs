@@ -18,7 +18,7 @@ use crate::watch::incident::{Incident, Place, ResidualWatch, Turn};
 use crate::watch::limits::{POINTS_AFTER_BREAK, POINTS_TO_EXAMINE, POINTS_TO_FIT};
 use crate::watch::reading::{Counts, Reading, Taken};
 use crate::watch::said::{Said, asked_day};
-use crate::watch::settings::WatchSettings;
+use crate::watch::settings::{Basis, WatchSettings};
 use crate::watch::time::{EventTime, ShellTime};
 use crate::watch::window::Window;
 use crate::watch::{judge, report};
@@ -77,6 +77,8 @@ pub struct Channel {
     pub name: String,
     /// Journal row with which it began; orders the channels' arrivals.
     pub born: u64,
+    /// What its points rest on: as the settings said when it began or was last reconfigured.
+    pub basis: Basis,
     /// Its cycle; None before the first reading.
     pub cycle: Option<Cycle>,
     /// Its window.
@@ -125,10 +127,11 @@ pub struct Outcome {
 
 impl Channel {
     /// A channel of which nothing is known yet.
-    pub fn new(name: String, born: u64, now: ShellTime) -> Channel {
+    pub fn new(name: String, born: u64, now: ShellTime, basis: Basis) -> Channel {
         Channel {
             name,
             born,
+            basis,
             cycle: None,
             window: Window::default(),
             refit: None,
@@ -153,7 +156,7 @@ impl Channel {
         now: ShellTime,
     ) -> (Taken, Outcome) {
         let mut outcome = Outcome::default();
-        let age_zero = self.age_zero(context, reading.time);
+        let age_zero = self.age_zero(reading.time);
         let taken = if reading.time <= age_zero {
             Taken::BeforeAgeZero
         } else {
@@ -173,8 +176,8 @@ impl Channel {
     }
 
     /// Age zero: by mark, else by setting, else the first reading (which then has age 0 itself).
-    fn age_zero(&mut self, context: &Context<'_>, first: EventTime) -> EventTime {
-        let cycle = self.cycle.get_or_insert(match context.rules.calibrated {
+    fn age_zero(&mut self, first: EventTime) -> EventTime {
+        let cycle = self.cycle.get_or_insert(match self.basis.calibrated {
             Some(age_zero) => Cycle { age_zero, known_from: KnownFrom::Setting },
             None => Cycle { age_zero: first, known_from: KnownFrom::FirstReading },
         });
@@ -200,6 +203,37 @@ impl Channel {
         self.residuals.begin_cycle();
         let mut outcome = Outcome::default();
         judge::new_cycle(self, context, mark, as_left, &mut outcome);
+        outcome
+    }
+
+    /// The settings have changed what the points rest on. Measured otherwise: window, curve and what is
+    /// usual here begin anew. Another age zero: a new cycle from there, unless a mark says when.
+    pub fn reconfigured(
+        &mut self,
+        context: &Context<'_>,
+        was: &Basis,
+        is: &Basis,
+        now: EventTime,
+    ) -> Outcome {
+        let mut outcome = Outcome::default();
+        self.basis = is.clone();
+        if was.measured_as != is.measured_as {
+            self.window.begin_anew();
+            self.refit = None;
+            self.residuals = ResidualWatch::default();
+            self.stride = 1.0;
+            judge::measured_otherwise(self, now, &mut outcome);
+        }
+        let by_mark = self.cycle.is_some_and(|cycle| cycle.known_from == KnownFrom::Mark);
+        if let Some(age_zero) =
+            is.calibrated.filter(|_| was.calibrated != is.calibrated && !by_mark)
+        {
+            self.cycle = Some(Cycle { age_zero, known_from: KnownFrom::Setting });
+            self.window.begin_cycle(age_zero);
+            self.refit = None;
+            self.residuals.begin_cycle();
+            judge::new_cycle(self, context, now, None, &mut outcome);
+        }
         outcome
     }
 

@@ -12,7 +12,7 @@ use crate::watch::judge;
 use crate::watch::limits::CHANNELS_MAX;
 use crate::watch::reading::{Counts, Reading, Taken};
 use crate::watch::report;
-use crate::watch::settings::SiteSettings;
+use crate::watch::settings::{Basis, SiteSettings};
 use crate::watch::time::{EventTime, ShellTime};
 use serde::{Deserialize, Serialize};
 use std::collections::BTreeMap;
@@ -77,6 +77,14 @@ pub enum Action {
         /// Until when.
         until: ShellTime,
     },
+    /// The settings have changed what the channel's points rest on. Journaled at the start that saw it,
+    /// so that what follows from the journal stays the same.
+    Reconfigured {
+        /// What they rested on.
+        was: Basis,
+        /// What those to come rest on.
+        is: Basis,
+    },
 }
 
 /// All channels and what they share.
@@ -87,6 +95,8 @@ pub struct Engine {
     /// The watch of each channel, index into the settings.
     watches: Vec<usize>,
     index: BTreeMap<String, usize>,
+    /// What the points of channels rest on that are still to be rebuilt, where not on the settings.
+    to_be_born: BTreeMap<String, Basis>,
     /// Journal numbers at which channels began, rising.
     births: Vec<u64>,
     listening_since: ShellTime,
@@ -104,6 +114,7 @@ impl Engine {
             channels: Vec::new(),
             watches: Vec::new(),
             index: BTreeMap::new(),
+            to_be_born: BTreeMap::new(),
             births: Vec::new(),
             listening_since: now,
             due: None,
@@ -120,6 +131,37 @@ impl Engine {
         self.channels.push(channel);
         self.watches.push(watch);
         self.note_due(self.channels.len() - 1);
+    }
+
+    /// A channel that is rebuilt from the journal began under other settings than the present ones.
+    pub fn begins_on(&mut self, channel: String, basis: Basis) {
+        self.to_be_born.insert(channel, basis);
+    }
+
+    /// A channel that is rebuilt was silent here, as the log of alerts has it: when the service listened
+    /// is not in the journal.
+    pub fn was_silent(&mut self, channel: &str) {
+        let Some(&place) = self.index.get(channel) else { return };
+        let context = context(&self.settings, self.watches[place], &self.births, u64::MAX);
+        let known = &mut self.channels[place];
+        let (always, never_heard) = (ShellTime(i64::MAX), known.last_arrival);
+        let mut outcome = Outcome::default();
+        judge::silence(known, &context, always, never_heard, &mut outcome);
+        self.tell(place, outcome);
+        self.note_due(place);
+    }
+
+    /// What the points of each channel rest on where that is not what the settings say now: channel,
+    /// watch, what it was, what it is.
+    pub fn unlike_the_settings(&self) -> Vec<(String, usize, Basis, Basis)> {
+        let known = self.index.iter().map(|(name, &place)| (name, place));
+        known
+            .filter_map(|(name, place)| {
+                let (was, watch) = (&self.channels[place].basis, self.watches[place]);
+                let is = self.settings.watches[watch].basis();
+                (*was != is).then(|| (name.clone(), watch, was.clone(), is))
+            })
+            .collect()
     }
 
     /// Takes a reading that is already durable.
@@ -160,6 +202,9 @@ impl Engine {
             Action::Calibrated { at, as_left, .. } => {
                 outcome = known.calibrated(&context, *at, *as_left);
             }
+            Action::Reconfigured { was, is } => {
+                outcome = known.reconfigured(&context, was, is, time);
+            }
             Action::Acknowledge { alert } => {
                 outcome.events.extend(known.alerts.acknowledge(alert, time));
             }
@@ -167,7 +212,8 @@ impl Engine {
                 outcome.events.extend(known.alerts.shelve(alert, *until, time));
             }
         }
-        let changed = matches!(action, Action::Calibrated { .. }) || !outcome.events.is_empty();
+        let always = matches!(action, Action::Calibrated { .. } | Action::Reconfigured { .. });
+        let changed = always || !outcome.events.is_empty();
         self.tell(place, outcome);
         self.note_due(place);
         changed
@@ -271,7 +317,9 @@ impl Engine {
         if self.channels.len() >= CHANNELS_MAX {
             return None;
         }
-        self.restore(Channel::new(name.to_owned(), serial, now), watch);
+        let basis = self.to_be_born.remove(name);
+        let basis = basis.unwrap_or_else(|| self.settings.watches[watch].basis());
+        self.restore(Channel::new(name.to_owned(), serial, now, basis), watch);
         Some(self.channels.len() - 1)
     }
 
@@ -325,6 +373,7 @@ mod tests {
     use crate::drift::reach::{Limit, Reach};
     use crate::drift::structure::tests::noise;
     use crate::watch::alert::Ending;
+    use crate::watch::channel::{Cycle, KnownFrom};
     use crate::watch::settings::tests::watch_settings;
     use crate::watch::settings::{Statement, WatchSettings};
     use crate::watch::time::{DAY_US, Span};
@@ -607,6 +656,66 @@ mod tests {
         assert_eq!((&after.window, &after.refit), (&before.window, &before.refit));
         assert_eq!(after.counts.of(Taken::OtherWatch), 1);
         assert_eq!(engine.counts().of(Taken::OtherWatch), 1);
+    }
+
+    /// An engine with 400 readings and a step alert, then reconfigured; the lines that followed.
+    fn reconfigured(before: WatchSettings, is: Basis) -> (Engine, Vec<String>) {
+        let was = before.basis();
+        let mut engine = Engine::new(site(before), ShellTime(START));
+        feed(&mut engine, 0, &curve(400, 12, |i| if i >= 330 { 0.12 } else { 0.0 }));
+        assert_eq!(engine.observe("press.PT-1").unwrap().alerts.open().len(), 1);
+        assert!(engine.act("press.PT-1", &Action::Reconfigured { was, is }, 401, ShellTime(START)));
+        let effects = engine.effects();
+        let lines = effects.iter().filter_map(|effect| match effect {
+            Effect::Alert { event, .. } => {
+                Some(format!("{} {:?}", event.transition.name(), event.episode.ending))
+            }
+            _ => None,
+        });
+        let lines = lines.collect();
+        (engine, lines)
+    }
+
+    #[test]
+    fn readings_measured_otherwise_do_not_join_those_before() {
+        let is = Basis { measured_as: "unit = \"mbar\"".to_owned(), ..rules().basis() };
+        let (mut engine, lines) = reconfigured(rules(), is.clone());
+        assert_eq!(lines, ["returned Reconfigured"]);
+        let channel = engine.observe("press.PT-1").unwrap();
+        assert_eq!((channel.window.points().len(), &channel.refit), (0, &None));
+        assert_eq!(channel.residuals, crate::watch::incident::ResidualWatch::default());
+        assert_eq!(channel.basis, is);
+        assert_eq!(channel.cycle.unwrap().age_zero, EventTime(START), "the cycle goes on");
+        feed(&mut engine, 400, &[500.0, 500.5]);
+        let channel = engine.observe("press.PT-1").unwrap();
+        assert_eq!(channel.window.points().len(), 2);
+        assert!(channel.window.points().iter().all(|p| p.mean >= 500.0));
+    }
+
+    #[test]
+    fn another_calibrated_moves_age_zero_unless_a_mark_says_when() {
+        let day = |d: i64| EventTime(START + d * DAY_US);
+        let is = Basis { calibrated: Some(day(90)), ..rules().basis() };
+        for calibrated in [Some(day(0)), None] {
+            let before = WatchSettings { calibrated, ..rules() };
+            let (engine, lines) = reconfigured(before, is.clone());
+            assert_eq!(lines, ["returned Calibrated"]);
+            let channel = engine.observe("press.PT-1").unwrap();
+            let cycle = channel.cycle.unwrap();
+            assert_eq!((cycle.age_zero, cycle.known_from), (day(90), KnownFrom::Setting));
+            assert_eq!(channel.window.points().len(), 40);
+        }
+
+        let mut engine = Engine::new(site(rules()), ShellTime(START));
+        feed(&mut engine, 0, &curve(400, 16, |_| 0.0));
+        let at = day(75);
+        let mark = Action::Calibrated { at, as_found: None, as_left: None, note: None };
+        engine.act("press.PT-1", &mark, 401, ShellTime(START));
+        let change = Action::Reconfigured { was: rules().basis(), is };
+        engine.act("press.PT-1", &change, 402, ShellTime(START));
+        let channel = engine.observe("press.PT-1").unwrap();
+        assert_eq!(channel.cycle.unwrap(), Cycle { age_zero: at, known_from: KnownFrom::Mark });
+        assert_eq!(channel.window.points().len(), 100);
     }
 
     #[test]

@@ -128,6 +128,14 @@ pub fn new_cycle(
     outcome.findings.extend(report::finding_if_any(channel, context));
 }
 
+/// Readings are measured otherwise from now on: what was said of those before is over.
+pub fn measured_otherwise(channel: &mut Channel, time: EventTime, outcome: &mut Outcome) {
+    channel.patience = Patience::default();
+    for concern in OF_THE_WINDOW.into_iter().chain([Concern::Tolerance]) {
+        push(outcome, channel.alerts.end(concern, time, Ending::Reconfigured));
+    }
+}
+
 /// The window has too few points for anything: it gathers anew, and what rested on it is over.
 pub fn gathers_anew(
     channel: &mut Channel,

@@ -3,6 +3,7 @@
 
 use crate::drift::family::Family;
 use crate::watch::time::{EventTime, Span};
+use serde::{Deserialize, Serialize};
 
 /// The settings of the whole site, as the engine needs them.
 #[derive(Clone, Debug, PartialEq)]
@@ -18,6 +19,9 @@ pub struct SiteSettings {
 /// The settings of one group of channels.
 #[derive(Clone, Debug, PartialEq)]
 pub struct WatchSettings {
+    /// What a deviation is here: unit, payload, reference and bin in the settings' own words. Deviations
+    /// under another text are not comparable with these.
+    pub measured_as: String,
     /// The unit of deviation and tolerance, as shown; at most `limits::UNIT_BYTES_MAX` bytes.
     pub unit: String,
     /// Permissible deviation, ± in the unit; > 0. None: no statement on tolerance.
@@ -42,6 +46,22 @@ pub struct WatchSettings {
     pub silent_after: Span,
 }
 
+/// What a channel's points rest on: settings that cannot change under them.
+#[derive(Clone, Debug, PartialEq, Eq, Serialize, Deserialize)]
+pub struct Basis {
+    /// As in [`WatchSettings::measured_as`].
+    pub measured_as: String,
+    /// As in [`WatchSettings::calibrated`].
+    pub calibrated: Option<EventTime>,
+}
+
+impl WatchSettings {
+    /// What points taken under these settings rest on.
+    pub fn basis(&self) -> Basis {
+        Basis { measured_as: self.measured_as.clone(), calibrated: self.calibrated }
+    }
+}
+
 /// For when a statement about the future is needed.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub enum Statement {
@@ -58,6 +78,7 @@ pub(crate) mod tests {
     /// Plain settings for tests: no bins, no lateness, a year's span, daily refits.
     pub(crate) fn watch_settings() -> WatchSettings {
         WatchSettings {
+            measured_as: "unit = \"bar\"".to_owned(),
             unit: "bar".to_owned(),
             tolerance: None,
             window_span: Span::from_days(400.0),

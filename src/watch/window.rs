@@ -141,6 +141,11 @@ impl Window {
         }
     }
 
+    /// Forgets all readings: those to come are measured otherwise. Only when the last one came stays.
+    pub fn begin_anew(&mut self) {
+        *self = Window { newest: self.newest, ..Window::default() };
+    }
+
     /// The points, oldest first.
     pub fn points(&self) -> &VecDeque<Point> {
         &self.points

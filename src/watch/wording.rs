@@ -252,6 +252,10 @@ pub fn gone(kind: Kind, ending: Ending) -> &'static str {
         Ending::WindowAnew => {
             "The window has begun anew, and what this alert rested on is no longer in it."
         }
+        Ending::Reconfigured => {
+            "The settings have changed what is measured, and the window begins anew; this alert \
+             belonged to what was measured before."
+        }
         Ending::OutsideNow => "The deviation is outside the tolerance by now; see that alert.",
     }
 }

@@ -47,21 +47,40 @@ fn write_route(out: &mut String, route: &Route) -> fmt::Result {
     writeln!(out, "\n[[watch]]")?;
     writeln!(out, "topic = {}  # filter {filter}", text(route.pattern.as_str()))?;
     writeln!(out, "channel = {}", text(route.channel.as_str()))?;
-    match &route.payload {
-        PayloadFormat::Number => writeln!(out, "payload = {{ format = \"number\" }}")?,
+    writeln!(out, "{}", payload(&route.payload))?;
+    match reference(&route.reference) {
+        Some(reference) => writeln!(out, "{reference}"),
+        None => writeln!(out, "# no reference: the value is a deviation"),
+    }
+}
+
+fn payload(payload: &PayloadFormat) -> String {
+    match payload {
+        PayloadFormat::Number => "payload = { format = \"number\" }".to_owned(),
         PayloadFormat::Json { value, time } => {
-            write!(out, "payload = {{ format = \"json\", value = {}", text(value.as_str()))?;
-            if let Some(time) = time {
-                write!(out, ", time = {}", text(time.as_str()))?;
-            }
-            writeln!(out, " }}")?;
+            let value = text(value.as_str());
+            let time = time.as_ref().map(|time| format!(", time = {}", text(time.as_str())));
+            let time = time.unwrap_or_default();
+            format!("payload = {{ format = \"json\", value = {value}{time} }}")
         }
     }
-    match &route.reference {
-        Reference::None => writeln!(out, "# no reference: the value is a deviation"),
-        Reference::Constant(x) => writeln!(out, "reference = {{ constant = {} }}", number(*x)),
-        Reference::Pointer(p) => writeln!(out, "reference = {{ pointer = {} }}", text(p.as_str())),
+}
+
+fn reference(reference: &Reference) -> Option<String> {
+    match reference {
+        Reference::None => None,
+        Reference::Constant(x) => Some(format!("reference = {{ constant = {} }}", number(*x))),
+        Reference::Pointer(p) => Some(format!("reference = {{ pointer = {} }}", text(p.as_str()))),
     }
+}
+
+/// What a deviation is under these settings, as [`WatchSettings::measured_as`] has it. It is kept with
+/// each channel, so a change of spelling here begins every window anew.
+pub(super) fn measured_as(watch: &WatchSettings, route: &Route) -> String {
+    let mut parts = vec![format!("unit = {}", text(&watch.unit)), payload(&route.payload)];
+    parts.extend(reference(&route.reference));
+    parts.extend(watch.bin.map(|bin| format!("bin = {}", text(&show_span(bin)))));
+    parts.join("; ")
 }
 
 fn write_watch(out: &mut String, watch: &WatchSettings) -> fmt::Result {

@@ -26,6 +26,7 @@ fn read(text: &str, variables: &[(&str, &str)]) -> Settings {
 fn defaults_are_the_documented_ones() {
     let settings = read(LEAST, &[]);
     let expected = WatchSettings {
+        measured_as: "unit = \"bar\"; payload = { format = \"number\" }".to_owned(),
         unit: "bar".to_owned(),
         tolerance: None,
         window_span: Span(90 * DAY_US),
@@ -67,6 +68,10 @@ fn every_key_of_a_watch_arrives() {
            silent_after = \"2d\"\n";
     let settings = read(&text, &[]);
     let expected = WatchSettings {
+        measured_as:
+            "unit = \"bar\"; payload = { format = \"json\", value = \"\", time = \"/a~1b\" }; \
+                      reference = { pointer = \"/r\" }; bin = \"1h\""
+                .to_owned(),
         unit: "bar".to_owned(),
         tolerance: Some(1.0),
         window_span: Span(10 * DAY_US),

@@ -10,6 +10,7 @@ use super::raw::{
     WINDOW_SPAN_DEFAULT,
 };
 use super::section::Located;
+use super::shown::measured_as;
 use super::time::read_time;
 use crate::drift::family::Family;
 use crate::service::intake::{
@@ -29,11 +30,13 @@ pub(super) fn check_watch(
     own_topics: &str,
     problems: &mut Problems,
 ) -> Option<(WatchSettings, Route)> {
-    let watch = check_statistics(raw, problems);
+    let mut watch = check_statistics(raw, problems);
     let payload = check_payload(raw.payload.as_ref(), problems);
     let reference = check_reference(raw.reference.as_ref(), payload.as_ref(), problems);
     let (pattern, channel) = check_topic(raw, own_topics, problems)?;
-    Some((watch, Route { pattern, channel, payload: payload?, reference }))
+    let route = Route { pattern, channel, payload: payload?, reference };
+    watch.measured_as = measured_as(&watch, &route);
+    Some((watch, route))
 }
 
 fn check_topic(
@@ -173,6 +176,7 @@ fn check_statistics(raw: &RawWatch, problems: &mut Problems) -> WatchSettings {
     let window_span = window_span.unwrap_or(WINDOW_SPAN_DEFAULT);
     let silent_default = Span(window_span.0 / SILENT_AFTER_SHARE).max(SILENT_AFTER_LEAST);
     WatchSettings {
+        measured_as: String::new(),
         unit,
         tolerance: raw.tolerance.as_ref().map(|t| t.value),
         window_span,
