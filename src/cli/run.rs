@@ -6,7 +6,7 @@ use crate::service::clock::{self, Clock, Stopwatch};
 use crate::service::daemon::{self, LineSink, Summary};
 use crate::service::desk::Desk;
 use crate::service::intake::Router;
-use crate::service::recover::recover;
+use crate::service::recover::{recover, settle};
 use crate::service::settings::{Environment, Settings};
 use crate::service::shown::Shown;
 use crate::service::store::{Store, Writer};
@@ -73,9 +73,12 @@ pub struct Prepared {
 pub fn prepare(settings: Settings, clock: Clock) -> Result<Prepared, Box<dyn std::error::Error>> {
     let recovering = Stopwatch::start();
     let router = Router::new(&settings);
-    let store = Store::open(&settings.store_directory)?;
+    let mut store = Store::open(&settings.store_directory)?;
+    let mut recovered = recover(&store, &settings, &router, clock.now())?;
+    for change in settle(&mut store, &mut recovered, &router, clock.now())? {
+        tracing::warn!("{change}");
+    }
     let newest_row = store.newest_row()?;
-    let recovered = recover(&store, &settings, &router, clock.now())?;
     for channel in &recovered.unwatched {
         tracing::warn!(
             "no watch speaks of channel {} any more; its history stays in the store",

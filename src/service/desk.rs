@@ -115,7 +115,7 @@ impl Desk {
         recovered: Recovered,
         newest_row: i64,
     ) -> Desk {
-        Desk {
+        let mut desk = Desk {
             own_topics: settings.own_topics(),
             settings,
             clock,
@@ -129,7 +129,9 @@ impl Desk {
             told: Told::default(),
             unfitted: Vec::new(),
             arrivals: Arrivals::default(),
-        }
+        };
+        desk.tell(recovered.effects);
+        desk
     }
 
     /// The time, by the clock this desk goes by.
@@ -272,6 +274,7 @@ impl Desk {
             payload: serde_json::json!({"done": done, "why": why}).to_string().into_bytes(),
             retained: false,
             content_type: Some("application/json".to_owned()),
+            event_id: None,
         });
     }
 
@@ -332,6 +335,10 @@ impl Desk {
     /// Turns waiting effects into what is to be told.
     pub fn collect(&mut self) {
         let effects = self.engine.effects();
+        self.tell(effects);
+    }
+
+    fn tell(&mut self, effects: Vec<Effect>) {
         if effects.is_empty() {
             return;
         }

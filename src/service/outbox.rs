@@ -34,6 +34,7 @@ pub fn tell(engine: &Engine, effects: Vec<Effect>, own_topics: &str, now: ShellT
                 retained: true,
                 content_type: Some(JSON.to_owned()),
                 correlation: None,
+                event_id: None,
             }),
             Effect::Alert { channel, event, finding } => {
                 let around = Surroundings {
@@ -50,6 +51,7 @@ pub fn tell(engine: &Engine, effects: Vec<Effect>, own_topics: &str, now: ShellT
                     retained: false,
                     content_type: Some(CONTENT_TYPE.to_owned()),
                     correlation: None,
+                    event_id: Some(event.id.clone()),
                 });
                 told.bundle.alerts.push((event.id.clone(), channel.clone(), event.time.0, text));
                 if told.changed.last() != Some(&channel) {
@@ -62,6 +64,7 @@ pub fn tell(engine: &Engine, effects: Vec<Effect>, own_topics: &str, now: ShellT
                 retained: true,
                 content_type: Some(JSON.to_owned()),
                 correlation: None,
+                event_id: None,
             }),
             Effect::Looked { .. } => {}
         }

@@ -53,7 +53,7 @@ impl Daemon {
             if !self.out_connected {
                 return;
             }
-            let NewMessage { topic, payload, retained, content_type, correlation } = message;
+            let NewMessage { topic, payload, retained, content_type, correlation, .. } = message;
             let message =
                 OutMessage { token: id, topic, payload, retained, content_type, correlation };
             if self.outbound.try_send(message).is_err() {

@@ -262,39 +262,61 @@ impl ChannelTemplate {
     /// follows; the literal at the end must end the name. So `{area}.{tag}` fits `press.PT.4107`, with
     /// `press` as the area.
     pub fn fits(&self, name: &str) -> bool {
+        self.captured(name).is_some()
+    }
+
+    /// What the captures took, by their index in the pattern, where the name fits.
+    fn captured<'n>(&self, name: &'n str) -> Option<Vec<(usize, &'n str)>> {
         let mut rest = name;
-        let mut open = false;
+        let mut open = None;
+        let mut captured = Vec::new();
         for (i, piece) in self.pieces.iter().enumerate() {
             let literal = match piece {
-                Piece::Capture(_) => {
-                    open = true;
+                Piece::Capture(at) => {
+                    open = Some(*at);
                     continue;
                 }
                 Piece::Literal(text) => text.as_str(),
             };
-            let last = i + 1 == self.pieces.len();
-            rest = match (open, last) {
-                (false, _) => match rest.strip_prefix(literal) {
-                    Some(after) => after,
-                    None => return false,
-                },
-                (true, true) => match rest.strip_suffix(literal) {
-                    Some(captured) if may_be_captured(captured) => "",
-                    _ => return false,
-                },
-                (true, false) => {
-                    let first = rest.chars().next().map_or(0, char::len_utf8);
-                    match rest[first..].find(literal) {
-                        Some(at) if may_be_captured(&rest[..first + at]) => {
-                            &rest[first + at + literal.len()..]
-                        }
-                        _ => return false,
-                    }
-                }
+            let Some(at) = open.take() else {
+                rest = rest.strip_prefix(literal)?;
+                continue;
             };
-            open = false;
+            let end = if i + 1 == self.pieces.len() {
+                rest.strip_suffix(literal)?.len()
+            } else {
+                let first = rest.chars().next().map_or(0, char::len_utf8);
+                first + rest[first..].find(literal)?
+            };
+            captured.push((at, Some(&rest[..end]).filter(|text| may_be_captured(text))?));
+            rest = &rest[end + literal.len()..];
         }
-        if open { may_be_captured(rest) } else { rest.is_empty() }
+        match open {
+            Some(at) if may_be_captured(rest) => captured.push((at, rest)),
+            Some(_) => return None,
+            None if rest.is_empty() => {}
+            None => return None,
+        }
+        Some(captured)
+    }
+
+    /// The topic from which a channel of that name comes; None where the name does not fit or does not
+    /// have all captures. Where it can be read in several ways, as in [`ChannelTemplate::fits`].
+    pub fn topic_of(&self, name: &str, pattern: &TopicPattern) -> Option<String> {
+        let captured = self.captured(name)?;
+        let mut next = 0..pattern.captures.len();
+        let levels: Option<Vec<&str>> = pattern
+            .levels
+            .iter()
+            .map(|level| match level {
+                Level::Literal(text) => Some(text.as_str()),
+                Level::Capture => {
+                    let index = next.next()?;
+                    captured.iter().find(|(at, _)| *at == index).map(|(_, text)| *text)
+                }
+            })
+            .collect();
+        levels.map(|levels| levels.join("/"))
     }
 }
 

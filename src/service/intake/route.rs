@@ -6,6 +6,7 @@ use super::pointer::Pointer;
 use super::refusal::{Excerpt, Refusal};
 use crate::service::settings::Settings;
 use crate::watch::time::{DAY_US, EventTime, ShellTime, Span};
+use std::collections::BTreeSet;
 
 /// What a value is compared with.
 #[derive(Clone, Debug, PartialEq)]
@@ -163,6 +164,35 @@ impl Router {
         self.routes.iter().position(|route| route.channel.fits(channel))
     }
 
+    /// The watch to which a channel of the store belongs now, by its index in the settings.
+    ///
+    /// The one with the topic pattern under which it was seen, unless another watch stands before that
+    /// one by now and takes its topic. Where that pattern is gone, the first whose template fits; one
+    /// whose pattern no channel was seen under goes before the others, since it will be the renamed one.
+    ///
+    /// # Arguments
+    /// `pattern` — under which it was seen; `seen` — the patterns under which any channel was.
+    pub fn watch_of_known(
+        &self,
+        channel: &str,
+        pattern: &str,
+        seen: &BTreeSet<String>,
+    ) -> Option<usize> {
+        let of_pattern = self.routes.iter().position(|route| route.pattern.as_str() == pattern);
+        let Some(same) = of_pattern else {
+            let renamed = self.routes.iter().position(|route| {
+                route.channel.fits(channel) && !seen.contains(route.pattern.as_str())
+            });
+            return renamed.or_else(|| self.watch_for_channel(channel));
+        };
+        let Route { pattern, channel: template, .. } = &self.routes[same];
+        let taken_over = template.topic_of(channel, pattern).and_then(|topic| {
+            let (watch, captured) = self.route(&topic)?;
+            (self.routes[watch].channel.name(&captured) == channel).then_some(watch)
+        });
+        Some(taken_over.unwrap_or(same))
+    }
+
     /// The route of a watch.
     ///
     /// # Arguments
@@ -307,6 +337,44 @@ mod tests {
             ("attic", None),
         ] {
             assert_eq!(router.watch_for_channel(name), watch, "{name}");
+        }
+    }
+
+    #[test]
+    fn a_channel_of_the_store_finds_its_watch_after_a_change_of_topics() {
+        let seen = ["plant/{area}/{tag}/pressure", "plant/{area}/{tag}/{quantity}", "attic/{tag}"];
+        let seen = seen.map(str::to_owned).into();
+        for (name, pattern, watch) in [
+            ("press.PT-4107", "plant/{area}/{tag}/pressure", Some(0)),
+            // Its template would fit too, but its topic goes elsewhere.
+            ("press.TT-1.temperature", "plant/{area}/{tag}/{quantity}", Some(1)),
+            // A name that does not say the whole topic stays where it was seen.
+            ("attic", "lab/{tag}", Some(2)),
+            // The pattern is gone: one that is new goes before one that is known.
+            ("lab/7", "attic/{tag}", Some(2)),
+            ("press.TT-1", "old/{area}/{tag}", Some(0)),
+            ("attic", "attic/{tag}", None),
+        ] {
+            assert_eq!(router().watch_of_known(name, pattern, &seen), watch, "{name}");
+        }
+        // A watch that stands before the other one takes over the topics that it names.
+        let text = r#"
+            site.name = "saltmarsh"
+            broker.url = "mqtt://127.0.0.1"
+            [[watch]]
+            topic = "plant/{area}/{tag}/pressure"
+            channel = "{area}.{tag}.pressure"
+            unit = "bar"
+            [[watch]]
+            topic = "plant/{area}/{tag}/{quantity}"
+            unit = "K"
+        "#;
+        let settings = Settings::read(text, Path::new("test.toml"), &Environment::default());
+        let router = Router::new(&settings.unwrap_or_else(|problems| panic!("{problems}")));
+        let pattern = "plant/{area}/{tag}/{quantity}";
+        let seen = [pattern.to_owned()].into();
+        for (name, watch) in [("press.PT-1.pressure", 0), ("press.PT-1.temperature", 1)] {
+            assert_eq!(router.watch_of_known(name, pattern, &seen), Some(watch), "{name}");
         }
     }
 

@@ -12,7 +12,7 @@ pub use probe::probe;
 pub use writer::{Writer, WriterGone};
 
 use rusqlite::{Connection, OptionalExtension, params};
-use std::collections::BTreeMap;
+use std::collections::{BTreeMap, BTreeSet};
 use std::fs::File;
 use std::path::{Path, PathBuf};
 
@@ -60,12 +60,6 @@ pub enum StoreError {
         /// Version of this program.
         known: i64,
     },
-    /// A stored value does not match its checksum.
-    #[error("store is damaged: the state of channel {channel} does not match its checksum")]
-    Damaged {
-        /// The channel's name.
-        channel: String,
-    },
     /// SQLite said no.
     #[error("store: {0}")]
     Sqlite(#[from] rusqlite::Error),
@@ -108,8 +102,8 @@ pub struct SavedState {
     pub watch: String,
     /// The last journal row that is in it.
     pub upto: i64,
-    /// The state.
-    pub data: Vec<u8>,
+    /// The state; None: it does not match its checksum.
+    pub data: Option<Vec<u8>>,
 }
 
 /// A message to publish.
@@ -125,6 +119,9 @@ pub struct NewMessage {
     pub content_type: Option<String>,
     /// MQTT correlation data, of a reply.
     pub correlation: Option<Vec<u8>>,
+    /// The alert event that it is, by its id in the alert log. One that the log had before is not
+    /// published again.
+    pub event_id: Option<String>,
 }
 
 /// What is saved together, in one transaction: state, and what followed from it.
@@ -226,18 +223,25 @@ impl Store {
                 )?
                 .execute(params![channel, upto, checksum(*upto, data), data])?;
         }
+        let mut known = BTreeSet::new();
         for (id, channel, time, event) in &bundle.alerts {
-            transaction
+            let added = transaction
                 .prepare_cached(
                     "INSERT OR IGNORE INTO alert (id, channel, time, event)
                      VALUES (?1, ?2, ?3, ?4)",
                 )?
                 .execute(params![id, channel, time, event])?;
+            if added == 0 {
+                known.insert(id.as_str());
+            }
         }
         let mut unkept = 0;
         let mut held: i64 =
             transaction.query_row("SELECT count(*) FROM outbox", [], |row| row.get(0))?;
         for message in &bundle.messages {
+            if message.event_id.as_deref().is_some_and(|id| known.contains(id)) {
+                continue;
+            }
             if message.retained {
                 held -= i64::try_from(
                     transaction
@@ -273,7 +277,7 @@ impl Store {
         Ok(unkept)
     }
 
-    /// The states of all channels that have one.
+    /// The states of all channels that have one, whether or not they are sound.
     pub fn states(&self) -> Result<Vec<SavedState>, StoreError> {
         let mut query = self.connection.prepare(
             "SELECT c.name, c.watch, s.upto, s.crc, s.data FROM state s JOIN channel c ON c.id = s.channel
@@ -286,17 +290,33 @@ impl Store {
                 upto: row.get(2)?,
                 data: row.get(4)?,
             };
-            Ok((state, row.get::<_, i64>(3)?))
+            let crc: i64 = row.get(3)?;
+            let data = state.data.filter(|data| crc == checksum(state.upto, data));
+            Ok(SavedState { data, ..state })
         })?;
-        let mut states = Vec::new();
-        for row in rows {
-            let (state, crc) = row?;
-            if crc != checksum(state.upto, &state.data) {
-                return Err(StoreError::Damaged { channel: state.channel });
-            }
-            states.push(state);
+        Ok(rows.collect::<Result<_, _>>()?)
+    }
+
+    /// The actions in the journal, in order: (channel, action as JSON).
+    pub fn actions(&self) -> Result<Vec<(String, String)>, StoreError> {
+        let mut query = self.connection.prepare(
+            "SELECT c.name, j.action FROM journal j JOIN channel c ON c.id = j.channel
+             WHERE j.action IS NOT NULL ORDER BY j.id",
+        )?;
+        let rows = query.query_map([], |row| Ok((row.get(0)?, row.get(1)?)))?;
+        Ok(rows.collect::<Result<_, _>>()?)
+    }
+
+    /// These channels belong to the watch of another topic pattern now: (channel, pattern).
+    pub fn note_watches(&mut self, moved: &[(String, String)]) -> Result<(), StoreError> {
+        let transaction =
+            self.connection.transaction_with_behavior(rusqlite::TransactionBehavior::Immediate)?;
+        for (name, watch) in moved {
+            transaction
+                .prepare_cached("UPDATE channel SET watch = ?2 WHERE name = ?1")?
+                .execute([name, watch])?;
         }
-        Ok(states)
+        Ok(transaction.commit()?)
     }
 
     /// Up to which journal row every state is complete.
@@ -373,6 +393,7 @@ impl Store {
                     retained: row.get(3)?,
                     content_type: row.get(4)?,
                     correlation: row.get(5)?,
+                    event_id: None,
                 },
             ))
         })?;
@@ -440,6 +461,7 @@ mod tests {
             retained,
             content_type: None,
             correlation: None,
+            event_id: None,
         }
     }
 
@@ -492,14 +514,36 @@ mod tests {
     }
 
     #[test]
+    fn an_event_that_the_alert_log_has_is_not_published_again() {
+        let dir = tempfile::tempdir().unwrap();
+        let mut store = Store::open(dir.path()).unwrap();
+        let event = |id: &str| {
+            let message = NewMessage { event_id: Some(id.to_owned()), ..message("e", id, false) };
+            (message, (id.to_owned(), "a".to_owned(), 1, "{}".to_owned()))
+        };
+        let bundle = |ids: &[&str]| {
+            let (messages, alerts) = ids.iter().map(|id| event(id)).unzip();
+            Bundle { messages, alerts, ..Bundle::default() }
+        };
+        store.save(&bundle(&["a-1"])).unwrap();
+        store.save(&bundle(&["a-1", "a-2"])).unwrap();
+        let unsent = store.unsent_after(0, 10).unwrap();
+        let payloads: Vec<_> = unsent.iter().map(|(_, m)| m.payload.as_slice()).collect();
+        assert_eq!(payloads, [b"a-1".as_slice(), b"a-2"]);
+        assert_eq!(store.alerts().unwrap().len(), 2);
+    }
+
+    #[test]
     fn flipped_bit_in_a_state_is_named_not_served() {
         let dir = tempfile::tempdir().unwrap();
         let mut store = Store::open(dir.path()).unwrap();
         store.append(&[row("a", 1, 0.1)]).unwrap();
         let states = vec![("a".to_owned(), 7, vec![1, 2, 3])];
         store.save(&Bundle { states, ..Bundle::default() }).unwrap();
-        assert_eq!(store.states().unwrap().len(), 1);
-        store.connection.execute("UPDATE state SET data = x'010202'", []).unwrap();
-        assert!(matches!(store.states(), Err(StoreError::Damaged { .. })));
+        assert_eq!(store.states().unwrap()[0].data, Some(vec![1, 2, 3]));
+        for damage in ["data = x'010202'", "data = x'010203', upto = 8"] {
+            store.connection.execute(&format!("UPDATE state SET {damage}"), []).unwrap();
+            assert_eq!(store.states().unwrap()[0].data, None, "{damage}");
+        }
     }
 }
