@@ -52,6 +52,13 @@ pub fn unsent(site: &Site) -> i64 {
     count(site, "SELECT count(*) FROM outbox").expect("the outbox")
 }
 
+/// Damages every saved state, as a disk might; no daemon has the store open.
+pub fn damage_states(site: &Site) {
+    let store = Connection::open(site.store().join("asfound.sqlite")).expect("the store");
+    let damaged = store.execute("UPDATE state SET data = zeroblob(length(data))", []);
+    assert!(damaged.expect("the states") > 0, "no state was saved");
+}
+
 /// While it lives, the daemon can commit nothing.
 pub struct Held {
     _store: Connection,

@@ -250,3 +250,33 @@ fn stopped_in_order_it_goes_on_without_working_anything_off_twice() {
     scene.check();
     assert_eq!(daemon.terminate(), Some(0));
 }
+
+#[test]
+fn damaged_states_are_rebuilt_at_the_start_and_no_alert_is_sent_again() {
+    let broker = Broker::running();
+    let site = Site::new(broker.port());
+    let collector = Collector::on(broker.port(), "asfound/saltmarsh/#");
+    let mut publisher = Publisher::new(broker.port());
+    let readings = history::three_instruments(4108, READINGS_EACH);
+    let (expected, _) = replayed(&site, &readings);
+    let messages = history::messages(&readings);
+    let (early, late) = messages.split_at(900);
+
+    let daemon = Daemon::listening(&site);
+    publisher.publish(early);
+    store::wait_for_readings(&site, 900);
+    assert_eq!(daemon.terminate(), Some(0));
+    assert!(!store::alert_log(&site).is_empty(), "nothing was raised that could be sent twice");
+    store::damage_states(&site);
+
+    let daemon = Daemon::listening(&site);
+    let said = daemon.log.wait_for("the saved state does not match its checksum");
+    assert!(said.contains("rebuilt from the journal: 3 channels"), "{said}");
+    publisher.publish(late);
+    store::wait_for_readings(&site, readings.len() as i64);
+    assert_eq!(daemon.terminate(), Some(0));
+    let received = alerts(&collector.messages());
+    check_alike(&received, &expected);
+    let ids: BTreeSet<String> = received.iter().map(id).collect();
+    assert_eq!(ids.len(), received.len(), "an alert event was sent twice");
+}

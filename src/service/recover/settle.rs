@@ -114,5 +114,6 @@ fn named(channels: &[String]) -> String {
         channels.iter().take(NAMED_MAX).map(|name| Shown(name, 60).to_string()).collect();
     let further = channels.len() - shown.len();
     let further = if further > 0 { format!(" and {further} more") } else { String::new() };
-    format!("{} channels ({}{further})", channels.len(), shown.join(", "))
+    let channel = if channels.len() == 1 { "channel" } else { "channels" };
+    format!("{} {channel} ({}{further})", channels.len(), shown.join(", "))
 }

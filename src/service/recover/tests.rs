@@ -251,7 +251,7 @@ fn another_unit_begins_the_window_anew_once_and_a_rebuild_knows_it() {
 
     let mbar =
         WATCH.replace("unit = \"bar\"\ntolerance = 4.0", "unit = \"mbar\"\ntolerance = 4000");
-    let mut life = Life::begin(folder.path(), &mbar, 30);
+    let life = Life::begin(folder.path(), &mbar, 30);
     assert_eq!(life.said.len(), 1, "{:#?}", life.said);
     let json = r#"payload = { format = "json", value = "/v", time = "/ts" }"#;
     assert_eq!(
@@ -259,9 +259,13 @@ fn another_unit_begins_the_window_anew_once_and_a_rebuild_knows_it() {
         format!(
             "watch[1] has changed: readings were measured as (unit = \"bar\"; {json}), now as \
              (unit = \"mbar\"; {json}); windows begin anew, and alerts on the readings before are \
-             lowered: 1 channels (press.PT-1)"
+             lowered: 1 channel (press.PT-1)"
         )
     );
+    // Killed before anything is saved: the journal has the change.
+    drop(life);
+    let mut life = Life::begin(folder.path(), &mbar, 30);
+    assert!(life.said.is_empty(), "{:#?}", life.said);
     assert!(life.channel().window.points().is_empty());
     let thousandfold: Vec<f64> = values(180, 33, 999)[120..].iter().map(|v| 1000.0 * v).collect();
     life.readings(120, &thousandfold);
