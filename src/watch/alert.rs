@@ -287,6 +287,21 @@ impl AlertBook {
         Some(episode.step(Transition::Revised, state, time))
     }
 
+    /// Another condition has taken the place of the one that was told: as [`AlertBook::revise`], but
+    /// nobody has seen this one yet.
+    pub fn tell_anew(&mut self, claim: Claim, time: EventTime) -> Option<AlertEvent> {
+        let concern = claim.kind.concern();
+        for episode in self.open.iter_mut().filter(|e| e.claim.kind.concern() == concern) {
+            if episode.state == State::Acknowledged {
+                episode.state = State::Unacknowledged;
+            }
+            if let Some((_, acknowledged)) = &mut episode.shelf {
+                *acknowledged = false;
+            }
+        }
+        self.revise(claim, time)
+    }
+
     /// The condition is gone. None if there was none.
     pub fn lower(&mut self, concern: Concern, time: EventTime) -> Option<AlertEvent> {
         let place = self.open.iter().position(|e| {

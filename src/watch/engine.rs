@@ -3,6 +3,7 @@
 //! Readings and actions go in with their journal numbers, effects come out. The same readings in the
 //! same order give the same effects, whether live, replayed or continued after a restart.
 
+use crate::drift::structure::Workspace;
 use crate::watch::alert::{AlertEvent, Concern, Episode};
 use crate::watch::budget::Budget;
 use crate::watch::channel::{Channel, Context, Outcome};
@@ -47,7 +48,7 @@ pub enum Effect {
         /// The newest point's index.
         index: u64,
         /// Scores and thresholds.
-        look: Look,
+        look: Box<Look>,
     },
 }
 
@@ -94,6 +95,8 @@ pub struct Engine {
     due: Option<ShellTime>,
     effects: Vec<Effect>,
     refused: Counts,
+    /// Memory that the looks share; holds nothing between them.
+    work: Workspace,
 }
 
 impl Engine {
@@ -109,6 +112,7 @@ impl Engine {
             due: None,
             effects: Vec::new(),
             refused: Counts::default(),
+            work: Workspace::default(),
         }
     }
 
@@ -135,7 +139,7 @@ impl Engine {
             return Taken::TooManyChannels;
         };
         let context = context(&self.settings, self.watches[place], &self.births, reading.serial);
-        let (taken, outcome) = self.channels[place].take(&context, reading, now);
+        let (taken, outcome) = self.channels[place].take(&context, reading, now, &mut self.work);
         self.tell(place, outcome);
         self.note_due(place);
         taken
@@ -271,6 +275,7 @@ impl Engine {
         let channel = &self.channels[place];
         let name = &channel.name;
         for (at, index, look) in outcome.looks {
+            let look = Box::new(look);
             self.effects.push(Effect::Looked { channel: name.clone(), at, index, look });
         }
         let finding = outcome.findings.into_iter().next_back();
@@ -304,7 +309,7 @@ fn context<'a>(
         site: &settings.site,
         rules: &settings.watches[watch],
         budget: Budget {
-            false_alerts_per_year: settings.false_alerts_per_year,
+            false_alerts_per_year_site: settings.false_alerts_per_year,
             channels: births.partition_point(|&born| born <= serial).max(1),
         },
     }
@@ -313,7 +318,7 @@ fn context<'a>(
 #[cfg(test)]
 mod tests {
     use super::*;
-    use crate::drift::structure::tests::noise;
+    use crate::drift::structure::simulate::noise;
     use crate::watch::settings::tests::watch_settings;
     use crate::watch::settings::{Statement, WatchSettings};
     use crate::watch::time::{DAY_US, Span};
@@ -348,7 +353,6 @@ mod tests {
     }
 
     fn curve(n: usize, seed: u64, added: impl Fn(usize) -> f64) -> Vec<f64> {
-        println!("seed {seed}");
         noise(seed, n, 0.3)
             .iter()
             .enumerate()

@@ -3,6 +3,7 @@
 //! Conditions that hang on a single refit must hold for several before they count, so that none
 //! chatters; the residual watch has its own rule.
 
+use crate::drift::tails::probability;
 use crate::watch::alert::{AlertEvent, Claim, Concern, Evidence, Kind};
 use crate::watch::channel::{Channel, Context, Outcome};
 use crate::watch::finding::Decision;
@@ -58,7 +59,7 @@ fn claim_of(channel: &Channel, context: &Context<'_>, incident: &Incident) -> Cl
     };
     let evidence = Evidence {
         statistic: Some(incident.score),
-        p: Some(10f64.powf(-incident.score.min(300.0))),
+        p: Some(probability(incident.score)),
         size: Some(incident.size),
         at: Some(incident.at),
     };
@@ -87,6 +88,18 @@ pub fn revised(
 ) {
     let claim = claim_of(channel, context, incident);
     push(outcome, channel.alerts.revise(claim, time));
+}
+
+/// Another structure has taken the place of the one that was told.
+pub fn told_anew(
+    channel: &mut Channel,
+    context: &Context<'_>,
+    incident: &Incident,
+    time: EventTime,
+    outcome: &mut Outcome,
+) {
+    let claim = claim_of(channel, context, incident);
+    push(outcome, channel.alerts.tell_anew(claim, time));
 }
 
 /// The residuals show none any more.
