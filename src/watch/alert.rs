@@ -412,6 +412,7 @@ mod tests {
             let events: Vec<AlertEvent> = match *verb {
                 "raise" => book.raise(OWNER, claim(Kind::Step), time).into_iter().collect(),
                 "revise" => book.revise(claim(Kind::Bend), time).into_iter().collect(),
+                "anew" => book.tell_anew(claim(Kind::Bend), time).into_iter().collect(),
                 "lower" => book.lower(Concern::Residuals, time).into_iter().collect(),
                 "ack" => book.acknowledge(&id, time).into_iter().collect(),
                 "shelve" => book.shelve(&id, ShellTime(100), time).into_iter().collect(),
@@ -448,6 +449,24 @@ mod tests {
             check(&["raise", "raise", "revise"]),
             ["raised/Unacknowledged", "revised/Unacknowledged"]
         );
+    }
+
+    #[test]
+    fn what_is_told_anew_nobody_has_seen_yet() {
+        assert_eq!(
+            check(&["raise", "ack", "anew", "ack"]),
+            [
+                "raised/Unacknowledged",
+                "acknowledged/Acknowledged",
+                "revised/Unacknowledged",
+                "acknowledged/Acknowledged"
+            ]
+        );
+        assert_eq!(
+            check(&["raise", "ack", "shelve", "anew", "unshelve"])[3..],
+            ["revised/Shelved", "unshelved/Unacknowledged"]
+        );
+        assert_eq!(check(&["raise", "lower", "anew"]).len(), 2);
     }
 
     #[test]

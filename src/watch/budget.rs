@@ -17,6 +17,12 @@ pub const CLOSE_BELOW: f64 = 1.0;
 const WINDOWS_BY_CHANCE: f64 = 2.0;
 /// The first name stays when no kind is within this of its threshold at the renaming.
 pub const RENAME_WITHIN: f64 = 0.5;
+/// Until it is settled, a name changes only for one with so much more evidence (own rule: ten times;
+/// near-equal explanations would otherwise take turns).
+pub const RENAME_AHEAD: f64 = 1.0;
+/// A settled break that nothing can show any more gives way to another structure that exceeds its
+/// threshold by so much (own rule: ten times as unlikely).
+pub const TELL_ANEW_ABOVE: f64 = 1.0;
 /// No threshold is set for more false alerts than one in so many points: the offsets were not
 /// measured there, and a rarely read channel would otherwise alert on next to nothing.
 pub const POINTS_PER_FALSE_ALERT_MIN: f64 = 100.0;
@@ -229,17 +235,22 @@ impl Budget {
 /// # Outcomes
 /// `None` when the look holds no kind that names; a shift never names.
 pub fn name(found: &Examination) -> Option<Kind> {
-    let adjusted = |kind: Kind| {
-        let omega = naming_allowance(kind, found.points)?;
-        found.score(kind).map(|s| (kind, s.q - omega))
-    };
     let mut best: Option<(Kind, f64)> = None;
-    for candidate in Kind::ALL.into_iter().filter_map(adjusted) {
+    for candidate in Kind::ALL.into_iter().filter_map(|k| Some((k, evidence(found, k)?))) {
         if best.is_none_or(|(_, v)| candidate.1 > v) {
             best = Some(candidate);
         }
     }
     best.map(|(kind, _)| kind)
+}
+
+/// Returns a kind's search-adjusted score q − omega, by which names are weighed against each other.
+///
+/// # Outcomes
+/// `None` when the look did not reach the kind, or the kind does not name.
+pub fn evidence(found: &Examination, kind: Kind) -> Option<f64> {
+    let omega = naming_allowance(kind, found.points)?;
+    found.score(kind).map(|score| score.q - omega)
 }
 
 /// omega: log10 of the number of independent candidates inside one look, for naming only.

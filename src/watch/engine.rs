@@ -391,12 +391,95 @@ mod tests {
         assert!(lines.last().unwrap().starts_with("returned step"), "{lines:#?}");
     }
 
+    /// Time of the k-th reading.
+    fn reading_at(k: i64) -> EventTime {
+        EventTime(START + (k + 1) * STEP_US)
+    }
+
+    fn standing(engine: &Engine) -> Option<(Episode, EventTime)> {
+        let episode = engine.observe("press.PT-1")?.alerts.open().first()?.clone();
+        let at = episode.claim.evidence.at?;
+        Some((episode, at))
+    }
+
+    #[test]
+    fn a_second_knock_while_the_first_still_stands_is_told_anew() {
+        let mut engine = Engine::new(site(rules()), ShellTime(START));
+        let values = curve(1600, 21, |i| match i {
+            0..600 => 0.0,
+            600..780 => 0.12,
+            _ => 0.30,
+        });
+        feed(&mut engine, 0, &values[..770]);
+        let (first, at) = standing(&engine).unwrap();
+        assert!((at.0 - reading_at(600).0).abs() <= 2 * STEP_US, "{at}");
+        let seen = Action::Acknowledge { alert: first.alert.clone() };
+        assert!(engine.act("press.PT-1", &seen, 771, ShellTime(START)));
+        engine.effects();
+        let lines = feed(&mut engine, 770, &values[770..900]);
+        assert!(lines[0].starts_with("revised step d19"), "{lines:#?}");
+        let (second, at) = standing(&engine).unwrap();
+        assert!((at.0 - reading_at(780).0).abs() <= 2 * STEP_US, "{at}");
+        assert_eq!(second.alert, first.alert);
+        assert_eq!(second.state, crate::watch::alert::State::Unacknowledged);
+        let lines = feed(&mut engine, 900, &values[900..]);
+        assert!(lines.last().unwrap().starts_with("returned step"), "{lines:#?}");
+    }
+
+    #[test]
+    fn dependence_stands_as_long_as_it_is_seen() {
+        let slow = noise(22, 600, 0.95);
+        let mut values = curve(2000, 23, |_| 0.0);
+        for (i, e) in slow.iter().enumerate() {
+            let k = 600 + i;
+            values[k] = 0.5 * ((k as f64 + 1.0) / 4.0).ln() + 0.02 * e;
+        }
+        let mut engine = Engine::new(site(rules()), ShellTime(START));
+        let lines = feed(&mut engine, 0, &values[..1200]);
+        assert!(lines.iter().all(|l| !l.starts_with("returned")), "{lines:#?}");
+        assert_eq!(standing(&engine).unwrap().0.claim.kind.name(), "dependence", "{lines:#?}");
+        let lines = feed(&mut engine, 1200, &values[1200..]);
+        assert!(lines.last().unwrap().starts_with("returned"), "{lines:#?}");
+    }
+
+    #[test]
+    fn a_short_window_begins_anew_once_enough_points_follow_the_break() {
+        let rules = WatchSettings { window_points: 100, ..rules() };
+        let mut engine = Engine::new(site(rules), ShellTime(START));
+        let values = curve(480, 24, |i| if i >= 400 { 0.3 } else { 0.0 });
+        // Settled a quarter of the window after it opened, when 40 points do not follow yet.
+        feed(&mut engine, 0, &values[..435]);
+        assert_eq!(engine.observe("press.PT-1").unwrap().window.points().len(), 100);
+        feed(&mut engine, 435, &values[435..]);
+        let points = engine.observe("press.PT-1").unwrap().window.points();
+        let begins = points.front().unwrap().time;
+        assert!((begins.0 - reading_at(400).0).abs() <= 2 * STEP_US, "{begins}");
+    }
+
+    #[test]
+    fn what_is_usual_survives_a_calibration_mark() {
+        let mut engine = Engine::new(site(rules()), ShellTime(START));
+        let values = curve(1100, 25, |i| if i >= 600 { 0.12 } else { 0.0 });
+        feed(&mut engine, 0, &values[..700]);
+        let phi = |engine: &Engine| engine.observe("press.PT-1").unwrap().residuals.phi();
+        let (frozen, mark) = (phi(&engine), reading_at(699));
+        assert!(standing(&engine).is_some());
+        let action = Action::Calibrated { at: mark, as_found: None, as_left: None, note: None };
+        assert!(engine.act("press.PT-1", &action, 701, ShellTime(mark.0)));
+        let channel = engine.observe("press.PT-1").unwrap();
+        assert!(channel.residuals.incident().is_none());
+        assert_eq!(phi(&engine).to_bits(), frozen.to_bits());
+        feed(&mut engine, 700, &values[700..]);
+        // It is learned from again.
+        assert_ne!(phi(&engine).to_bits(), frozen.to_bits());
+    }
+
     #[test]
     fn snapshot_restored_and_continued_equals_never_stopped() {
         let values = curve(1200, 13, |i| if i >= 600 { 0.12 } else { 0.0 });
         let mut whole = Engine::new(site(rules()), ShellTime(START));
         let expected = feed(&mut whole, 0, &values);
-        for cut in [599, 603, 640, 1100] {
+        for cut in [599, 603, 640, 700, 1100] {
             let mut first = Engine::new(site(rules()), ShellTime(START));
             let mut lines = feed(&mut first, 0, &values[..cut]);
             let bytes = postcard::to_stdvec(first.observe("press.PT-1").unwrap()).unwrap();

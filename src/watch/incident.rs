@@ -5,8 +5,9 @@
 //! closes when half a window brought no more evidence of it.
 //!
 //! It lives on evidence of what it tells. A break with no point left before it in the window cannot
-//! be seen any more; whatever crosses a threshold then is another structure, and the incident is told
-//! anew with that one's name, size and date.
+//! be seen any more: only a score at its threshold keeps such an incident open, and one that is
+//! clearly above is another structure, so the incident is told anew with that one's name, size
+//! and date. Dependence is seen in its own score.
 
 use crate::drift::family::{Coefficients, Family};
 use crate::drift::structure::{
@@ -15,7 +16,8 @@ use crate::drift::structure::{
 };
 use crate::watch::alert::Kind;
 use crate::watch::budget::{
-    Budget, Judged, Judgement, Pace, RENAME_WITHIN, close_after_points, rename_within_points,
+    Budget, Judged, Judgement, Pace, RENAME_AHEAD, RENAME_WITHIN, TELL_ANEW_ABOVE,
+    close_after_points, evidence, rename_within_points,
 };
 use crate::watch::limits::POINTS_TO_EXAMINE;
 use crate::watch::time::EventTime;
@@ -238,13 +240,16 @@ impl ResidualWatch {
             return Turn::Opened(self.begin(place, found, judgement));
         };
         let out_of_sight = incident.is_out_of_sight(place.oldest());
-        if !out_of_sight && brings_evidence(&incident, judgement) {
+        let near = if out_of_sight { crossed } else { brings_evidence(&incident, judgement) };
+        if near {
             incident.last_near = place.newest;
         }
         self.incident = Some(incident);
-        let quiet =
-            place.newest - incident.last_near >= index_of(close_after_points(incident.points));
-        if crossed && found.is_full() && incident.settled && (out_of_sight || quiet) {
+        let wait = index_of(close_after_points(incident.points));
+        let quiet = place.newest - incident.last_near >= wait;
+        let another =
+            if out_of_sight { judgement.margin >= TELL_ANEW_ABOVE } else { quiet && crossed };
+        if another && incident.settled && found.is_full() {
             return Turn::ToldAnew(self.begin(place, found, judgement));
         }
         if quiet && incident.settled && found.is_full() {
@@ -306,7 +311,8 @@ fn known_better(
     let settles = place.newest - incident.opened >= index_of(rename_within_points(incident.points));
     let score = best_of(found, judgement);
     let (kind, at) = (alert_kind(score.kind), time_of(&score, place));
-    let renamed = kind != incident.kind;
+    let renamed =
+        kind != incident.kind && (settles || is_clearly_ahead(score.kind, &incident, found));
     let mut revised = false;
     if judgement.margin >= -RENAME_WITHIN && (renamed || settles) {
         revised = renamed || at != incident.at || !close(incident.size, score.size);
@@ -319,6 +325,13 @@ fn known_better(
         (false, false) => Turn::Nothing,
     };
     (turn, incident)
+}
+
+/// Whether a look speaks more clearly for a kind than for the name that stands.
+fn is_clearly_ahead(kind: Structure, incident: &Incident, found: &Examination) -> bool {
+    let standing = Structure::ALL.into_iter().filter(|&k| alert_kind(k) == incident.kind);
+    let for_name = standing.filter_map(|k| evidence(found, k)).fold(f64::NEG_INFINITY, f64::max);
+    evidence(found, kind).is_some_and(|score| score - for_name >= RENAME_AHEAD)
 }
 
 /// Whether a look shows what the incident tells: a break shows in every score, dependence (which
