@@ -492,6 +492,39 @@ mod tests {
     }
 
     #[test]
+    fn honest_channels_keep_the_budget_through_the_whole_engine() {
+        // 24 a year for each of two channel-years; every further alert is one too many.
+        let hour = Span(DAY_US / 24);
+        let mut raised = 0;
+        for (points, seed) in [(60_i64, 0xC1_u64), (200, 0xC2)] {
+            let watch = WatchSettings {
+                window_points: points as usize,
+                refit_every: Span(hour.0 * points / 10),
+                calibrated: Some(EventTime(START - 20 * hour.0)),
+                ..watch_settings()
+            };
+            let site = SiteSettings { false_alerts_per_year: 24.0, ..site(watch) };
+            let mut engine = Engine::new(site, ShellTime(START));
+            for (k, e) in noise(seed, 8760, 0.3).into_iter().enumerate() {
+                let time = START + (k as i64 + 1) * hour.0;
+                let deviation = 4.0 * ((k as f64 + 21.0) / 24.0).ln() + e;
+                let reading = Reading { serial: k as u64 + 1, time: EventTime(time), deviation };
+                engine.take("press.PT-1", 0, &reading, ShellTime(time));
+                raised += engine
+                    .effects()
+                    .iter()
+                    .filter(|effect| {
+                        matches!(effect, Effect::Alert { event, .. }
+                            if event.transition.name() == "raised")
+                    })
+                    .count();
+            }
+        }
+        println!("{raised} of 48");
+        assert!(raised <= 48, "{raised} alerts");
+    }
+
+    #[test]
     fn silence_is_raised_by_the_shells_time_and_lowered_by_a_reading() {
         let mut engine = Engine::new(site(rules()), ShellTime(START));
         feed(&mut engine, 0, &[0.1, 0.2]);
