@@ -4,6 +4,8 @@
 //! The watch fits robustly and judges differently.
 
 pub mod look;
+pub mod plot;
+pub mod save;
 pub mod series;
 pub mod table;
 
@@ -34,11 +36,21 @@ pub struct FitArgs {
     /// Print JSON
     #[arg(long)]
     pub json: bool,
+    /// Also draw readings, curves and residuals into this file; one that is there is replaced
+    #[arg(long, value_name = "OUT.svg", value_parser = picture)]
+    pub plot: Option<PathBuf>,
 }
 
 fn family(name: &str) -> Result<Family, String> {
     Family::from_name(name)
         .ok_or_else(|| format!("one of {}", Family::ALL.map(Family::name).join(", ")))
+}
+
+fn picture(path: &str) -> Result<PathBuf, String> {
+    match path {
+        "-" => Err("a file is needed; stdout has the numbers".to_owned()),
+        path => Ok(path.into()),
+    }
 }
 
 fn number(text: &str) -> Result<f64, String> {
@@ -51,7 +63,8 @@ fn number(text: &str) -> Result<f64, String> {
 /// Runs the command. Returns the exit code.
 ///
 /// # Outcomes
-/// 0: the series was read; families that could not be had say why. 1: the output cannot be written.
+/// 0: the series was read; families that could not be had say why. 1: the output or the picture cannot
+/// be written.
 /// 2: the file cannot be read as a series.
 pub fn fit(args: &FitArgs, out: &mut dyn Write, err: &mut dyn Write) -> u8 {
     // A reader that went away, such as `head`, is no reason for words that nobody sees.
@@ -74,13 +87,22 @@ fn run(args: &FitArgs, out: &mut dyn Write, err: &mut dyn Write) -> io::Result<u
     }
     let families = if args.family.is_empty() { &Family::ALL[..] } else { &args.family };
     let look = look::look(&series.x, &series.y, families, &args.at);
+    // First, for a reader of the numbers may go away early.
+    let mut code = EXIT_DONE;
+    if let Some(path) = &args.plot {
+        let names = plot::Names { x: &args.x, y: &args.y };
+        if let Err(why) = save::save(path, &plot::svg(&look, &series, names), &args.file) {
+            writeln!(err, "{}: the picture cannot be written: {why}", path.display())?;
+            code = EXIT_FAILED;
+        }
+    }
     if args.json {
         serde_json::to_writer_pretty(&mut *out, &look.json())?;
         writeln!(out)?;
     } else {
         table::write(&look, &series, out)?;
     }
-    Ok(EXIT_DONE)
+    Ok(code)
 }
 
 #[cfg(test)]
@@ -204,6 +226,27 @@ mod tests {
         };
         assert!(refusal(&["--family", "spline"]).contains("one of linear, logarithmic, power"));
         assert!(refusal(&["--at", "NaN"]).contains("a finite number is needed"));
+        assert!(refusal(&["--plot", "-"]).contains("a file is needed"));
+    }
+
+    #[test]
+    fn the_picture_is_written_beside_the_numbers() {
+        let folder = tempfile::tempdir().unwrap();
+        let picture = folder.path().join("out.svg");
+        let (code, out, err) = check(DANWOOD, &["--json", "--plot", picture.to_str().unwrap()]);
+        assert_eq!((code, err.as_str()), (EXIT_DONE, ""));
+        assert!(serde_json::from_str::<serde_json::Value>(&out).is_ok(), "{out}");
+        let svg = std::fs::read_to_string(&picture).unwrap();
+        assert!(svg.starts_with("<svg ") && svg.ends_with("</svg>\n"), "{svg}");
+    }
+
+    #[test]
+    fn a_picture_that_cannot_be_written_leaves_the_numbers_and_exit_code_1() {
+        let (code, out, err) = check(DANWOOD, &["--plot", "/dev/null"]);
+        assert_eq!(code, EXIT_FAILED);
+        let why = "/dev/null: the picture cannot be written: what stands there is not a file\n";
+        assert_eq!(err, why);
+        assert!(out.starts_with("6 readings, "), "{out}");
     }
 
     #[test]

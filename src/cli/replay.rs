@@ -2,6 +2,7 @@
 
 use crate::cli::check::{EXIT_DONE, EXIT_FAILED, EXIT_WRONG_USE};
 use crate::drift::structure::Kind as Structure;
+use crate::service::clock;
 use crate::service::envelope::{self, Surroundings};
 use crate::service::intake::csv::CsvReadings;
 use crate::service::intake::{Decoded, Refusal, Router};
@@ -155,7 +156,10 @@ impl Replaying<'_> {
     fn row(&mut self, number: u64, outcome: Result<(usize, Decoded), Refusal>) -> io::Result<()> {
         self.tally.rows += 1;
         match outcome {
-            Ok((watch, decoded)) => self.reading(watch, &decoded),
+            Ok((watch, decoded)) => match decoded.unless_ahead_of(clock::now()) {
+                Ok(decoded) => self.reading(watch, &decoded),
+                Err(refusal) => self.refused(number, &refusal),
+            },
             Err(refusal) => self.refused(number, &refusal),
         }
     }

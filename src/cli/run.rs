@@ -45,6 +45,7 @@ pub fn run(args: &RunArgs, environment: &Environment, err: &mut dyn Write) -> u8
                 received = summary.arrivals.received,
                 stored = summary.arrivals.journaled,
                 duplicates = summary.arrivals.duplicates,
+                not_fitted = summary.arrivals.unfitted.values().sum::<u64>(),
                 refused = summary.arrivals.refused.values().sum::<u64>(),
                 published = summary.published,
                 "stopped; nothing received was lost"

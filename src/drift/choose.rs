@@ -9,6 +9,15 @@ use serde::{Deserialize, Serialize};
 /// 4 the name changes in fewer than 8 of 100 refits and the forecast error is the smallest).
 pub const SWITCH_ABOVE: f64 = 4.0;
 
+/// A curve that turns joins the watch only when it is better than every other by more than this: a
+/// turn must be about as sure as an alert (chance below 1 in 10,000 a refit), for with it every
+/// statement about later ends (own rule).
+pub const TURN_ABOVE: f64 = 16.0;
+
+/// A turn counts where the curve rises or falls by so many residual standard deviations on both sides
+/// of it: a change of rate alone bends a polynomial, too, without changing its direction (own rule).
+const ARM_RESIDUAL_SDS: f64 = 2.0;
+
 /// The choice among some fits.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
 pub struct Choice {
@@ -54,6 +63,9 @@ pub fn aicc_classical(fit: &Fit) -> Option<f64> {
 /// `current` — the family chosen last time, kept unless another is better by more than 4.
 pub fn choose(fits: &[Fit], n_effective: f64, current: Option<Family>) -> Choice {
     assert!(!fits.is_empty(), "a choice needs a fit");
+    if let Some(choice) = plainest_exact(fits) {
+        return choice;
+    }
     let values: Vec<Option<f64>> = fits.iter().map(|fit| aicc(fit, n_effective)).collect();
     // Without AICc (a perfect fit, a tiny sample) the smaller residual sum of squares decides.
     let rank = |i: usize| (values[i].is_none(), values[i].unwrap_or(fits[i].residual_ss));
@@ -75,14 +87,35 @@ pub fn choose(fits: &[Fit], n_effective: f64, current: Option<Family>) -> Choice
     }
 }
 
-/// Returns the indices of the fits among which to choose for one look: every monotone family, and a
+/// The plainest curve that passes through every reading, if one does: AICc would choose among rounding
+/// errors.
+fn plainest_exact(fits: &[Fit]) -> Option<Choice> {
+    let plainness = |i: usize| Family::ALL.iter().position(|&family| family == fits[i].family);
+    let chosen = (0..fits.len()).filter(|&i| fits[i].is_exact()).min_by_key(|&i| plainness(i))?;
+    let weights = (0..fits.len()).map(|i| if i == chosen { 1.0 } else { 0.0 }).collect();
+    let name = fits[chosen].family.name();
+    Some(Choice {
+        chosen,
+        differences: vec![None; fits.len()],
+        weights,
+        why: format!("{name}, the plainest curve that passes through every reading"),
+    })
+}
+
+/// Returns the indices of the fits among which to choose: every monotone family, and a
 /// polynomial only where it turns within the readings and is better than each of them by more than
-/// [`SWITCH_ABOVE`]. All of them where there is no monotone family.
+/// `better_by`. All of them where there is no monotone family.
 ///
 /// # Arguments
-/// `fits` — to the same data; `oldest`, `newest` — the range of ages.
-pub fn eligible(fits: &[Fit], n_effective: f64, oldest: f64, newest: f64) -> Vec<usize> {
-    let turning = |fit: &Fit| matches!(fit.family, Family::Quadratic | Family::Cubic);
+/// `fits` — to the same data; `(oldest, newest)` — the range of ages; `better_by` — in AICc, of the
+/// family: [`SWITCH_ABOVE`] for one look.
+pub fn eligible(
+    fits: &[Fit],
+    n_effective: f64,
+    (oldest, newest): (f64, f64),
+    better_by: impl Fn(Family) -> f64,
+) -> Vec<usize> {
+    let turning = |fit: &Fit| fit.family.may_turn();
     let best = fits
         .iter()
         .filter(|fit| !turning(fit))
@@ -93,7 +126,7 @@ pub fn eligible(fits: &[Fit], n_effective: f64, oldest: f64, newest: f64) -> Vec
     }
     let better = |fit: &Fit| {
         let (this, best) = (aicc(fit, n_effective), best);
-        this.zip(best).is_some_and(|(this, best)| this < best - SWITCH_ABOVE)
+        this.zip(best).is_some_and(|(this, best)| this < best - better_by(fit.family))
     };
     (0..fits.len())
         .filter(|&i| {
@@ -103,16 +136,34 @@ pub fn eligible(fits: &[Fit], n_effective: f64, oldest: f64, newest: f64) -> Vec
         .collect()
 }
 
-/// Whether a polynomial changes direction inside the central 80 % of the ages.
+/// Whether a polynomial changes direction inside the central 80 % of the ages, and visibly: on both
+/// sides of the turn it rises or falls by at least [`ARM_RESIDUAL_SDS`].
 fn turns_within(fit: &Fit, oldest: f64, newest: f64) -> bool {
     let edge = 0.1 * (newest - oldest);
-    let (from, to) = (fit.frame.inside(oldest + edge), fit.frame.inside(newest - edge));
-    let [_, b1, b2, b3] = fit.inner;
-    let slope = |u: f64| b1 + u * (2.0 * b2 + 3.0 * u * b3);
-    let crosses = |a: f64, b: f64| (slope(a) > 0.0) != (slope(b) > 0.0);
-    // The slope is a parabola: between its vertex and either end it crosses 0 at most once.
-    let vertex = (-b2 / (3.0 * b3)).clamp(from, to);
-    crosses(from, to) || (vertex.is_finite() && (crosses(from, vertex) || crosses(vertex, to)))
+    let central = (fit.frame.inside(oldest + edge), fit.frame.inside(newest - edge));
+    let ends = (fit.frame.inside(oldest), fit.frame.inside(newest));
+    let [b0, b1, b2, b3] = fit.inner;
+    let value = |u: f64| b0 + u * (b1 + u * (b2 + u * b3));
+    let mut places = vec![ends.0];
+    places.extend(turning_points(b1, b2, b3).into_iter().filter(|u| ends.0 < *u && *u < ends.1));
+    places.push(ends.1);
+    let visible =
+        |a: f64, b: f64| (value(a) - value(b)).abs() >= ARM_RESIDUAL_SDS * fit.residual_sd;
+    places.windows(3).any(|w| {
+        (central.0..=central.1).contains(&w[1]) && visible(w[0], w[1]) && visible(w[1], w[2])
+    })
+}
+
+/// Where b1 + 2 b2 u + 3 b3 u² is 0, rising; empty where it never is.
+fn turning_points(b1: f64, b2: f64, b3: f64) -> Vec<f64> {
+    let root = (b2 * b2 - 3.0 * b3 * b1).sqrt();
+    // Of the two ways to write a root, the one that does not subtract equals.
+    let q = -(b2 + if b2 < 0.0 { -root } else { root });
+    let mut found: Vec<f64> =
+        [q / (3.0 * b3), b1 / q].into_iter().filter(|u| u.is_finite()).collect();
+    found.sort_by(f64::total_cmp);
+    found.dedup();
+    found
 }
 
 /// exp(−Δ/2), normalised; all on the chosen one where no AICc can be had.
@@ -196,7 +247,8 @@ mod tests {
                 _ => None,
             })
             .collect();
-        eligible(&fits, 60.0, 1.0, 60.0).into_iter().map(|i| fits[i].family).collect()
+        let may = eligible(&fits, 60.0, (1.0, 60.0), |_| SWITCH_ABOVE);
+        may.into_iter().map(|i| fits[i].family).collect()
     }
 
     #[test]

@@ -150,6 +150,12 @@ impl Family {
         }
     }
 
+    /// Whether the curve may change direction: such a one is taken only where the data do, and never
+    /// makes a forecast.
+    pub fn may_turn(self) -> bool {
+        matches!(self, Family::Quadratic | Family::Cubic)
+    }
+
     /// Returns the gradient ∂f/∂theta at x, unused places 0.
     ///
     /// # Arguments

@@ -235,6 +235,7 @@ fn finish(
         residual_ss,
         residual_sd,
         r_squared: (total_ss > 0.0).then(|| 1.0 - residual_ss / total_ss),
+        largest: y.iter().fold(0.0, |most: f64, v| most.max(v.abs())),
         n,
         degrees_of_freedom: n - p,
         iterations,

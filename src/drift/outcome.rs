@@ -31,6 +31,8 @@ pub struct Fit {
     pub residual_sd: f64,
     /// 1 − RSS/TSS on the original scale; None when all y are equal.
     pub r_squared: Option<f64>,
+    /// The largest |y|, in the unit.
+    pub largest: f64,
     /// Number of data.
     pub n: usize,
     /// n − p.
@@ -62,11 +64,19 @@ impl Fit {
         errors
     }
 
+    /// Whether the curve passes through every reading to rounding.
+    pub fn is_exact(&self) -> bool {
+        self.residual_sd <= ROUNDING * self.largest
+    }
+
     /// Returns y less the curve.
     pub fn residuals(&self, x: &[f64], y: &[f64]) -> Vec<f64> {
         x.iter().zip(y).map(|(&v, &w)| w - self.value(v)).collect()
     }
 }
+
+/// A residual standard deviation below this share of the largest |y| is rounding, not scatter.
+const ROUNDING: f64 = 1e-13;
 
 /// What became of a fit. Data quality is an outcome, not an error.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]

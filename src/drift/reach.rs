@@ -41,6 +41,10 @@ pub enum Limit {
     },
     /// No family can be fitted.
     NoCurve,
+    /// The data change direction inside the window: the curve that turns with them is not carried on.
+    Turns,
+    /// The readings do not scatter, so nothing shows how far they can be trusted.
+    NoScatter,
     /// Nobody asks for statements here.
     NotAsked,
     /// Too few backtests reach that far.
@@ -72,9 +76,21 @@ impl Limit {
                 format!("{found} usable points, {needed} are needed")
             }
             Limit::NoCurve => "no curve can be fitted".to_owned(),
+            Limit::Turns => {
+                "the drift changes direction inside the window, and a curve that turns is never \
+                 carried past its data"
+                    .to_owned()
+            }
+            Limit::NoScatter => {
+                "the readings do not scatter at all, so nothing shows how far they can be trusted"
+                    .to_owned()
+            }
             Limit::NotAsked => "no statement is asked for".to_owned(),
             Limit::TooFewBacktests { at_d } => {
                 format!("fewer than {BACKTESTS_MIN} backtests reach {at_d:.1} d")
+            }
+            Limit::Missed { at_d, times } if times > 1000.0 => {
+                format!("backtests at {at_d:.1} d missed by more than 1000 times the claimed width")
             }
             Limit::Missed { at_d, times } => {
                 format!("backtests at {at_d:.1} d missed by {times:.1} times the claimed width")

@@ -101,7 +101,7 @@ pub fn lag_correlation_of_clipped(
     if phi.is_finite() { phi.clamp(-PHI_MAX, PHI_MAX) } else { 0.0 }
 }
 
-/// As [`lag_correlation`] for one short series: below [`CORRECTED_FROM`] residuals the correction,
+/// As [`lag_correlation`] for one short series: below 20 residuals the correction,
 /// which is right to the order of 1/n, would be all there is, and is left out.
 pub fn lag_correlation_short(residuals: &[f64], spacing: &[f64], parameters: usize) -> f64 {
     if residuals.len() >= CORRECTED_FROM {

@@ -7,19 +7,20 @@ use crate::service::clock::Clock;
 use crate::service::intake::{Decoded, Refusal, Router};
 use crate::service::outbox::{Told, tell};
 use crate::service::recall::{Recall, key_of_message, key_of_reading};
-use crate::service::recover::{Recovered, apply, state_bytes};
+use crate::service::recover::{Applied, Recovered, apply, state_bytes};
 use crate::service::request;
 use crate::service::settings::Settings;
 use crate::service::store::{Bundle, NewMessage, NewRow};
 use crate::watch::engine::{Effect, Engine};
-use crate::watch::time::{DAY_US, ShellTime};
+use crate::watch::reading::Taken;
+use crate::watch::time::ShellTime;
 use std::collections::BTreeMap;
 
-/// A reading may be later than its receipt by so much: clocks differ.
-const FUTURE_MAX_US: i64 = DAY_US;
 /// The longest topic for a reply that is accepted, bytes and levels; else the reply goes to ours.
 const REPLY_TOPIC_BYTES_MAX: usize = 256;
 const REPLY_TOPIC_LEVELS_MAX: usize = 16;
+/// Readings stored and not fitted that are named in one turn; further ones are only counted.
+const UNFITTED_NAMED_MAX: usize = 64;
 /// States saved in one transaction when nothing urgent is to be saved.
 const STATES_AT_A_TIME: usize = 256;
 
@@ -78,6 +79,8 @@ pub struct Arrivals {
     pub journaled: u64,
     /// Messages known already.
     pub duplicates: u64,
+    /// Readings stored and not fitted, by reason.
+    pub unfitted: BTreeMap<&'static str, u64>,
     /// Messages refused, by reason.
     pub refused: BTreeMap<&'static str, u64>,
 }
@@ -96,6 +99,7 @@ pub struct Desk {
     newest_row: i64,
     subscribed_before: bool,
     told: Told,
+    unfitted: Vec<(String, Taken)>,
     /// What arrived.
     pub arrivals: Arrivals,
 }
@@ -120,6 +124,7 @@ impl Desk {
             newest_row,
             subscribed_before: recovered.subscribed_before,
             told: Told::default(),
+            unfitted: Vec::new(),
             arrivals: Arrivals::default(),
         }
     }
@@ -157,7 +162,7 @@ impl Desk {
             .and_then(|(watch, decoded)| Ok((watch, decoded.unless_stale(arrival.retained)?)));
         let decoded = decoded.and_then(|(watch, decoded)| {
             self.clock.saw(decoded.time);
-            Ok((watch, not_from_the_future(decoded, self.now())?))
+            Ok((watch, decoded.unless_ahead_of(self.now())?))
         });
         match decoded {
             Ok((watch, decoded)) => (self.reading(arrival, watch, decoded), None),
@@ -256,13 +261,32 @@ impl Desk {
             self.arrivals.journaled += 1;
             self.newest_row = id;
             self.unsaved.entry(row.channel.clone()).or_insert(id);
-            let done = apply(&mut self.engine, id, watch, &row.channel, &row, ShellTime(row.got));
+            let applied =
+                apply(&mut self.engine, id, watch, &row.channel, &row, ShellTime(row.got));
+            self.note_unfitted(&row.channel, applied);
+            let done = matches!(applied, Applied::Action(true));
             if let Some(to) = reply_to {
                 let why = if done { "done" } else { "nothing to change: no such open alert" };
                 self.reply(to, done, why);
             }
         }
         self.collect();
+    }
+
+    fn note_unfitted(&mut self, channel: &str, applied: Applied) {
+        let Applied::Reading(taken) = applied else { return };
+        if taken == Taken::Accepted {
+            return;
+        }
+        *self.arrivals.unfitted.entry(taken.code()).or_default() += 1;
+        if self.unfitted.len() < UNFITTED_NAMED_MAX {
+            self.unfitted.push((channel.to_owned(), taken));
+        }
+    }
+
+    /// Readings since the last call that were stored and not fitted: channel and why, for the log.
+    pub fn unfitted(&mut self) -> Vec<(String, Taken)> {
+        std::mem::take(&mut self.unfitted)
     }
 
     /// Does what is due by the clock.
@@ -368,13 +392,4 @@ fn is_plain_topic(topic: &str) -> bool {
         && levels <= REPLY_TOPIC_LEVELS_MAX
         && !topic.starts_with('$')
         && !topic.contains(|c: char| c == '+' || c == '#' || c.is_control())
-}
-
-fn not_from_the_future(decoded: Decoded, now: ShellTime) -> Result<Decoded, Refusal> {
-    let ahead = decoded.time.0.saturating_sub(now.0);
-    if ahead > FUTURE_MAX_US {
-        let days = crate::watch::time::Span(ahead).days();
-        return Err(Refusal::FromTheFuture { days });
-    }
-    Ok(decoded)
 }

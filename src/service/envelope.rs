@@ -81,15 +81,16 @@ impl From<Evidence> for EvidenceShown {
 /// The one sentence of an event: what was found, or what became of it.
 pub fn sentence(event: &AlertEvent) -> String {
     let claim = &event.episode.claim;
+    let ending = event.episode.ending;
     match event.transition {
         Transition::Raised | Transition::Revised => claim.words.says.clone(),
         Transition::Returned => {
-            format!("{} Nobody has acknowledged this alert yet.", wording::gone(claim.kind))
+            format!("{} Nobody has acknowledged this alert yet.", wording::gone(claim.kind, ending))
         }
         Transition::Cleared if event.episode.state == State::Normal => {
-            format!("{} Closed.", wording::gone(claim.kind))
+            format!("{} Closed.", wording::gone(claim.kind, ending))
         }
-        Transition::Cleared => wording::gone(claim.kind).to_owned(),
+        Transition::Cleared => wording::gone(claim.kind, ending).to_owned(),
         Transition::Acknowledged => "Acknowledged; the condition still holds.".to_owned(),
         Transition::Shelved => match event.episode.shelf {
             Some((until, _)) => format!("Put aside until {until}."),

@@ -9,7 +9,7 @@ use crate::service::settings::Settings;
 use crate::service::store::{Row, Store, StoreError};
 use crate::watch::channel::Channel;
 use crate::watch::engine::{Action, Engine};
-use crate::watch::reading::Reading;
+use crate::watch::reading::{Reading, Taken};
 use crate::watch::time::{EventTime, ShellTime};
 use std::collections::BTreeMap;
 
@@ -122,7 +122,16 @@ impl Recovered {
     }
 }
 
-/// Gives one journal row to the engine; true when it changed something a person asked for.
+/// What a journal row did to the engine.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Applied {
+    /// A reading, and what became of it.
+    Reading(Taken),
+    /// Something a person asked for; whether it changed anything.
+    Action(bool),
+}
+
+/// Gives one journal row to the engine.
 pub fn apply(
     engine: &mut Engine,
     id: i64,
@@ -130,17 +139,18 @@ pub fn apply(
     channel: &str,
     row: &crate::service::store::NewRow,
     got: ShellTime,
-) -> bool {
+) -> Applied {
     let serial = u64::try_from(id).unwrap_or(0);
     match &row.action {
         None => {
             let reading = Reading { serial, time: EventTime(row.time), deviation: row.value };
-            engine.take(channel, watch, &reading, got);
-            true
+            Applied::Reading(engine.take(channel, watch, &reading, got))
         }
         // Only actions that could be read were journaled; one of a later version says nothing here.
-        Some(text) => serde_json::from_str::<Action>(text)
-            .is_ok_and(|action| engine.act(channel, &action, serial, got)),
+        Some(text) => Applied::Action(
+            serde_json::from_str::<Action>(text)
+                .is_ok_and(|action| engine.act(channel, &action, serial, got)),
+        ),
     }
 }
 

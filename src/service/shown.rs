@@ -64,7 +64,7 @@ pub(super) fn needs_escape(c: char) -> bool {
             | '\u{2060}'..='\u{206f}'                  // joiner, invisible operators, isolates
             | '\u{fe00}'..='\u{fe0f}'                  // variation selectors
             | '\u{feff}'                               // byte order mark
-            | '\u{fff0}'..='\u{fffd}'                  // interlinear marks, replacement character
+            | '\u{fff0}'..='\u{ffff}'                  // interlinear marks, replacement, no characters
             | '\u{e0000}'..='\u{e0fff}') // tags, further variation selectors
 }
 
@@ -98,6 +98,11 @@ mod tests {
     #[test]
     fn reordering_and_invisible_characters_are_escaped() {
         check("\u{202e}4.0\u{2066}\u{200b}\u{feff}", 80, "\\u{202e}4.0\\u{2066}\\u{200b}\\u{feff}");
+    }
+
+    #[test]
+    fn what_is_no_character_is_escaped_for_xml_forbids_it() {
+        check("\u{fffe}\u{ffff}", 80, "\\u{fffe}\\u{ffff}");
     }
 
     #[test]

@@ -191,6 +191,22 @@ pub struct Claim {
     pub words: Words,
 }
 
+/// Why a condition no longer holds.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize)]
+pub enum Ending {
+    /// The readings say so.
+    #[default]
+    ByReadings,
+    /// A calibration is on record: the alert belonged to the cycle before.
+    Calibrated,
+    /// The day for which a statement was needed has passed.
+    DayPassed,
+    /// The window began anew, and what the alert rested on is no longer in it.
+    WindowAnew,
+    /// The deviation is outside the tolerance by now, which has its own alert.
+    OutsideNow,
+}
+
 /// One alert from raising to clearing.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
 pub struct Episode {
@@ -206,6 +222,8 @@ pub struct Episode {
     pub shelf: Option<(ShellTime, bool)>,
     /// Transitions so far; part of each event's id.
     pub transitions: u32,
+    /// Why the condition no longer holds, once it does not.
+    pub ending: Ending,
 }
 
 /// An event in the life of an episode: what is published, logged and kept.
@@ -271,6 +289,7 @@ impl AlertBook {
             state: State::Unacknowledged,
             shelf: None,
             transitions: 0,
+            ending: Ending::default(),
         });
         let episode = self.open.last_mut().expect("pushed just before");
         Some(episode.step(Transition::Raised, State::Unacknowledged, time))
@@ -302,11 +321,17 @@ impl AlertBook {
         self.revise(claim, time)
     }
 
-    /// The condition is gone. None if there was none.
+    /// The condition is gone, by the readings. None if there was none.
     pub fn lower(&mut self, concern: Concern, time: EventTime) -> Option<AlertEvent> {
+        self.end(concern, time, Ending::ByReadings)
+    }
+
+    /// The condition is gone, for that reason. None if there was none.
+    pub fn end(&mut self, concern: Concern, time: EventTime, ending: Ending) -> Option<AlertEvent> {
         let place = self.open.iter().position(|e| {
             e.claim.kind.concern() == concern && e.state != State::ReturnedUnacknowledged
         })?;
+        self.open[place].ending = ending;
         let seen = match self.open[place].state {
             State::Unacknowledged => false,
             State::Shelved => self.open[place].shelf.is_some_and(|(_, acknowledged)| acknowledged),

@@ -4,10 +4,11 @@
 //! history replayed, a live feed and a restart in the middle all come to the same alerts. Only
 //! silence and the shelf follow the shell's time.
 
-use crate::drift::choose::{Choice, choose};
+use crate::drift::choose::{Choice, SWITCH_ABOVE, TURN_ABOVE, choose, eligible};
+use crate::drift::family::Family;
 use crate::drift::fit::{Fit, FitOutcome, fit};
 use crate::drift::forecast::{Forecaster, own_correlation, sandwich};
-use crate::drift::reach::{Limit, Reach, assess};
+use crate::drift::reach::{Limit, Reach, assess, cap};
 use crate::drift::serial::{count, effective_count, spacing_of};
 use crate::drift::structure::Workspace;
 use crate::watch::alert::{AlertBook, AlertEvent, Owner};
@@ -16,7 +17,7 @@ use crate::watch::finding::Finding;
 use crate::watch::incident::{Incident, Place, ResidualWatch, Turn};
 use crate::watch::limits::{POINTS_AFTER_BREAK, POINTS_TO_FIT};
 use crate::watch::reading::{Counts, Reading, Taken};
-use crate::watch::said::Said;
+use crate::watch::said::{Said, asked_day};
 use crate::watch::settings::WatchSettings;
 use crate::watch::time::{EventTime, ShellTime, Span};
 use crate::watch::window::Window;
@@ -88,8 +89,10 @@ pub struct Channel {
     pub alerts: AlertBook,
     /// What became of its readings.
     pub counts: Counts,
-    /// When something last arrived.
+    /// When a reading that could be used last arrived; before the first, when the channel began.
     pub last_arrival: ShellTime,
+    /// Why the newest arrival could not be used; None: it could.
+    pub unusable: Option<Taken>,
     /// Counters for conditions that must hold several refits.
     pub patience: judge::Patience,
     points_ever: u64,
@@ -133,6 +136,7 @@ impl Channel {
             alerts: AlertBook::default(),
             counts: Counts::default(),
             last_arrival: now,
+            unusable: None,
             patience: judge::Patience::default(),
             points_ever: 0,
             points_at_refit: 0,
@@ -149,9 +153,7 @@ impl Channel {
         now: ShellTime,
         work: &mut Workspace,
     ) -> (Taken, Outcome) {
-        self.last_arrival = self.last_arrival.max(now);
         let mut outcome = Outcome::default();
-        judge::no_longer_silent(self, context, reading.time, &mut outcome);
         let age_zero = self.age_zero(context, reading.time);
         let taken = if reading.time <= age_zero {
             Taken::BeforeAgeZero
@@ -159,6 +161,11 @@ impl Channel {
             self.window.take(reading.time, reading.deviation)
         };
         self.counts.note(taken);
+        self.unusable = (taken != Taken::Accepted).then_some(taken);
+        if taken == Taken::Accepted {
+            self.last_arrival = self.last_arrival.max(now);
+            judge::no_longer_silent(self, context, reading.time, &mut outcome);
+        }
         while let Some(point) = self.window.next_point(context.rules) {
             self.points_ever += 1;
             self.on_point(context, point.time, work, &mut outcome);
@@ -176,13 +183,18 @@ impl Channel {
     }
 
     /// A calibration mark closes the cycle: age zero moves, the window begins anew.
-    pub fn calibrated(&mut self, context: &Context<'_>, mark: EventTime) -> Outcome {
+    pub fn calibrated(
+        &mut self,
+        context: &Context<'_>,
+        mark: EventTime,
+        as_left: Option<f64>,
+    ) -> Outcome {
         self.cycle = Some(Cycle { age_zero: mark, known_from: KnownFrom::Mark });
         self.window.begin_cycle(mark);
         self.refit = None;
         self.residuals.begin_cycle();
         let mut outcome = Outcome::default();
-        judge::new_cycle(self, context, mark, &mut outcome);
+        judge::new_cycle(self, context, mark, as_left, &mut outcome);
         outcome
     }
 
@@ -210,6 +222,12 @@ impl Channel {
         work: &mut Workspace,
         outcome: &mut Outcome,
     ) {
+        if self.refit.is_some() && self.window.points().len() < POINTS_TO_FIT {
+            // A pause longer than the window spans has emptied it: nothing of the old one is left.
+            self.refit = None;
+            self.residuals.begin_cycle();
+            judge::gathers_anew(self, context, newest, outcome);
+        }
         let due = match &self.refit {
             None => self.window.points().len() >= POINTS_TO_FIT,
             Some(refit) => refit.at.plus(context.rules.refit_every) <= newest,
@@ -246,6 +264,7 @@ impl Channel {
                 }
             }
         }
+        let fits = with_those_that_turn(fits, &x, &y, self.residuals.phi(), current);
         let (_, spacing) = spacing_of(&x);
         let mut choice = None;
         let mut standard_errors = [0.0; 4];
@@ -254,8 +273,13 @@ impl Channel {
             let best = choose(&fits, effective_count(x.len(), phi), current);
             let chosen = &fits[best.chosen];
             let own = own_correlation(chosen, &x, &y, &spacing);
-            let curve = (chosen.family, &chosen.theta);
-            self.residuals.refitted(&x, &y, curve, self.points_ever, points_between(fresh));
+            if chosen.is_exact() {
+                // Rounding errors have structure, and mean nothing.
+                self.residuals.without_curve();
+            } else {
+                let curve = (chosen.family, &chosen.theta);
+                self.residuals.refitted(&x, &y, curve, self.points_ever, points_between(fresh));
+            }
             if let Some((v, _)) = sandwich(chosen, &x, &spacing, phi.max(own).clamp(0.0, 0.97)) {
                 standard_errors = chosen.standard_errors_of(&v);
             }
@@ -263,29 +287,63 @@ impl Channel {
         } else {
             self.residuals.without_curve();
         }
-        let reach = self.reach(context, &x, &y, fits.is_empty());
-        let forecaster = Forecaster::new(&x, &y, &context.rules.families, self.residuals.phi());
-        let said = forecaster.map_or_else(Said::default, |forecaster| {
-            Said::of(&forecaster, &reach, context.rules, at, *x.last().unwrap_or(&0.0))
-        });
+        let turning = choice.as_ref().map(|best| fits[best.chosen].family).filter(|f| f.may_turn());
+        let exact = choice.as_ref().is_some_and(|best| fits[best.chosen].is_exact());
+        let (mut reach, carried) = match turning {
+            _ if exact => (Reach::none(Limit::NoScatter), false),
+            Some(_) => (Reach::none(Limit::Turns), false),
+            None => self.reach(context, &x, &y, fits.is_empty()),
+        };
+        // A curve that turns says how large the deviation is now, and nothing of later.
+        let of_now = turning.map(|family| [family]);
+        let families = of_now.as_ref().map_or(&context.rules.families[..], |one| &one[..]);
+        let forecaster = Forecaster::new(&x, &y, families, self.residuals.phi());
+        let newest = x.last().copied().unwrap_or(0.0);
+        let says = |reach: &Reach| {
+            let forecaster = forecaster.as_ref().filter(|_| !exact);
+            forecaster.map_or_else(Said::default, |forecaster| {
+                Said::of(forecaster, reach, context.rules, at, newest)
+            })
+        };
+        let mut said = says(&reach);
+        // Nothing is refused by an older window's reach, where this one's own could differ.
+        let could_differ = |(_, days): (EventTime, f64)| {
+            days <= cap(x.len()) * (newest - x.first().copied().unwrap_or(newest))
+        };
+        if carried && said.ahead.is_none() && said.asked.is_some_and(could_differ) {
+            reach = self.assessed(context, &x, &y);
+            said = says(&reach);
+        }
+        said.asked = said.asked.or_else(|| asked_day(context.rules, at));
         self.refit = Some(Refit { at, fits, choice, standard_errors, not_fitted, reach, said });
     }
 
     /// Reach is assessed anew every tenth of the window, else carried on: how far ahead of its newest
     /// point a window like this one carries does not change faster than the window itself.
-    fn reach(&mut self, context: &Context<'_>, x: &[f64], y: &[f64], no_curve: bool) -> Reach {
+    /// True: carried on.
+    fn reach(
+        &mut self,
+        context: &Context<'_>,
+        x: &[f64],
+        y: &[f64],
+        no_curve: bool,
+    ) -> (Reach, bool) {
         if no_curve {
-            return Reach::none(Limit::NoCurve);
+            return (Reach::none(Limit::NoCurve), false);
         }
         if context.rules.statement.is_none() && context.rules.tolerance.is_none() {
-            return Reach::none(Limit::NotAsked);
+            return (Reach::none(Limit::NotAsked), false);
         }
         if let Some(refit) = &self.refit
             && refit.reach.days_past_newest > 0.0
             && points(self.points_ever - self.points_at_reach) < count(x.len() / 10)
         {
-            return refit.reach.clone();
+            return (refit.reach.clone(), true);
         }
+        (self.assessed(context, x, y), false)
+    }
+
+    fn assessed(&mut self, context: &Context<'_>, x: &[f64], y: &[f64]) -> Reach {
         self.points_at_reach = self.points_ever;
         assess(x, y, &context.rules.families, self.residuals.phi())
     }
@@ -302,6 +360,8 @@ impl Channel {
             newest: self.points_ever,
             stride_points: self.stride_points(),
             budget: context.budget,
+            window_points: context.rules.window_points,
+            window_span: context.rules.window_span,
             age_zero: self.cycle.map_or(EventTime(0), |cycle| cycle.age_zero),
             points: self.window.points(),
         };
@@ -354,6 +414,35 @@ impl Channel {
             self.refit.take().map(|refit| Refit { reach: Reach::none(Limit::NoCurve), ..refit });
         self.refit(context, newest);
     }
+}
+
+/// The fits, and a quadratic or cubic where the data change direction inside the window and it is
+/// clearly better than each of them.
+fn with_those_that_turn(
+    mut fits: Vec<Fit>,
+    x: &[f64],
+    y: &[f64],
+    phi: f64,
+    current: Option<Family>,
+) -> Vec<Fit> {
+    if let (Some(&oldest), Some(&newest)) = (x.first(), x.last())
+        && !fits.is_empty()
+    {
+        let settled = fits.len();
+        for family in [Family::Quadratic, Family::Cubic] {
+            if let FitOutcome::Fitted(fit) = fit(family, x, y, true) {
+                fits.push(*fit);
+            }
+        }
+        let better_by = |f| if current == Some(f) { SWITCH_ABOVE } else { TURN_ABOVE };
+        let may = eligible(&fits, effective_count(x.len(), phi), (oldest, newest), better_by);
+        let mut place = 0;
+        fits.retain(|_| {
+            place += 1;
+            place <= settled || may.contains(&(place - 1))
+        });
+    }
+    fits
 }
 
 #[expect(clippy::cast_precision_loss, reason = "point counts are far below 2^53")]

@@ -153,7 +153,9 @@ impl Engine {
         let time = known.window.newest_reading().unwrap_or(EventTime(now.0));
         let mut outcome = Outcome::default();
         match action {
-            Action::Calibrated { at, .. } => outcome = known.calibrated(&context, *at),
+            Action::Calibrated { at, as_left, .. } => {
+                outcome = known.calibrated(&context, *at, *as_left);
+            }
             Action::Acknowledge { alert } => {
                 outcome.events.extend(known.alerts.acknowledge(alert, time));
             }
@@ -181,8 +183,7 @@ impl Engine {
         let channel = &self.channels[place];
         let rules = &self.settings.watches[self.watches[place]];
         let heard = channel.last_arrival.max(self.listening_since);
-        let speaks = channel.alerts.holding(Concern::Silence).is_none()
-            && channel.window.newest_reading().is_some();
+        let speaks = channel.alerts.holding(Concern::Silence).is_none();
         let silent = speaks.then(|| heard.plus(rules.silent_after));
         silent.into_iter().chain(channel.alerts.next_unshelving()).min()
     }
@@ -318,7 +319,9 @@ fn context<'a>(
 #[cfg(test)]
 mod tests {
     use super::*;
+    use crate::drift::reach::{Limit, Reach};
     use crate::drift::structure::simulate::noise;
+    use crate::watch::alert::Ending;
     use crate::watch::settings::tests::watch_settings;
     use crate::watch::settings::{Statement, WatchSettings};
     use crate::watch::time::{DAY_US, Span};
@@ -558,6 +561,30 @@ mod tests {
     }
 
     #[test]
+    fn drift_that_changes_direction_gets_a_curve_that_turns_and_no_forecast() {
+        let mut engine = Engine::new(site(rules()), ShellTime(START));
+        let values: Vec<f64> = noise(17, 360, 0.3)
+            .iter()
+            .enumerate()
+            .map(|(i, e)| {
+                let day = i as f64 / 4.0;
+                0.1 * day - 0.0011 * day * day + 0.05 * e
+            })
+            .collect();
+        feed(&mut engine, 0, &values);
+        let finding = engine.overview().next().unwrap().1.unwrap();
+        let family = finding.curve.unwrap().family;
+        assert!(["quadratic", "cubic"].contains(&family), "{family}");
+        let forecast = finding.forecast.unwrap();
+        assert!(!forecast.supported && forecast.deviation.is_none());
+        let refit = engine.observe("press.PT-1").unwrap().refit.clone().unwrap();
+        assert_eq!(refit.reach, Reach::none(Limit::Turns));
+        let (now, half) = refit.said.now.unwrap();
+        let truth = 0.1 * 90.0 - 0.0011 * 90.0 * 90.0;
+        assert!((now - truth).abs() < half && half < 0.25, "{now} ± {half} against {truth}");
+    }
+
+    #[test]
     fn outrunning_the_tolerance_is_told_ahead_and_then_now() {
         let rules = WatchSettings { tolerance: Some(3.0), ..rules() };
         let mut engine = Engine::new(site(rules), ShellTime(START));
@@ -570,6 +597,94 @@ mod tests {
         let kinds: Vec<&str> = lines.iter().map(|l| l.split(' ').nth(1).unwrap()).collect();
         assert_eq!(kinds[0], "tolerance-ahead", "{lines:#?}");
         assert!(kinds.contains(&"out-of-tolerance"), "{lines:#?}");
+    }
+
+    /// Feeds readings after these pauses (hours), each followed by five hourly ones.
+    fn feed_with_pauses(pauses_h: &[u32]) {
+        let span = Span::from_days(1.0);
+        let rules = WatchSettings {
+            window_span: span,
+            window_points: 60,
+            refit_every: Span::from_days(0.1),
+            ..rules()
+        };
+        let mut engine = Engine::new(site(rules), ShellTime(START));
+        let (mut time, mut serial) = (START, 0);
+        for pause in pauses_h {
+            time += i64::from(*pause) * 3_600_000_000;
+            for k in 0..30 {
+                time += 600_000_000 + i64::from(k);
+                serial += 1;
+                let deviation = 0.01 * f64::from(serial % 7) + f64::from(*pause) * 1e-3;
+                let reading =
+                    Reading { serial: u64::from(serial as u32), time: EventTime(time), deviation };
+                engine.take("press.PT-1", 0, &reading, ShellTime(time));
+                engine.tick(ShellTime(time));
+            }
+        }
+        drop(engine.effects());
+    }
+
+    proptest::proptest! {
+        #[test]
+        fn no_pause_brings_the_engine_down(pauses_h in proptest::collection::vec(0_u32..2000, 1..12)) {
+            feed_with_pauses(&pauses_h);
+        }
+    }
+
+    #[test]
+    fn a_pause_longer_than_the_window_begins_it_anew_and_says_so() {
+        let mut engine = Engine::new(site(rules()), ShellTime(START));
+        let values = curve(700, 12, |i| if i >= 600 { 0.12 } else { 0.0 });
+        feed(&mut engine, 0, &values);
+        let lines = feed(&mut engine, 700 + 91 * 4, &[0.3]);
+        assert!(lines.iter().any(|l| l.starts_with("returned step")), "{lines:#?}");
+        let (channel, finding) = engine.overview().next().unwrap();
+        let ending = channel.alerts.open().iter().find(|e| e.claim.kind.name() == "step");
+        assert_eq!(ending.unwrap().ending, Ending::WindowAnew);
+        let finding = finding.unwrap();
+        assert!(finding.curve.is_none() && finding.no_curve.unwrap().starts_with("gathering"));
+    }
+
+    #[test]
+    fn honest_drift_of_short_reach_is_not_refused_when_the_window_grows() {
+        let statement = Some(Statement::LookAhead(Span::from_days(6.0)));
+        for seed in 20..30 {
+            let rules = WatchSettings { statement, ..rules() };
+            let mut engine = Engine::new(site(rules), ShellTime(START));
+            let lines = feed(&mut engine, 0, &curve(200, seed, |_| 0.0));
+            assert!(lines.is_empty(), "{lines:#?}");
+        }
+    }
+
+    #[test]
+    fn readings_that_cannot_be_used_end_in_an_alert_that_says_so() {
+        let mut engine = Engine::new(site(rules()), ShellTime(START));
+        feed(&mut engine, 0, &[0.1, 0.2, 0.3]);
+        for k in 0..20 {
+            let now = ShellTime(START + (4 + k) * STEP_US);
+            let reading = Reading { serial: 100, time: EventTime(START + STEP_US), deviation: 0.1 };
+            engine.take("press.PT-1", 0, &reading, now);
+            engine.tick(now);
+        }
+        let channel = engine.observe("press.PT-1").unwrap();
+        let says = &channel.alerts.open()[0].claim.words.says;
+        assert!(says.starts_with("Readings arrive, but none since"), "{says}");
+    }
+
+    #[test]
+    fn a_curve_without_scatter_is_named_and_claims_nothing() {
+        let mut engine = Engine::new(site(rules()), ShellTime(START));
+        let ramp: Vec<f64> = (0..300).map(|i| 0.001 * f64::from(i)).collect();
+        let lines = feed(&mut engine, 0, &ramp);
+        let structure = lines.iter().filter(|l| !l.contains("beyond-reach")).count();
+        assert_eq!(structure, 0, "{lines:#?}");
+        let finding = engine.overview().next().unwrap().1.unwrap();
+        assert_eq!(finding.curve.unwrap().family, "linear");
+        assert!(!finding.forecast.unwrap().supported);
+        assert!(finding.reach.why.contains("do not scatter"), "{}", finding.reach.why);
+        let now = finding.now.unwrap();
+        assert!(now.low.is_none() && (now.deviation - 0.297).abs() < 1e-9, "{now:?}");
     }
 
     #[test]

@@ -62,6 +62,8 @@ pub struct WindowFound {
     pub points: usize,
     /// Number of readings in them.
     pub readings: u64,
+    /// What became of all readings of this channel so far, by code; zeros left out.
+    pub arrived: BTreeMap<&'static str, u64>,
     /// Age of the oldest point, days.
     pub age_from_d: f64,
     /// Age of the newest point, days.
@@ -73,10 +75,10 @@ pub struct WindowFound {
 pub struct NowFound {
     /// In the unit.
     pub deviation: f64,
-    /// Lower end of its interval.
-    pub low: f64,
-    /// Upper end of its interval.
-    pub high: f64,
+    /// Lower end of its interval; null when the readings do not show how far they scatter.
+    pub low: Option<f64>,
+    /// Upper end of its interval; null with the lower one.
+    pub high: Option<f64>,
     /// The interval's level.
     pub level: f64,
     /// `curve`, or `newest points` (their median) while no curve can be trusted.
@@ -124,7 +126,7 @@ pub struct StructureFound {
     pub verdict: Verdict,
     /// The score −log10 p.
     pub statistic: Option<f64>,
-    /// Probability of a score as large if nothing were wrong.
+    /// Probability of a score as large if nothing were wrong; never told below 1e-10.
     pub p: Option<f64>,
     /// Size, in the unit; null unless present or watching.
     pub size: Option<f64>,
@@ -216,6 +218,16 @@ impl Decision {
     /// # Source
     /// ILAC-G8:09/2019, non-binary statement with guard band w = U (from memory).
     pub fn of(value: f64, guard: f64, limit: f64) -> Decision {
+        Decision::of_known(value, Some(guard), limit)
+    }
+
+    /// The same where the guard band may be unknown: then a value outside is a conditional fail, and
+    /// of one inside nothing can be said.
+    pub fn of_known(value: f64, guard: Option<f64>, limit: f64) -> Decision {
+        let Some(guard) = guard else {
+            let outside = value.abs() > limit;
+            return if outside { Decision::ConditionalFail } else { Decision::Undetermined };
+        };
         if !(value.is_finite() && guard.is_finite()) {
             return Decision::Undetermined;
         }

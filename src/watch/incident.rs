@@ -4,10 +4,9 @@
 //! quarter of the window), is settled then (after a step or bend the window begins anew there), and
 //! closes when half a window brought no more evidence of it.
 //!
-//! It lives on evidence of what it tells. A break with no point left before it in the window cannot
-//! be seen any more: only a score at its threshold keeps such an incident open, and one that is
-//! clearly above is another structure, so the incident is told anew with that one's name, size
-//! and date. Dependence is seen in its own score.
+//! It lives on evidence of what it tells. Once its break has left the window, a score clearly above its
+//! threshold is another structure, and the incident is told anew with that one's name, size and
+//! date; after a cut at the break, a clear jump is so at once. Dependence is seen in its own score.
 
 use crate::drift::family::{Coefficients, Family};
 use crate::drift::structure::{
@@ -20,7 +19,7 @@ use crate::watch::budget::{
     close_after_points, evidence, rename_within_points,
 };
 use crate::watch::limits::POINTS_TO_EXAMINE;
-use crate::watch::time::EventTime;
+use crate::watch::time::{EventTime, Span};
 use crate::watch::whitening::Whitening;
 use crate::watch::window::Point;
 use serde::{Deserialize, Serialize};
@@ -77,10 +76,33 @@ impl Incident {
     pub fn settled_break(&self) -> Option<EventTime> {
         (self.settled && self.kind != Kind::Dependence).then_some(self.at)
     }
+}
 
-    /// Whether the break lies at or before the window's beginning, where nothing shows it.
-    fn is_out_of_sight(&self, oldest: EventTime) -> bool {
-        self.settled_break().is_some_and(|at| at <= oldest)
+/// Whether the window can still show what an incident tells.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+enum Sight {
+    /// It can, or it must: not settled yet, or dependence.
+    Shown,
+    /// The window began anew at the break. A bend in it may well be a curve that does not fit yet, as
+    /// long as the window has not filled again; a jump is a jump.
+    CutOff,
+    /// Even a full window would no longer reach back to the break.
+    Gone,
+}
+
+impl Sight {
+    fn of(incident: &Incident, place: &Place<'_>) -> Sight {
+        let Some(at) = incident.settled_break() else { return Sight::Shown };
+        let (Some(oldest), Some(newest)) = (place.points.front(), place.points.back()) else {
+            return Sight::Shown;
+        };
+        let filled = place.newest - incident.opened >= index_of(place.window_points)
+            || at.plus(place.window_span) <= newest.time;
+        match (at <= oldest.time, filled) {
+            (false, _) => Sight::Shown,
+            (true, false) => Sight::CutOff,
+            (true, true) => Sight::Gone,
+        }
     }
 }
 
@@ -133,16 +155,14 @@ pub struct Place<'a> {
     pub stride_points: usize,
     /// The site's budget.
     pub budget: Budget,
+    /// The most points the window may hold.
+    pub window_points: usize,
+    /// The longest it may reach back.
+    pub window_span: Span,
     /// Age zero.
     pub age_zero: EventTime,
     /// The window's points.
     pub points: &'a VecDeque<Point>,
-}
-
-impl Place<'_> {
-    fn oldest(&self) -> EventTime {
-        self.points.front().map_or(self.age_zero, |point| point.time)
-    }
 }
 
 impl ResidualWatch {
@@ -239,16 +259,23 @@ impl ResidualWatch {
             self.baseline.freeze();
             return Turn::Opened(self.begin(place, found, judgement));
         };
-        let out_of_sight = incident.is_out_of_sight(place.oldest());
-        let near = if out_of_sight { crossed } else { brings_evidence(&incident, judgement) };
+        let sight = Sight::of(&incident, place);
+        let near = match sight {
+            Sight::Gone => crossed,
+            Sight::Shown | Sight::CutOff => brings_evidence(&incident, judgement),
+        };
         if near {
             incident.last_near = place.newest;
         }
         self.incident = Some(incident);
         let wait = index_of(close_after_points(incident.points));
         let quiet = place.newest - incident.last_near >= wait;
-        let another =
-            if out_of_sight { judgement.margin >= TELL_ANEW_ABOVE } else { quiet && crossed };
+        let clearly = judgement.margin >= TELL_ANEW_ABOVE;
+        let another = match sight {
+            Sight::Shown => crossed && quiet,
+            Sight::CutOff => clearly && is_clearly_a_step(found),
+            Sight::Gone => clearly,
+        };
         if another && incident.settled && found.is_full() {
             return Turn::ToldAnew(self.begin(place, found, judgement));
         }
@@ -332,6 +359,13 @@ fn is_clearly_ahead(kind: Structure, incident: &Incident, found: &Examination) -
     let standing = Structure::ALL.into_iter().filter(|&k| alert_kind(k) == incident.kind);
     let for_name = standing.filter_map(|k| evidence(found, k)).fold(f64::NEG_INFINITY, f64::max);
     evidence(found, kind).is_some_and(|score| score - for_name >= RENAME_AHEAD)
+}
+
+/// Whether a look speaks clearly for a step, against every other name.
+fn is_clearly_a_step(found: &Examination) -> bool {
+    let Some(step) = evidence(found, Structure::Step) else { return false };
+    let others = [Structure::Bend, Structure::Dependence];
+    others.into_iter().filter_map(|k| evidence(found, k)).all(|other| step - other >= RENAME_AHEAD)
 }
 
 /// Whether a look shows what the incident tells: a break shows in every score, dependence (which

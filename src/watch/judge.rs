@@ -3,8 +3,7 @@
 //! Conditions that hang on a single refit must hold for several before they count, so that none
 //! chatters; the residual watch has its own rule.
 
-use crate::drift::tails::probability;
-use crate::watch::alert::{AlertEvent, Claim, Concern, Evidence, Kind};
+use crate::watch::alert::{AlertEvent, Claim, Concern, Ending, Evidence, Kind};
 use crate::watch::channel::{Channel, Context, Outcome};
 use crate::watch::finding::Decision;
 use crate::watch::incident::Incident;
@@ -13,12 +12,17 @@ use crate::watch::time::{EventTime, ShellTime};
 use crate::watch::wording;
 use serde::{Deserialize, Serialize};
 
+/// Scores above this are not told as smaller probabilities: simulation went no further.
+const SCORE_TRUSTED_MAX: f64 = 10.0;
 /// Refits in a row before a refused statement counts as an alert, and before a supported one lowers it.
 const REFITS_FOR_REACH: u32 = 3;
 /// Refits in a row for tolerance ahead, and for no curve.
 const REFITS_FOR_AHEAD: u32 = 2;
 /// The value must come back inside the limit by this share of its guard band.
 const RETURN_SHARE: f64 = 0.25;
+/// An open out-of-tolerance alert is revised when the deviation has changed by this share of what was
+/// told, and by more than its guard band.
+const REVISE_SHARE: f64 = 0.25;
 
 /// How often in a row something held: positive counts of it, negative of its opposite.
 #[derive(Clone, Debug, Default, PartialEq, Eq, Serialize, Deserialize)]
@@ -37,6 +41,11 @@ fn counted(tally: &mut i32, holds: bool, needed: u32) -> Option<bool> {
         (false, _) => -1,
     };
     (tally.unsigned_abs() >= needed).then_some(holds)
+}
+
+/// 10^−score, but no smaller than what the method was ever held against.
+pub fn probability(score: f64) -> f64 {
+    10f64.powf(-score.clamp(0.0, SCORE_TRUSTED_MAX))
 }
 
 fn push(outcome: &mut Outcome, event: Option<AlertEvent>) {
@@ -107,22 +116,40 @@ pub fn closed(channel: &mut Channel, time: EventTime, outcome: &mut Outcome) {
     push(outcome, channel.alerts.lower(Concern::Residuals, time));
 }
 
-/// A new calibration cycle: what was said of the old one is over.
+/// What hangs on the readings in the window.
+const OF_THE_WINDOW: [Concern; 4] =
+    [Concern::Residuals, Concern::Reach, Concern::ToleranceAhead, Concern::Curve];
+
+/// A new calibration cycle: what was said of the old one is over. `as_left`: the deviation after it, if
+/// the person told it; outside the tolerance, that alert stands.
 pub fn new_cycle(
     channel: &mut Channel,
     context: &Context<'_>,
     mark: EventTime,
+    as_left: Option<f64>,
     outcome: &mut Outcome,
 ) {
     channel.patience = Patience::default();
-    for concern in [
-        Concern::Residuals,
-        Concern::Reach,
-        Concern::ToleranceAhead,
-        Concern::Tolerance,
-        Concern::Curve,
-    ] {
-        push(outcome, channel.alerts.lower(concern, mark));
+    for concern in OF_THE_WINDOW {
+        push(outcome, channel.alerts.end(concern, mark, Ending::Calibrated));
+    }
+    let outside = as_left.zip(context.rules.tolerance).is_some_and(|(v, limit)| v.abs() > limit);
+    if !outside {
+        push(outcome, channel.alerts.end(Concern::Tolerance, mark, Ending::Calibrated));
+    }
+    outcome.findings.extend(report::finding_if_any(channel, context));
+}
+
+/// The window has too few points for anything: it gathers anew, and what rested on it is over.
+pub fn gathers_anew(
+    channel: &mut Channel,
+    context: &Context<'_>,
+    time: EventTime,
+    outcome: &mut Outcome,
+) {
+    channel.patience = Patience::default();
+    for concern in OF_THE_WINDOW {
+        push(outcome, channel.alerts.end(concern, time, Ending::WindowAnew));
     }
     outcome.findings.extend(report::finding_if_any(channel, context));
 }
@@ -146,15 +173,24 @@ pub fn silence(
     listening_since: ShellTime,
     outcome: &mut Outcome,
 ) {
-    let Some(newest) = channel.window.newest_reading() else { return };
+    let newest = channel.window.newest_reading();
     let heard = channel.last_arrival.max(listening_since);
-    if heard.plus(context.rules.silent_after) > now {
+    if heard.plus(context.rules.silent_after) > now
+        || channel.alerts.holding(Concern::Silence).is_some()
+    {
         return;
     }
-    let words = wording::silent(newest, context.rules.silent_after.days());
-    let evidence = Evidence { at: Some(newest), ..Evidence::default() };
-    let time = newest.plus(context.rules.silent_after);
+    let allowed = context.rules.silent_after.days();
+    let words = match (channel.unusable, newest) {
+        (Some(last), _) => wording::unusable(newest, allowed, last.words()),
+        (None, Some(newest)) => wording::silent(newest, allowed),
+        // A channel begins with a reading; one that has neither has just been born.
+        (None, None) => return,
+    };
+    let evidence = Evidence { at: newest, ..Evidence::default() };
+    let time = newest.unwrap_or(EventTime(heard.0)).plus(context.rules.silent_after);
     raise(channel, context, Claim { kind: Kind::Silent, evidence, words }, time, outcome);
+    outcome.findings.extend(report::finding_if_any(channel, context));
 }
 
 /// Everything that hangs on the newest refit.
@@ -195,15 +231,25 @@ fn tolerance_now(
     else {
         return;
     };
-    match Decision::of(value, guard, limit) {
+    match Decision::of_known(value, guard, limit) {
         Decision::Fail | Decision::ConditionalFail => {
+            if let Some(open) = channel.alerts.holding(Concern::Tolerance) {
+                let told = open.claim.evidence.size.unwrap_or(0.0);
+                let known_better = (REVISE_SHARE * told.abs()).max(guard.unwrap_or(0.0));
+                if (value - told).abs() <= known_better {
+                    return;
+                }
+            }
             let words = wording::out_of_tolerance(value, guard, limit, &context.rules.unit);
             let evidence = Evidence { size: Some(value), at: Some(time), ..Evidence::default() };
             let claim = Claim { kind: Kind::OutOfTolerance, evidence, words };
-            raise(channel, context, claim, time, outcome);
+            match channel.alerts.revise(claim.clone(), time) {
+                Some(event) => outcome.events.push(event),
+                None => raise(channel, context, claim, time, outcome),
+            }
         }
         Decision::Pass | Decision::ConditionalPass
-            if value.abs() <= limit - RETURN_SHARE * guard.min(limit) =>
+            if value.abs() <= limit - RETURN_SHARE * guard.unwrap_or(0.0).min(limit) =>
         {
             push(outcome, channel.alerts.lower(Concern::Tolerance, time));
         }
@@ -220,8 +266,8 @@ fn statement(channel: &mut Channel, context: &Context<'_>, time: EventTime, outc
     let Some(refit) = &channel.refit else { return };
     let said = refit.said.clone();
     let Some((day, needs)) = said.asked else {
-        push(outcome, channel.alerts.lower(Concern::Reach, time));
-        push(outcome, channel.alerts.lower(Concern::ToleranceAhead, time));
+        push(outcome, channel.alerts.end(Concern::Reach, time, Ending::DayPassed));
+        push(outcome, channel.alerts.end(Concern::ToleranceAhead, time, Ending::DayPassed));
         return;
     };
     let (supported, limit_words) = (refit.reach.days_past_newest, refit.reach.limit.words());
@@ -253,7 +299,11 @@ fn statement(channel: &mut Channel, context: &Context<'_>, time: EventTime, outc
             let claim = Claim { kind: Kind::ToleranceAhead, evidence, words };
             raise(channel, context, claim, time, outcome);
         }
-        Some(false) => push(outcome, channel.alerts.lower(Concern::ToleranceAhead, time)),
+        Some(false) => {
+            let outside = channel.alerts.holding(Concern::Tolerance).is_some();
+            let ending = if outside { Ending::OutsideNow } else { Ending::ByReadings };
+            push(outcome, channel.alerts.end(Concern::ToleranceAhead, time, ending));
+        }
         None => {}
     }
 }

@@ -43,6 +43,18 @@ impl Taken {
         Taken::TooManyChannels,
     ];
 
+    /// The outcome as a code, for logs and JSON.
+    pub const fn code(self) -> &'static str {
+        match self {
+            Taken::Accepted => "accepted",
+            Taken::Duplicate => "duplicate",
+            Taken::Contradicts => "contradicts",
+            Taken::Late => "late",
+            Taken::BeforeAgeZero => "not-after-age-zero",
+            Taken::TooManyChannels => "too-many-channels",
+        }
+    }
+
     /// The outcome in plain words.
     pub const fn words(self) -> &'static str {
         match self {

@@ -1,8 +1,9 @@
 //! The finding of one channel, drawn from its state.
 
 use crate::drift::fit::Fit;
+use crate::drift::forecast::NORMAL_95;
 use crate::drift::structure::{Kind as Structure, Score};
-use crate::drift::tails::probability;
+use crate::watch::alert::Concern;
 use crate::watch::budget::{CLOSE_BELOW, Judged};
 use crate::watch::channel::{Channel, Context, KnownFrom, Refit};
 use crate::watch::finding::{
@@ -10,7 +11,9 @@ use crate::watch::finding::{
     StructureFound, ToleranceFound, Verdict, WindowFound,
 };
 use crate::watch::incident::alert_kind;
+use crate::watch::judge::probability;
 use crate::watch::limits::{POINTS_TO_EXAMINE, POINTS_TO_FIT};
+use crate::watch::reading::Taken;
 use crate::watch::said::{Interval, asked_day};
 use crate::watch::settings::WatchSettings;
 use crate::watch::time::{EventTime, Span};
@@ -23,17 +26,18 @@ const SHARE_AT_BEST: f64 = 0.45;
 /// Points whose median stands for the deviation while no curve can be trusted.
 const NEWEST_POINTS: usize = 5;
 
-/// The finding, if the channel has a point yet.
+/// The finding, if the channel has a cycle yet.
 pub fn finding_if_any(channel: &Channel, context: &Context<'_>) -> Option<Finding> {
-    (!channel.window.points().is_empty()).then(|| finding(channel, context))
+    channel.cycle.is_some().then(|| finding(channel, context))
 }
 
-/// Everything known of a channel that has at least one point.
+/// Everything known of a channel that has had a reading.
 pub fn finding(channel: &Channel, context: &Context<'_>) -> Finding {
     let points = channel.window.points();
-    let newest = points.back().map_or(EventTime(0), |p| p.time);
+    let cycle = channel.cycle.expect("a channel has a cycle from its first reading on");
+    // Without points the cycle has just begun.
+    let newest = points.back().map_or(cycle.age_zero, |p| p.time);
     let oldest = points.front().map_or(newest, |p| p.time);
-    let cycle = channel.cycle.expect("a channel with points has a cycle");
     let refit = channel.refit.as_ref();
     let reach = reach_found(channel, newest);
     Finding {
@@ -53,6 +57,7 @@ pub fn finding(channel: &Channel, context: &Context<'_>) -> Finding {
             to: newest,
             points: points.len(),
             readings: channel.window.readings(),
+            arrived: arrived(channel),
             age_from_d: oldest.days_since(cycle.age_zero),
             age_to_d: newest.days_since(cycle.age_zero),
         },
@@ -187,6 +192,7 @@ pub fn gathering(channel: &Channel, context: &Context<'_>) -> Option<String> {
 
 fn reach_found(channel: &Channel, newest: EventTime) -> ReachFound {
     let (days, why) = match (&channel.refit, channel.residuals.incident()) {
+        _ if is_silent(channel) => (0.0, "nothing usable arrives any more".to_owned()),
         (_, Some(incident)) => {
             (0.0, format!("the residuals show structure ({})", incident.kind.name()))
         }
@@ -206,13 +212,12 @@ fn forecast_found(
     let ahead = channel
         .refit
         .as_ref()
-        .filter(|_| channel.residuals.incident().is_none())
+        .filter(|_| channel.residuals.incident().is_none() && !is_silent(channel))
         .and_then(|refit| refit.said.ahead);
     let refused = ahead.is_none().then(|| {
+        let (needs, supports) = wording::unequal_days(needs, reach.days_past_newest);
         format!(
-            "needs {} past the newest reading; the window supports {}: {}",
-            wording::days(needs),
-            wording::days(reach.days_past_newest),
+            "needs {needs} past the newest reading; the window supports {supports}: {}",
             reach.why
         )
     });
@@ -231,11 +236,12 @@ fn forecast_found(
 fn tolerance_found(channel: &Channel, rules: &WatchSettings) -> Option<ToleranceFound> {
     let limit = rules.tolerance?;
     let decision = deviation_now(channel)
-        .map_or(Decision::Undetermined, |(value, guard)| Decision::of(value, guard, limit));
+        .filter(|_| !is_silent(channel))
+        .map_or(Decision::Undetermined, |(value, guard)| Decision::of_known(value, guard, limit));
     let within_until = channel
         .refit
         .as_ref()
-        .filter(|_| channel.residuals.incident().is_none())
+        .filter(|_| channel.residuals.incident().is_none() && !is_silent(channel))
         .and_then(|refit| refit.said.within_until);
     Some(ToleranceFound { limit, decision, within_until })
 }
@@ -243,8 +249,17 @@ fn tolerance_found(channel: &Channel, rules: &WatchSettings) -> Option<Tolerance
 fn now_found(channel: &Channel) -> Option<NowFound> {
     let (deviation, guard) = deviation_now(channel)?;
     let drawn_from = if by_the_curve(channel).is_some() { "curve" } else { "newest points" };
-    let (low, high) = (deviation - guard, deviation + guard);
+    let (low, high) = (guard.map(|guard| deviation - guard), guard.map(|guard| deviation + guard));
     Some(NowFound { deviation, low, high, level: 0.95, drawn_from })
+}
+
+fn arrived(channel: &Channel) -> BTreeMap<&'static str, u64> {
+    let counts = Taken::ALL.map(|taken| (taken.code(), channel.counts.of(taken)));
+    counts.into_iter().filter(|(_, count)| *count > 0).collect()
+}
+
+fn is_silent(channel: &Channel) -> bool {
+    channel.alerts.holding(Concern::Silence).is_some()
 }
 
 fn by_the_curve(channel: &Channel) -> Option<Interval> {
@@ -253,10 +268,11 @@ fn by_the_curve(channel: &Channel) -> Option<Interval> {
 }
 
 /// The deviation now and its guard band: by the curve where it can be trusted, else by the newest
-/// points themselves. None before there are enough points for either.
-pub fn deviation_now(channel: &Channel) -> Option<Interval> {
-    if let Some(now) = by_the_curve(channel) {
-        return Some(now);
+/// points themselves. The guard band is None where nothing shows how far readings scatter. None before
+/// there are enough points for either.
+pub fn deviation_now(channel: &Channel) -> Option<(f64, Option<f64>)> {
+    if let Some((value, guard)) = by_the_curve(channel) {
+        return Some((value, Some(guard)));
     }
     let points = channel.window.points();
     if points.len() < NEWEST_POINTS {
@@ -264,9 +280,10 @@ pub fn deviation_now(channel: &Channel) -> Option<Interval> {
     }
     let mut newest: Vec<f64> = points.iter().rev().take(NEWEST_POINTS).map(|p| p.mean).collect();
     newest.sort_by(f64::total_cmp);
-    let scatter =
-        channel.refit.as_ref().and_then(Refit::curve).map_or(0.0, |fit: &Fit| fit.residual_sd);
-    Some((newest[NEWEST_POINTS / 2], crate::drift::forecast::NORMAL_95 * scatter))
+    // Of readings without a curve, or without any scatter, nobody knows how far they can be trusted.
+    let curve = channel.refit.as_ref().and_then(Refit::curve);
+    let scatter = curve.filter(|fit: &&Fit| !fit.is_exact()).map(|fit| fit.residual_sd);
+    Some((newest[NEWEST_POINTS / 2], scatter.map(|sd| NORMAL_95 * sd)))
 }
 
 fn cautions(channel: &Channel, context: &Context<'_>) -> Vec<String> {

@@ -4,7 +4,7 @@
 //! escaped, where a line is shown.
 
 use crate::drift::family::Family;
-use crate::watch::alert::Kind;
+use crate::watch::alert::{Ending, Kind};
 use crate::watch::time::EventTime;
 use serde::{Deserialize, Serialize};
 
@@ -65,6 +65,18 @@ pub fn with_guard<const N: usize>(half: f64, values: [f64; N]) -> (String, [Stri
 /// Writes days: whole ones from ten up, one decimal below.
 pub fn days(value: f64) -> String {
     if value >= 10.0 { format!("{value:.0} d") } else { format!("{value:.1} d") }
+}
+
+/// Writes two numbers of days so that they differ in writing, too.
+pub fn unequal_days(a: f64, b: f64) -> (String, String) {
+    let plain = (days(a), days(b));
+    if plain.0 != plain.1 {
+        return plain;
+    }
+    (1..=6)
+        .map(|places| (format!("{a:.places$} d"), format!("{b:.places$} d")))
+        .find(|(a, b)| a != b)
+        .unwrap_or(plain)
 }
 
 /// Writes a time to the minute, as on the technician's line: `2026-06-03 08:00Z`.
@@ -128,13 +140,14 @@ pub fn dependence(found: f64, usual: f64) -> Words {
 
 /// A statement for `asked` needs `needed_d` past the newest reading; `supported_d` are supported.
 pub fn beyond_reach(asked: EventTime, needed_d: f64, supported_d: f64, limit: &str) -> Words {
+    let (needed, supported) = unequal_days(needed_d, supported_d);
     Words {
         says: format!(
             "A statement for {} needs {} past the newest reading; the window supports {} ({limit}). \
              Nothing is claimed for that day.",
             minute(asked),
-            days(needed_d),
-            days(supported_d)
+            needed,
+            supported
         ),
         check_first: list(&[
             "Plan a check against a reference within the supported days.",
@@ -168,11 +181,17 @@ pub fn tolerance_ahead(
 }
 
 /// The deviation is outside the tolerance now.
-pub fn out_of_tolerance(value: f64, guard: f64, limit: f64, unit: &str) -> Words {
-    let (guard, [value]) = with_guard(guard, [value]);
+pub fn out_of_tolerance(value: f64, guard: Option<f64>, limit: f64, unit: &str) -> Words {
+    let (value, guard) = match guard {
+        Some(guard) => {
+            let (guard, [value]) = with_guard(guard, [value]);
+            (value, format!("±{guard}"))
+        }
+        None => (number(value, true), "uncertainty unknown".to_owned()),
+    };
     Words {
         says: format!(
-            "The deviation is {value} {unit} (±{guard}) now, outside the tolerance of ±{limit} \
+            "The deviation is {value} {unit} ({guard}) now, outside the tolerance of ±{limit} \
              {unit}.",
         ),
         check_first: list(&[
@@ -187,6 +206,22 @@ pub fn no_curve(why: &str) -> Words {
     Words {
         says: format!("No drift curve describes this channel: {why}. No statement is made."),
         check_first: list(&["Look at the readings: are they what this channel should send?"]),
+    }
+}
+
+/// Readings arrive, but none since `newest` could be used; `last` says why the last one could not.
+pub fn unusable(newest: Option<EventTime>, allowed_d: f64, last: &str) -> Words {
+    let since = newest.map_or_else(|| "at all".to_owned(), |t| format!("since {}", minute(t)));
+    Words {
+        says: format!(
+            "Readings arrive, but none {since} could be used, for longer than the {} allowed; the \
+             last one was {last}.",
+            days(allowed_d)
+        ),
+        check_first: list(&[
+            "Check the clock of the sender and the times it sends.",
+            "Check whether it repeats an old reading.",
+        ]),
     }
 }
 
@@ -207,16 +242,27 @@ pub fn silent(newest: EventTime, allowed_d: f64) -> Words {
 }
 
 /// The sentence of a condition that is gone.
-pub fn gone(kind: Kind) -> &'static str {
+pub fn gone(kind: Kind, ending: Ending) -> &'static str {
+    match ending {
+        Ending::ByReadings => gone_by_readings(kind),
+        Ending::Calibrated => {
+            "A calibration is on record and a new cycle begins; this alert belonged to the one before."
+        }
+        Ending::DayPassed => "The day for which the statement was needed has passed.",
+        Ending::WindowAnew => {
+            "The window has begun anew, and what this alert rested on is no longer in it."
+        }
+        Ending::OutsideNow => "The deviation is outside the tolerance by now; see that alert.",
+    }
+}
+
+fn gone_by_readings(kind: Kind) -> &'static str {
     match kind {
         Kind::Step | Kind::Bend | Kind::Dependence => {
             "The residuals show no structure any more; the curve describes the instrument again."
         }
         Kind::BeyondReach => "The window now supports the statement that is needed.",
-        Kind::ToleranceAhead => {
-            "Nothing ahead any more: the forecast stays inside the tolerance, or the deviation is \
-             outside it already."
-        }
+        Kind::ToleranceAhead => "The forecast for the asked day stays inside the tolerance.",
         Kind::OutOfTolerance => "The deviation is inside the tolerance again.",
         Kind::NoCurve => "A curve describes this channel again.",
         Kind::Silent => "Readings arrive again.",
@@ -264,7 +310,9 @@ mod tests {
             dependence(0.82, 0.3),
             beyond_reach(AT, 30.0, 18.4, "backtests at 25 d missed by 2.4 times"),
             tolerance_ahead((0.3, 0.2, 0.4), 0.25, "bar", AT, Some(AT)),
-            out_of_tolerance(0.3, 0.02, 0.25, "bar"),
+            out_of_tolerance(0.3, Some(0.02), 0.25, "bar"),
+            out_of_tolerance(0.3, None, 0.25, "bar"),
+            unusable(None, 3.0, "late, not fitted"),
             no_curve("all ages are 0"),
             silent(AT, 3.0),
         ];

@@ -14,9 +14,6 @@ pub const LEVEL: f64 = 0.95;
 /// A test's p-value below this is worth a caution (common practice, no source).
 const TELLING: f64 = 0.01;
 
-/// Residuals below this share of the largest deviation are rounding noise.
-const ROUNDING: f64 = 1e-13;
-
 /// The caution about predictions beyond the readings.
 pub const EXTRAPOLATED: &str =
     "beyond the readings nothing here tells whether the curve goes on like this";
@@ -107,19 +104,13 @@ struct Ranking {
     why: Option<String>,
 }
 
-/// Whether the curve passes through every reading to rounding.
-fn is_exact(fit: &Fit, y: &[f64]) -> bool {
-    let largest = y.iter().fold(0.0_f64, |m, v| m.max(v.abs()));
-    fit.residual_sd <= ROUNDING * largest
-}
-
 /// The ranking where curves pass through every reading: the plainest of them, for AICc would choose
 /// among rounding errors.
-fn exact_plainest(fits: &[Fit], y: &[f64]) -> Option<Ranking> {
+fn exact_plainest(fits: &[Fit]) -> Option<Ranking> {
     let mut order: Vec<usize> = (0..fits.len()).collect();
     let plainness = |i: usize| Family::ALL.iter().position(|&family| family == fits[i].family);
-    order.sort_by_key(|&i| (!is_exact(&fits[i], y), plainness(i)));
-    let first = order.first().filter(|&&i| is_exact(&fits[i], y))?;
+    order.sort_by_key(|&i| (!fits[i].is_exact(), plainness(i)));
+    let first = order.first().filter(|&&i| fits[i].is_exact())?;
     let name = fits[*first].family.name();
     let why = format!("{name}, the plainest curve that passes through every reading");
     Some(Ranking { order, why: Some(why) })
@@ -130,12 +121,12 @@ fn rank(fits: &[Fit], x: &[f64], y: &[f64], spacing: &[f64]) -> Ranking {
     if fits.is_empty() {
         return Ranking { order: Vec::new(), why: None };
     }
-    if let Some(plainest) = exact_plainest(fits, y) {
+    if let Some(plainest) = exact_plainest(fits) {
         return plainest;
     }
     let (oldest, newest) = (x[0], x[x.len() - 1]);
     let pick = |n_effective: f64| {
-        let candidates = eligible(fits, n_effective, oldest, newest);
+        let candidates = eligible(fits, n_effective, (oldest, newest), |_| SWITCH_ABOVE);
         let among: Vec<Fit> = candidates.iter().map(|&i| fits[i].clone()).collect();
         let choice = choose(&among, n_effective, None);
         (candidates[choice.chosen], choice)
@@ -188,7 +179,7 @@ impl Curve {
                 extrapolated: !(oldest..=newest).contains(&x),
             })
             .collect();
-        let exact = is_exact(fit, y);
+        let exact = fit.is_exact();
         let mut curve = Curve {
             fit: fit.clone(),
             aicc: aicc_classical(fit),

@@ -117,7 +117,7 @@ fn probability(p: f64) -> String {
 
 /// A number with [`DIGITS`] significant digits, no trailing zeros; with an exponent where it is very
 /// large or very small.
-fn short(value: f64) -> String {
+pub(super) fn short(value: f64) -> String {
     let scientific = format!("{value:.*e}", DIGITS - 1);
     let exponent = scientific.rsplit('e').next().and_then(|e| e.parse::<i32>().ok()).unwrap_or(0);
     if !(-5..=9).contains(&exponent) {

@@ -339,6 +339,13 @@ impl Daemon {
         }
         self.inbound.acknowledge(tokens);
         self.desk.committed(first, entries);
+        for (channel, taken) in self.desk.unfitted() {
+            if let Some(suppressed) = self.flood.admit(taken.code()) {
+                let channel = Shown(&channel, 80);
+                let why = taken.words();
+                tracing::warn!(reason = taken.code(), suppressed, "not fitted: {channel}: {why}");
+            }
+        }
     }
 
     /// The technician's lines of alert events that are safely in the store.

@@ -123,6 +123,14 @@ pub enum Refusal {
         /// The reference.
         reference: f64,
     },
+    /// No instrument is off by so much; one such reading would take the curve from the whole window.
+    #[error("a deviation of {deviation:e} is taken for a fault; at most {most:e} is accepted")]
+    DeviationTooLarge {
+        /// The deviation.
+        deviation: f64,
+        /// The largest accepted.
+        most: f64,
+    },
     /// The watch takes its reference from each reading, and this one has none.
     #[error("no reference; this watch needs one with each reading")]
     NoReference,
@@ -192,6 +200,7 @@ impl Refusal {
             Refusal::BadQuality { .. } => "bad-quality",
             Refusal::OutOfRange { .. } => "out-of-range",
             Refusal::DeviationNotFinite { .. } => "deviation-not-finite",
+            Refusal::DeviationTooLarge { .. } => "deviation-too-large",
             Refusal::NoReference => "no-reference",
             Refusal::BadTime { .. } => "bad-time",
             Refusal::FromTheFuture { .. } => "from-the-future",

@@ -5,7 +5,7 @@ use super::payload::{self, PayloadFormat};
 use super::pointer::Pointer;
 use super::refusal::{Excerpt, Refusal};
 use crate::service::settings::Settings;
-use crate::watch::time::{EventTime, ShellTime};
+use crate::watch::time::{DAY_US, EventTime, ShellTime, Span};
 
 /// What a value is compared with.
 #[derive(Clone, Debug, PartialEq)]
@@ -44,11 +44,26 @@ pub struct Decoded {
     pub deviation: f64,
 }
 
+/// The largest deviation that is taken, ± in the unit.
+const DEVIATION_MAX: f64 = 1e15;
+/// A reading may be later than the clock by so much: clocks differ.
+const AHEAD_MAX_US: i64 = DAY_US;
+
 impl Decoded {
     /// Returns the reading, unless it was retained by the broker and has no time of its own: then it
     /// may be of any age.
     pub fn unless_stale(self, retained: bool) -> Result<Decoded, Refusal> {
         if retained && !self.own_time { Err(Refusal::Retained) } else { Ok(self) }
+    }
+
+    /// Returns the reading, unless its time lies further ahead of `now` than clocks may differ.
+    pub fn unless_ahead_of(self, now: ShellTime) -> Result<Decoded, Refusal> {
+        let ahead = Span(self.time.0.saturating_sub(now.0));
+        if ahead.0 > AHEAD_MAX_US {
+            Err(Refusal::FromTheFuture { days: ahead.days() })
+        } else {
+            Ok(self)
+        }
     }
 }
 
@@ -104,12 +119,14 @@ pub(super) fn check_channel(channel: &str) -> Result<(), Refusal> {
 }
 
 pub(super) fn deviation(value: f64, reference: Option<f64>) -> Result<f64, Refusal> {
-    let Some(reference) = reference else { return Ok(value) };
-    let deviation = value - reference;
-    if deviation.is_finite() {
-        Ok(deviation)
-    } else {
+    let deviation = value - reference.unwrap_or(0.0);
+    if !deviation.is_finite() {
+        let reference = reference.unwrap_or(0.0);
         Err(Refusal::DeviationNotFinite { value, reference })
+    } else if deviation.abs() > DEVIATION_MAX {
+        Err(Refusal::DeviationTooLarge { deviation, most: DEVIATION_MAX })
+    } else {
+        Ok(deviation)
     }
 }
 
@@ -309,10 +326,15 @@ mod tests {
         }
 
         #[test]
-        fn every_finite_number_arrives_unchanged(x in any::<f64>().prop_filter("finite", |x| x.is_finite())) {
+        fn every_number_arrives_unchanged_or_is_refused_for_its_size(x in any::<f64>().prop_filter("finite", |x| x.is_finite())) {
             let payload = serde_json::to_vec(&x).unwrap();
-            let reading = decode(&router().routes[2], "lab/7", &payload, RECEIVED).unwrap();
-            prop_assert_eq!(reading.deviation.to_bits(), x.to_bits());
+            match decode(&router().routes[2], "lab/7", &payload, RECEIVED) {
+                Ok(reading) => prop_assert_eq!(reading.deviation.to_bits(), (x - 0.0).to_bits()),
+                Err(Refusal::DeviationTooLarge { deviation, most }) => {
+                    prop_assert!(deviation.abs() > most && most >= 1e15);
+                }
+                Err(other) => prop_assert!(false, "{other}"),
+            }
         }
 
         #[test]
