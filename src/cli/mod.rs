@@ -66,8 +66,8 @@ fn budget_words(settings: &Settings) -> String {
     let points = settings.site.watches.iter().map(|w| w.window_points).max().unwrap_or(0);
     [10, 100, 1000]
         .map(|channels| {
-            let false_alerts_per_year = settings.site.false_alerts_per_year;
-            Budget { false_alerts_per_year, channels }.words(points)
+            let false_alerts_per_year_site = settings.site.false_alerts_per_year;
+            Budget { false_alerts_per_year_site, channels }.share_words(points)
         })
         .join("\n")
 }

@@ -1,6 +1,7 @@
 //! `asfound replay`: a history through the same engine, in the readings' own time, without a broker.
 
 use crate::cli::check::{EXIT_DONE, EXIT_FAILED, EXIT_WRONG_USE};
+use crate::drift::structure::Kind as Structure;
 use crate::service::clock;
 use crate::service::envelope::{self, Surroundings};
 use crate::service::intake::csv::CsvReadings;
@@ -9,6 +10,7 @@ use crate::service::line::line;
 use crate::service::settings::time::read_time;
 use crate::service::settings::{Environment, Settings};
 use crate::service::shown::Shown;
+use crate::watch::budget::Judged;
 use crate::watch::channel::{Channel, KnownFrom};
 use crate::watch::engine::{Effect, Engine};
 use crate::watch::reading::{Reading, Taken};
@@ -271,29 +273,29 @@ fn began_too_late(channel: &Channel) -> bool {
         && channel.counts.of(Taken::BeforeAgeZero) > 1
 }
 
-/// One look at the residuals, as `--scores` writes it.
+/// One look at the residuals, as `--scores` writes it; null where this look did not go, and for the
+/// threshold of a step, which names but never raises.
 fn look_json(
     channel: &str,
     at: EventTime,
     index: u64,
     look: &crate::watch::incident::Look,
 ) -> serde_json::Value {
+    let told = |number: fn(&Judged) -> Option<f64>| -> serde_json::Value {
+        ["shift", "step", "bend", "dependence"]
+            .into_iter()
+            .zip(Structure::ALL)
+            .map(|(name, kind)| (name.to_owned(), json!(look.of(kind).and_then(number))))
+            .collect::<serde_json::Map<_, _>>()
+            .into()
+    };
     json!({"look": {
         "channel": channel,
         "at": at.to_string(),
         "index": index,
         "phi": look.phi,
-        "q": {
-            "shift": look.shift.0,
-            "step": look.found.step.score,
-            "bend": look.found.bend.score,
-            "dependence": look.found.dependence.score,
-        },
-        "threshold": {
-            "shift": look.shift.1,
-            "bend": look.bend_threshold,
-            "dependence": look.dependence_threshold,
-        },
+        "q": told(|kind| Some(kind.score.q)),
+        "threshold": told(|kind| kind.threshold),
     }})
 }
 

@@ -199,7 +199,7 @@ pub fn sandwich(fit: &Fit, x: &[f64], spacing: &[f64], phi: f64) -> Option<(Matr
 #[cfg(test)]
 mod tests {
     use super::*;
-    use crate::drift::structure::tests::noise;
+    use crate::drift::structure::simulate::noise;
 
     #[test]
     fn without_dependence_the_sandwich_is_the_ordinary_covariance() {

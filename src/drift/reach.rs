@@ -241,7 +241,7 @@ fn part_of(share: f64, n: usize) -> usize {
 #[cfg(test)]
 mod tests {
     use super::*;
-    use crate::drift::structure::tests::noise;
+    use crate::drift::structure::simulate::noise;
 
     const FAMILIES: [Family; 3] = [Family::Logarithmic, Family::Power, Family::Linear];
 

@@ -308,6 +308,21 @@ impl AlertBook {
         Some(episode.step(Transition::Revised, state, time))
     }
 
+    /// Another condition has taken the place of the one that was told: as [`AlertBook::revise`], but
+    /// nobody has seen this one yet.
+    pub fn tell_anew(&mut self, claim: Claim, time: EventTime) -> Option<AlertEvent> {
+        let concern = claim.kind.concern();
+        for episode in self.open.iter_mut().filter(|e| e.claim.kind.concern() == concern) {
+            if episode.state == State::Acknowledged {
+                episode.state = State::Unacknowledged;
+            }
+            if let Some((_, acknowledged)) = &mut episode.shelf {
+                *acknowledged = false;
+            }
+        }
+        self.revise(claim, time)
+    }
+
     /// The condition is gone, by the readings. None if there was none.
     pub fn lower(&mut self, concern: Concern, time: EventTime) -> Option<AlertEvent> {
         self.end(concern, time, Ending::ByReadings)
@@ -424,6 +439,7 @@ mod tests {
             let events: Vec<AlertEvent> = match *verb {
                 "raise" => book.raise(OWNER, claim(Kind::Step), time).into_iter().collect(),
                 "revise" => book.revise(claim(Kind::Bend), time).into_iter().collect(),
+                "anew" => book.tell_anew(claim(Kind::Bend), time).into_iter().collect(),
                 "lower" => book.lower(Concern::Residuals, time).into_iter().collect(),
                 "ack" => book.acknowledge(&id, time).into_iter().collect(),
                 "shelve" => book.shelve(&id, ShellTime(100), time).into_iter().collect(),
@@ -460,6 +476,24 @@ mod tests {
             check(&["raise", "raise", "revise"]),
             ["raised/Unacknowledged", "revised/Unacknowledged"]
         );
+    }
+
+    #[test]
+    fn what_is_told_anew_nobody_has_seen_yet() {
+        assert_eq!(
+            check(&["raise", "ack", "anew", "ack"]),
+            [
+                "raised/Unacknowledged",
+                "acknowledged/Acknowledged",
+                "revised/Unacknowledged",
+                "acknowledged/Acknowledged"
+            ]
+        );
+        assert_eq!(
+            check(&["raise", "ack", "shelve", "anew", "unshelve"])[3..],
+            ["revised/Shelved", "unshelved/Unacknowledged"]
+        );
+        assert_eq!(check(&["raise", "lower", "anew"]).len(), 2);
     }
 
     #[test]

@@ -10,16 +10,16 @@ use crate::drift::fit::{Fit, FitOutcome, fit};
 use crate::drift::forecast::{Forecaster, own_correlation, sandwich};
 use crate::drift::reach::{Limit, Reach, assess, cap};
 use crate::drift::serial::{count, effective_count, spacing_of};
-use crate::drift::structure::whitened::Whitened;
+use crate::drift::structure::Workspace;
 use crate::watch::alert::{AlertBook, AlertEvent, Owner};
 use crate::watch::budget::Budget;
 use crate::watch::finding::Finding;
 use crate::watch::incident::{Incident, Place, ResidualWatch, Turn};
-use crate::watch::limits::{POINTS_AFTER_BREAK, POINTS_TO_EXAMINE, POINTS_TO_FIT};
+use crate::watch::limits::{POINTS_AFTER_BREAK, POINTS_TO_FIT};
 use crate::watch::reading::{Counts, Reading, Taken};
 use crate::watch::said::{Said, asked_day};
 use crate::watch::settings::{Basis, WatchSettings};
-use crate::watch::time::{EventTime, ShellTime};
+use crate::watch::time::{EventTime, ShellTime, Span};
 use crate::watch::window::Window;
 use crate::watch::{judge, report};
 use serde::{Deserialize, Serialize};
@@ -148,12 +148,13 @@ impl Channel {
         }
     }
 
-    /// Takes one reading through to whatever follows from it.
+    /// Takes one reading through to whatever follows from it; `work` is memory to reuse.
     pub fn take(
         &mut self,
         context: &Context<'_>,
         reading: &Reading,
         now: ShellTime,
+        work: &mut Workspace,
     ) -> (Taken, Outcome) {
         let mut outcome = Outcome::default();
         let age_zero = self.age_zero(reading.time);
@@ -170,7 +171,7 @@ impl Channel {
         }
         while let Some(point) = self.window.next_point(context.rules) {
             self.points_ever += 1;
-            self.on_point(context, point.time, &mut outcome);
+            self.on_point(context, point.time, work, &mut outcome);
         }
         (taken, outcome)
     }
@@ -243,12 +244,24 @@ impl Channel {
         self.window.points().iter().map(|p| (p.time.days_since(age_zero), p.mean)).unzip()
     }
 
+    /// The time at which the instrument had an age of `x` days.
+    pub fn time_at_age(&self, x: f64) -> EventTime {
+        let age_zero = self.cycle.map_or(EventTime(0), |cycle| cycle.age_zero);
+        age_zero.plus(Span::from_days(x))
+    }
+
     /// Whose alerts these are.
     pub fn owner<'a>(&'a self, context: &Context<'a>) -> Owner<'a> {
         Owner { site: context.site, channel: &self.name }
     }
 
-    fn on_point(&mut self, context: &Context<'_>, newest: EventTime, outcome: &mut Outcome) {
+    fn on_point(
+        &mut self,
+        context: &Context<'_>,
+        newest: EventTime,
+        work: &mut Workspace,
+        outcome: &mut Outcome,
+    ) {
         if self.refit.is_some() && self.window.points().len() < POINTS_TO_FIT {
             // A pause longer than the window spans has emptied it: nothing of the old one is left.
             self.refit = None;
@@ -262,8 +275,11 @@ impl Channel {
         if due {
             self.refit(context, newest);
         }
-        let turn = self.look(context, newest, due, outcome);
+        let turn = self.look(context, newest, due, work, outcome);
         self.follow(context, turn, newest, outcome);
+        if due || matches!(turn, Turn::Settled { .. }) {
+            self.begin_anew_at_break(context, newest);
+        }
         if due {
             judge::after_refit(self, context, newest, outcome);
             outcome.findings.push(report::finding(self, context));
@@ -274,9 +290,9 @@ impl Channel {
     fn refit(&mut self, context: &Context<'_>, at: EventTime) {
         let (x, y) = self.series();
         let current = self.refit.as_ref().and_then(Refit::curve).map(|fit| fit.family);
+        let fresh = self.points_ever - self.points_at_refit;
         if self.refit.is_some() {
-            self.stride =
-                (0.5 * self.stride + 0.5 * points(self.points_ever, self.points_at_refit)).max(1.0);
+            self.stride = (0.5 * self.stride + 0.5 * points(fresh)).max(1.0);
         }
         self.points_at_refit = self.points_ever;
         let (mut fits, mut not_fitted) = (Vec::new(), Vec::new());
@@ -288,21 +304,28 @@ impl Channel {
                 }
             }
         }
-        let fits = with_those_that_turn(fits, &x, &y, self.residuals.phi(x.len()), current);
+        let fits = with_those_that_turn(fits, &x, &y, self.residuals.phi(), current);
         let (_, spacing) = spacing_of(&x);
         let mut choice = None;
         let mut standard_errors = [0.0; 4];
         if !fits.is_empty() {
-            let phi = self.residuals.phi(x.len());
+            let phi = self.residuals.phi();
             let best = choose(&fits, effective_count(x.len(), phi), current);
             let chosen = &fits[best.chosen];
             let own = own_correlation(chosen, &x, &y, &spacing);
-            let place = self.place_free(context);
-            self.residuals.refitted(&place, x.len(), own);
+            if chosen.is_exact() {
+                // Rounding errors have structure, and mean nothing.
+                self.residuals.without_curve();
+            } else {
+                let curve = (chosen.family, &chosen.theta);
+                self.residuals.refitted(&x, &y, curve, self.points_ever, points_between(fresh));
+            }
             if let Some((v, _)) = sandwich(chosen, &x, &spacing, phi.max(own).clamp(0.0, 0.97)) {
                 standard_errors = chosen.standard_errors_of(&v);
             }
             choice = Some(best);
+        } else {
+            self.residuals.without_curve();
         }
         let turning = choice.as_ref().map(|best| fits[best.chosen].family).filter(|f| f.may_turn());
         let exact = choice.as_ref().is_some_and(|best| fits[best.chosen].is_exact());
@@ -314,7 +337,7 @@ impl Channel {
         // A curve that turns says how large the deviation is now, and nothing of later.
         let of_now = turning.map(|family| [family]);
         let families = of_now.as_ref().map_or(&context.rules.families[..], |one| &one[..]);
-        let forecaster = Forecaster::new(&x, &y, families, self.residuals.phi(x.len()));
+        let forecaster = Forecaster::new(&x, &y, families, self.residuals.phi());
         let newest = x.last().copied().unwrap_or(0.0);
         let says = |reach: &Reach| {
             let forecaster = forecaster.as_ref().filter(|_| !exact);
@@ -353,7 +376,7 @@ impl Channel {
         }
         if let Some(refit) = &self.refit
             && refit.reach.days_past_newest > 0.0
-            && points(self.points_ever, self.points_at_reach) < count(x.len() / 10)
+            && points(self.points_ever - self.points_at_reach) < count(x.len() / 10)
         {
             return (refit.reach.clone(), true);
         }
@@ -362,22 +385,7 @@ impl Channel {
 
     fn assessed(&mut self, context: &Context<'_>, x: &[f64], y: &[f64]) -> Reach {
         self.points_at_reach = self.points_ever;
-        assess(x, y, &context.rules.families, self.residuals.phi(x.len()))
-    }
-
-    fn place_free(&self, context: &Context<'_>) -> Place<'static> {
-        Place {
-            newest: self.points_ever,
-            stride: self.stride,
-            points_per_year: self.points_per_year(),
-            budget: context.budget,
-            times: &[],
-        }
-    }
-
-    fn points_per_year(&self) -> f64 {
-        let (x, _) = self.series();
-        if x.len() < 2 { 1.0 } else { 365.25 / spacing_of(&x).0.max(1e-9) }
+        assess(x, y, &context.rules.families, self.residuals.phi())
     }
 
     fn look(
@@ -385,23 +393,28 @@ impl Channel {
         context: &Context<'_>,
         newest: EventTime,
         full: bool,
+        work: &mut Workspace,
         outcome: &mut Outcome,
     ) -> Turn {
-        let (x, y) = self.series();
-        let Some(curve) = self.refit.as_ref().and_then(Refit::curve) else { return Turn::Nothing };
-        // A curve through every reading leaves rounding errors: they have structure, and mean nothing.
-        if x.len() < POINTS_TO_EXAMINE || curve.is_exact() {
-            return Turn::Nothing;
-        }
-        let phi = self.residuals.phi(x.len());
-        let Some(window) = Whitened::new(&x, &y, curve, phi) else {
+        let place = Place {
+            newest: self.points_ever,
+            stride_points: self.stride_points(),
+            budget: context.budget,
+            window_points: context.rules.window_points,
+            window_span: context.rules.window_span,
+            age_zero: self.cycle.map_or(EventTime(0), |cycle| cycle.age_zero),
+            points: self.window.points(),
+        };
+        let Some((turn, look)) = self.residuals.look(&place, full, work) else {
             return Turn::Nothing;
         };
-        let times: Vec<EventTime> = self.window.points().iter().map(|p| p.time).collect();
-        let place = Place { times: &times, ..self.place_free(context) };
-        let turn = self.residuals.look(&window, &place, full);
-        outcome.looks.push((newest, self.points_ever, self.residuals.look));
+        outcome.looks.push((newest, self.points_ever, look));
         turn
+    }
+
+    #[expect(clippy::cast_possible_truncation, clippy::cast_sign_loss, reason = "a mean of counts")]
+    fn stride_points(&self) -> usize {
+        self.stride.round().max(1.0) as usize
     }
 
     /// Turns what the residual watch says into alerts, and begins the window anew after a break.
@@ -416,28 +429,26 @@ impl Channel {
             Turn::Nothing => return,
             Turn::Opened(incident) => judge::opened(self, context, &incident, newest, outcome),
             Turn::Revised(incident) => judge::revised(self, context, &incident, newest, outcome),
+            Turn::ToldAnew(incident) => judge::told_anew(self, context, &incident, newest, outcome),
             Turn::Settled { incident, revised } => {
                 if revised {
                     judge::revised(self, context, &incident, newest, outcome);
                 }
-                self.begin_anew_at(context, &incident, newest);
             }
             Turn::Closed => judge::closed(self, newest, outcome),
         }
         outcome.findings.push(report::finding(self, context));
     }
 
-    /// After a settled step or bend: the window begins at the break, if enough points follow it.
-    fn begin_anew_at(&mut self, context: &Context<'_>, incident: &Incident, newest: EventTime) {
-        if incident.kind == crate::watch::alert::Kind::Dependence {
-            return;
-        }
+    /// After a settled step or bend: the window begins at the break, once enough points follow it.
+    fn begin_anew_at_break(&mut self, context: &Context<'_>, newest: EventTime) {
+        let Some(at) = self.residuals.incident().and_then(Incident::settled_break) else { return };
         let points = self.window.points();
-        let after = points.iter().filter(|p| p.time >= incident.at).count();
+        let after = points.iter().filter(|p| p.time >= at).count();
         if after < POINTS_AFTER_BREAK.max(points.len() / 5) || after == points.len() {
             return;
         }
-        self.window.begin_at(incident.at);
+        self.window.begin_at(at);
         self.residuals.begin_anew();
         self.refit =
             self.refit.take().map(|refit| Refit { reach: Reach::none(Limit::NoCurve), ..refit });
@@ -475,6 +486,11 @@ fn with_those_that_turn(
 }
 
 #[expect(clippy::cast_precision_loss, reason = "point counts are far below 2^53")]
-fn points(now: u64, before: u64) -> f64 {
-    (now - before) as f64
+fn points(count: u64) -> f64 {
+    count as f64
+}
+
+/// Points between two refits; more than a window's are as many as one can ask about.
+fn points_between(fresh: u64) -> usize {
+    usize::try_from(fresh).unwrap_or(usize::MAX)
 }

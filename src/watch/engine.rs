@@ -3,6 +3,7 @@
 //! Readings and actions go in with their journal numbers, effects come out. The same readings in the
 //! same order give the same effects, whether live, replayed or continued after a restart.
 
+use crate::drift::structure::Workspace;
 use crate::watch::alert::{AlertEvent, Concern, Episode};
 use crate::watch::budget::Budget;
 use crate::watch::channel::{Channel, Context, Outcome};
@@ -47,7 +48,7 @@ pub enum Effect {
         /// The newest point's index.
         index: u64,
         /// Scores and thresholds.
-        look: Look,
+        look: Box<Look>,
     },
 }
 
@@ -104,6 +105,8 @@ pub struct Engine {
     due: Option<ShellTime>,
     effects: Vec<Effect>,
     refused: Counts,
+    /// Memory that the looks share; holds nothing between them.
+    work: Workspace,
 }
 
 impl Engine {
@@ -120,6 +123,7 @@ impl Engine {
             due: None,
             effects: Vec::new(),
             refused: Counts::default(),
+            work: Workspace::default(),
         }
     }
 
@@ -181,7 +185,7 @@ impl Engine {
             return Taken::OtherWatch;
         }
         let context = context(&self.settings, self.watches[place], &self.births, reading.serial);
-        let (taken, outcome) = self.channels[place].take(&context, reading, now);
+        let (taken, outcome) = self.channels[place].take(&context, reading, now, &mut self.work);
         self.tell(place, outcome);
         self.note_due(place);
         taken
@@ -328,6 +332,7 @@ impl Engine {
         let channel = &self.channels[place];
         let name = &channel.name;
         for (at, index, look) in outcome.looks {
+            let look = Box::new(look);
             self.effects.push(Effect::Looked { channel: name.clone(), at, index, look });
         }
         let finding = outcome.findings.into_iter().next_back();
@@ -361,7 +366,7 @@ fn context<'a>(
         site: &settings.site,
         rules: &settings.watches[watch],
         budget: Budget {
-            false_alerts_per_year: settings.false_alerts_per_year,
+            false_alerts_per_year_site: settings.false_alerts_per_year,
             channels: births.partition_point(|&born| born <= serial).max(1),
         },
     }
@@ -371,7 +376,7 @@ fn context<'a>(
 mod tests {
     use super::*;
     use crate::drift::reach::{Limit, Reach};
-    use crate::drift::structure::tests::noise;
+    use crate::drift::structure::simulate::noise;
     use crate::watch::alert::Ending;
     use crate::watch::channel::{Cycle, KnownFrom};
     use crate::watch::settings::tests::watch_settings;
@@ -408,7 +413,6 @@ mod tests {
     }
 
     fn curve(n: usize, seed: u64, added: impl Fn(usize) -> f64) -> Vec<f64> {
-        println!("seed {seed}");
         noise(seed, n, 0.3)
             .iter()
             .enumerate()
@@ -447,12 +451,95 @@ mod tests {
         assert!(lines.last().unwrap().starts_with("returned step"), "{lines:#?}");
     }
 
+    /// Time of the k-th reading.
+    fn reading_at(k: i64) -> EventTime {
+        EventTime(START + (k + 1) * STEP_US)
+    }
+
+    fn standing(engine: &Engine) -> Option<(Episode, EventTime)> {
+        let episode = engine.observe("press.PT-1")?.alerts.open().first()?.clone();
+        let at = episode.claim.evidence.at?;
+        Some((episode, at))
+    }
+
+    #[test]
+    fn a_second_knock_while_the_first_still_stands_is_told_anew() {
+        let mut engine = Engine::new(site(rules()), ShellTime(START));
+        let values = curve(1600, 21, |i| match i {
+            0..600 => 0.0,
+            600..780 => 0.12,
+            _ => 0.30,
+        });
+        feed(&mut engine, 0, &values[..770]);
+        let (first, at) = standing(&engine).unwrap();
+        assert!((at.0 - reading_at(600).0).abs() <= 2 * STEP_US, "{at}");
+        let seen = Action::Acknowledge { alert: first.alert.clone() };
+        assert!(engine.act("press.PT-1", &seen, 771, ShellTime(START)));
+        engine.effects();
+        let lines = feed(&mut engine, 770, &values[770..900]);
+        assert!(lines[0].starts_with("revised step d19"), "{lines:#?}");
+        let (second, at) = standing(&engine).unwrap();
+        assert!((at.0 - reading_at(780).0).abs() <= 2 * STEP_US, "{at}");
+        assert_eq!(second.alert, first.alert);
+        assert_eq!(second.state, crate::watch::alert::State::Unacknowledged);
+        let lines = feed(&mut engine, 900, &values[900..]);
+        assert!(lines.last().unwrap().starts_with("returned step"), "{lines:#?}");
+    }
+
+    #[test]
+    fn dependence_stands_as_long_as_it_is_seen() {
+        let slow = noise(22, 600, 0.95);
+        let mut values = curve(2000, 23, |_| 0.0);
+        for (i, e) in slow.iter().enumerate() {
+            let k = 600 + i;
+            values[k] = 0.5 * ((k as f64 + 1.0) / 4.0).ln() + 0.02 * e;
+        }
+        let mut engine = Engine::new(site(rules()), ShellTime(START));
+        let lines = feed(&mut engine, 0, &values[..1200]);
+        assert!(lines.iter().all(|l| !l.starts_with("returned")), "{lines:#?}");
+        assert_eq!(standing(&engine).unwrap().0.claim.kind.name(), "dependence", "{lines:#?}");
+        let lines = feed(&mut engine, 1200, &values[1200..]);
+        assert!(lines.last().unwrap().starts_with("returned"), "{lines:#?}");
+    }
+
+    #[test]
+    fn a_short_window_begins_anew_once_enough_points_follow_the_break() {
+        let rules = WatchSettings { window_points: 100, ..rules() };
+        let mut engine = Engine::new(site(rules), ShellTime(START));
+        let values = curve(480, 24, |i| if i >= 400 { 0.3 } else { 0.0 });
+        // Settled a quarter of the window after it opened, when 40 points do not follow yet.
+        feed(&mut engine, 0, &values[..435]);
+        assert_eq!(engine.observe("press.PT-1").unwrap().window.points().len(), 100);
+        feed(&mut engine, 435, &values[435..]);
+        let points = engine.observe("press.PT-1").unwrap().window.points();
+        let begins = points.front().unwrap().time;
+        assert!((begins.0 - reading_at(400).0).abs() <= 2 * STEP_US, "{begins}");
+    }
+
+    #[test]
+    fn what_is_usual_survives_a_calibration_mark() {
+        let mut engine = Engine::new(site(rules()), ShellTime(START));
+        let values = curve(1100, 25, |i| if i >= 600 { 0.12 } else { 0.0 });
+        feed(&mut engine, 0, &values[..700]);
+        let phi = |engine: &Engine| engine.observe("press.PT-1").unwrap().residuals.phi();
+        let (frozen, mark) = (phi(&engine), reading_at(699));
+        assert!(standing(&engine).is_some());
+        let action = Action::Calibrated { at: mark, as_found: None, as_left: None, note: None };
+        assert!(engine.act("press.PT-1", &action, 701, ShellTime(mark.0)));
+        let channel = engine.observe("press.PT-1").unwrap();
+        assert!(channel.residuals.incident().is_none());
+        assert_eq!(phi(&engine).to_bits(), frozen.to_bits());
+        feed(&mut engine, 700, &values[700..]);
+        // It is learned from again.
+        assert_ne!(phi(&engine).to_bits(), frozen.to_bits());
+    }
+
     #[test]
     fn snapshot_restored_and_continued_equals_never_stopped() {
         let values = curve(1200, 13, |i| if i >= 600 { 0.12 } else { 0.0 });
         let mut whole = Engine::new(site(rules()), ShellTime(START));
         let expected = feed(&mut whole, 0, &values);
-        for cut in [599, 603, 640, 1100] {
+        for cut in [599, 603, 640, 700, 1100] {
             let mut first = Engine::new(site(rules()), ShellTime(START));
             let mut lines = feed(&mut first, 0, &values[..cut]);
             let bytes = postcard::to_stdvec(first.observe("press.PT-1").unwrap()).unwrap();
@@ -462,6 +549,39 @@ mod tests {
             assert_eq!(lines, expected, "cut at {cut}");
             assert_eq!(second.observe("press.PT-1"), whole.observe("press.PT-1"));
         }
+    }
+
+    #[test]
+    fn honest_channels_keep_the_budget_through_the_whole_engine() {
+        // 24 a year for each of two channel-years; every further alert is one too many.
+        let hour = Span(DAY_US / 24);
+        let mut raised = 0;
+        for (points, seed) in [(60_i64, 0xC1_u64), (200, 0xC2)] {
+            let watch = WatchSettings {
+                window_points: points as usize,
+                refit_every: Span(hour.0 * points / 10),
+                calibrated: Some(EventTime(START - 20 * hour.0)),
+                ..watch_settings()
+            };
+            let site = SiteSettings { false_alerts_per_year: 24.0, ..site(watch) };
+            let mut engine = Engine::new(site, ShellTime(START));
+            for (k, e) in noise(seed, 8760, 0.3).into_iter().enumerate() {
+                let time = START + (k as i64 + 1) * hour.0;
+                let deviation = 4.0 * ((k as f64 + 21.0) / 24.0).ln() + e;
+                let reading = Reading { serial: k as u64 + 1, time: EventTime(time), deviation };
+                engine.take("press.PT-1", 0, &reading, ShellTime(time));
+                raised += engine
+                    .effects()
+                    .iter()
+                    .filter(|effect| {
+                        matches!(effect, Effect::Alert { event, .. }
+                            if event.transition.name() == "raised")
+                    })
+                    .count();
+            }
+        }
+        println!("{raised} of 48");
+        assert!(raised <= 48, "{raised} alerts");
     }
 
     #[test]

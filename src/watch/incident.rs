@@ -2,37 +2,52 @@
 //!
 //! An incident opens when any score crosses its threshold, may be renamed while evidence gathers (a
 //! quarter of the window), is settled then (after a step or bend the window begins anew there), and
-//! closes when every score has stayed clearly below for half a window.
+//! closes when half a window brought no more evidence of it.
+//!
+//! It lives on evidence of what it tells. Once its break has left the window, a score clearly above its
+//! threshold is another structure, and the incident is told anew with that one's name, size and
+//! date; after a cut at the break, a clear jump is so at once. Dependence is seen in its own score.
 
-use crate::drift::structure::baseline::Baseline;
-use crate::drift::structure::shift::ShiftDetector;
-use crate::drift::structure::whitened::Whitened;
-use crate::drift::structure::{Examination, Found, examine};
+use crate::drift::family::{Coefficients, Family};
+use crate::drift::structure::{
+    Baseline, Depth, Examination, Frame, Framed, Kind as Structure, Score, ShiftDetector,
+    Workspace, examine,
+};
 use crate::watch::alert::Kind;
-use crate::watch::budget::{Budget, Pace, Score, search_of_name};
-use crate::watch::time::EventTime;
+use crate::watch::budget::{
+    Budget, Judged, Judgement, Pace, RENAME_AHEAD, RENAME_WITHIN, TELL_ANEW_ABOVE,
+    close_after_points, evidence, rename_within_points,
+};
+use crate::watch::limits::POINTS_TO_EXAMINE;
+use crate::watch::time::{EventTime, Span};
+use crate::watch::whitening::Whitening;
+use crate::watch::window::Point;
 use serde::{Deserialize, Serialize};
+use std::collections::VecDeque;
 
-/// A refit whose residuals score above this teaches the norm nothing.
-const NOT_EXEMPLARY_ABOVE: f64 = 5.0;
-/// The fast detector above this asks for a full look before the next refit.
-const LOOK_EARLY_ABOVE: f64 = 4.0;
-/// Within so much of its threshold a score still counts as live when an incident is settled.
-const LIVE_WITHIN: f64 = 0.5;
+/// Median days in a year.
+const DAYS_IN_YEAR: f64 = 365.25;
 
-/// The scores and thresholds of the newest look.
+/// The newest score of each kind, and its threshold.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Serialize, Deserialize)]
 pub struct Look {
-    /// The fast detector's score and its threshold.
-    pub shift: (f64, f64),
-    /// The newest full examination.
-    pub found: Examination,
-    /// Thresholds for bend and dependence.
-    pub bend_threshold: f64,
-    /// See above.
-    pub dependence_threshold: f64,
     /// The correlation that was taken for usual.
     pub phi: f64,
+    /// In the order of [`Structure::ALL`]; `None` for a kind not looked at yet.
+    kinds: [Option<Judged>; Structure::ALL.len()],
+}
+
+impl Look {
+    /// The newest score of a kind against its threshold.
+    pub fn of(&self, kind: Structure) -> Option<&Judged> {
+        self.kinds[kind as usize].as_ref()
+    }
+
+    fn note(&mut self, judged: &[Judged]) {
+        for kind in judged {
+            self.kinds[kind.score.kind as usize] = Some(*kind);
+        }
+    }
 }
 
 /// What stands.
@@ -40,11 +55,11 @@ pub struct Look {
 pub struct Incident {
     /// What it is, as far as is known.
     pub kind: Kind,
-    /// Index of the point at which it opened.
+    /// Index of the point at which it opened, or was told anew.
     opened: u64,
     /// Points in the window then.
     points: usize,
-    /// Index of the newest point at which a score was near its threshold.
+    /// Index of the newest point that brought evidence of it.
     last_near: u64,
     /// Whether its name is final.
     settled: bool,
@@ -56,6 +71,41 @@ pub struct Incident {
     pub score: f64,
 }
 
+impl Incident {
+    /// When the break was that is now known for good; `None` for what is no break, or not settled.
+    pub fn settled_break(&self) -> Option<EventTime> {
+        (self.settled && self.kind != Kind::Dependence).then_some(self.at)
+    }
+}
+
+/// Whether the window can still show what an incident tells.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+enum Sight {
+    /// It can, or it must: not settled yet, or dependence.
+    Shown,
+    /// The window began anew at the break. A bend in it may well be a curve that does not fit yet, as
+    /// long as the window has not filled again; a jump is a jump.
+    CutOff,
+    /// Even a full window would no longer reach back to the break.
+    Gone,
+}
+
+impl Sight {
+    fn of(incident: &Incident, place: &Place<'_>) -> Sight {
+        let Some(at) = incident.settled_break() else { return Sight::Shown };
+        let (Some(oldest), Some(newest)) = (place.points.front(), place.points.back()) else {
+            return Sight::Shown;
+        };
+        let filled = place.newest - incident.opened >= index_of(place.window_points)
+            || at.plus(place.window_span) <= newest.time;
+        match (at <= oldest.time, filled) {
+            (false, _) => Sight::Shown,
+            (true, false) => Sight::CutOff,
+            (true, true) => Sight::Gone,
+        }
+    }
+}
+
 /// What the newest point or refit did to the incident.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub enum Turn {
@@ -65,6 +115,8 @@ pub enum Turn {
     Opened(Incident),
     /// It is known better.
     Revised(Incident),
+    /// Another structure has taken its place.
+    ToldAnew(Incident),
     /// Its name is final; after a step or bend the window should begin anew there.
     Settled {
         /// The incident.
@@ -79,14 +131,18 @@ pub enum Turn {
 /// The watch over one channel's residuals.
 #[derive(Clone, Debug, Default, PartialEq, Serialize, Deserialize)]
 pub struct ResidualWatch {
-    /// What is usual here.
-    pub baseline: Baseline,
+    baseline: Baseline,
     shift: ShiftDetector,
+    /// Of the newest refit; none without a curve, or where nothing can be judged.
+    frame: Option<Frame>,
+    #[serde(skip)]
+    whitening: Whitening,
     /// The newest look.
     pub look: Look,
     incident: Option<Incident>,
-    /// Own estimate of the newest refit, to fill in while the norm is young.
-    own_phi: f64,
+    /// Points that the newest refit brought.
+    fresh_points: usize,
+    /// Index of the newest point at which the slow part looked.
     last_full: u64,
 }
 
@@ -95,14 +151,18 @@ pub struct ResidualWatch {
 pub struct Place<'a> {
     /// Index of the newest point, counted from the channel's first.
     pub newest: u64,
-    /// Points from refit to refit.
-    pub stride: f64,
-    /// Points in a year.
-    pub points_per_year: f64,
+    /// Points from refit to refit, ≥ 1.
+    pub stride_points: usize,
     /// The site's budget.
     pub budget: Budget,
-    /// Times of the window's points.
-    pub times: &'a [EventTime],
+    /// The most points the window may hold.
+    pub window_points: usize,
+    /// The longest it may reach back.
+    pub window_span: Span,
+    /// Age zero.
+    pub age_zero: EventTime,
+    /// The window's points.
+    pub points: &'a VecDeque<Point>,
 }
 
 impl ResidualWatch {
@@ -112,139 +172,150 @@ impl ResidualWatch {
     }
 
     /// The correlation of neighbours that is usual here.
-    pub fn phi(&self, points: usize) -> f64 {
-        self.baseline.phi(points, self.own_phi)
+    pub fn phi(&self) -> f64 {
+        self.baseline.phi()
     }
 
-    /// Notes a refit's own correlation, before the look that follows it.
-    pub fn refitted(&mut self, place: &Place<'_>, points: usize, own_phi: f64) {
-        self.own_phi = own_phi;
-        if self.incident.is_none() {
-            self.baseline.absorb(place.newest, points);
-        }
-    }
-
-    /// Looks at the window after a new point; `full` after a refit.
-    pub fn look(&mut self, window: &Whitened, place: &Place<'_>, full: bool) -> Turn {
-        let points = window.points();
-        let pace = Pace {
-            points,
-            stride: place.stride,
-            points_per_year: place.points_per_year,
-            phi: window.phi,
+    /// Takes a refit's curve over, before the look that follows it.
+    ///
+    /// # Arguments
+    /// `x`, `y` — the window's ages (days) and deviations; `curve` — family and coefficients;
+    /// `newest` — index of the newest point; `fresh_points` — points since the refit before.
+    pub fn refitted(
+        &mut self,
+        x: &[f64],
+        y: &[f64],
+        curve: (Family, &Coefficients),
+        newest: u64,
+        fresh_points: usize,
+    ) {
+        let (family, theta) = curve;
+        self.fresh_points = fresh_points;
+        self.whitening.forget();
+        self.frame = match Frame::at_refit(x, y, family, theta, &mut self.baseline, newest) {
+            Framed::Ready(frame) => Some(frame),
+            _ => None,
         };
-        let threshold = |score| place.budget.threshold(score, &pace);
-        self.look.phi = window.phi;
-        self.look.shift = (self.shift.update(window), threshold(Score::Shift));
-        self.look.bend_threshold = threshold(Score::Bend);
-        self.look.dependence_threshold = threshold(Score::Dependence);
-        let early = self.look.shift.0 > LOOK_EARLY_ABOVE
-            && count_of(place.newest - self.last_full) >= (place.stride / 4.0).max(1.0);
-        let looked = full || early || self.look.shift.0 >= self.look.shift.1;
-        if looked {
-            self.last_full = place.newest;
-            self.look.found = examine(window, self.baseline.familiar(points));
-        }
-        if full && self.incident.is_none() {
-            let exemplary = self.look.found.largest_in_mean() <= NOT_EXEMPLARY_ABOVE;
-            self.baseline.learn(place.newest, place.stride, self.own_phi, exemplary);
-        }
-        let scores = self.scores(looked);
-        let near = scores.iter().any(|&(score, q, _)| q >= place.budget.keeps_open(score, &pace));
-        let excess = scores.iter().map(|&(_, q, t)| q - t).fold(f64::NEG_INFINITY, f64::max);
-        self.decide(place, points, looked, excess, near)
     }
 
-    /// Each score of this look with its threshold.
-    fn scores(&self, looked: bool) -> Vec<(Score, f64, f64)> {
-        let look = &self.look;
-        let mut scores = vec![(Score::Shift, look.shift.0, look.shift.1)];
-        if looked {
-            let found = &look.found;
-            scores.push((Score::Bend, found.bend.score, look.bend_threshold));
-            scores.push((Score::Dependence, found.dependence.score, look.dependence_threshold));
-        }
-        scores
+    /// A refit found no curve: there are no residuals to look at.
+    pub fn without_curve(&mut self) {
+        self.frame = None;
+        self.whitening.forget();
     }
 
-    fn decide(
+    /// Looks at the window after a new point; `full` after a refit. `None`: nothing to look at.
+    pub fn look(
         &mut self,
         place: &Place<'_>,
-        points: usize,
-        looked: bool,
-        excess: f64,
-        near: bool,
-    ) -> Turn {
-        let (kind, found) = self.best_name(points);
-        let at = place.times.get(found.index).copied().unwrap_or(EventTime(0));
+        full: bool,
+        work: &mut Workspace,
+    ) -> Option<(Turn, Look)> {
+        let points = place.points.len();
+        if points < POINTS_TO_EXAMINE {
+            return None;
+        }
+        let frame = self.frame.as_ref()?;
+        let aged = place.points.iter().map(|p| (p.time.days_since(place.age_zero), p.mean));
+        let window = self.whitening.of(frame, aged)?;
+        let pace = Pace {
+            window_points: points,
+            stride_points: place.stride_points,
+            points_per_year: DAYS_IN_YEAR / frame.spacing_days,
+        };
+        let rested = place.newest - self.last_full >= index_of((place.stride_points / 4).max(1));
+        let depth = match (full, rested) {
+            (true, _) => Depth::Full,
+            (false, true) => Depth::QuickUnlessWarned,
+            (false, false) => Depth::Quick,
+        };
+        let mut found = examine(window, &mut self.shift, 1, depth, work);
+        let mut judgement = place.budget.judge(&found, &pace);
+        if judgement.crossed.is_some() && !found.is_full() && self.incident.is_none() {
+            // The crossing stands; this look only names it, and costs the budget nothing.
+            found = examine(window, &mut self.shift, 0, Depth::Full, work);
+            judgement = place.budget.judge(&found, &pace);
+        }
+        if full {
+            let (fresh, phi) = (self.fresh_points, frame.phi_window);
+            self.baseline.learn(place.newest, points, fresh, phi, found.suspicious);
+        }
+        if found.is_full() {
+            self.last_full = place.newest;
+        }
+        let mut seen = Look { phi: found.phi, ..Look::default() };
+        seen.note(&judgement.kinds);
+        self.look.phi = found.phi;
+        self.look.note(&judgement.kinds);
+        Some((self.decide(place, &found, &judgement), seen))
+    }
+
+    fn decide(&mut self, place: &Place<'_>, found: &Examination, judgement: &Judgement) -> Turn {
+        let crossed = judgement.crossed.is_some();
         let Some(mut incident) = self.incident else {
-            if excess < 0.0 {
+            if !crossed {
                 return Turn::Nothing;
             }
-            self.shift.reset();
-            let incident = Incident {
-                kind,
-                opened: place.newest,
-                points,
-                last_near: place.newest,
-                settled: false,
-                size: found.size,
-                at,
-                score: found.score,
-            };
-            self.incident = Some(incident);
-            return Turn::Opened(incident);
+            self.baseline.freeze();
+            return Turn::Opened(self.begin(place, found, judgement));
+        };
+        let sight = Sight::of(&incident, place);
+        let near = match sight {
+            Sight::Gone => crossed,
+            Sight::Shown | Sight::CutOff => brings_evidence(&incident, judgement),
         };
         if near {
             incident.last_near = place.newest;
         }
-        let since = place.newest - incident.opened;
-        let quarter = index_of(incident.points / 4);
-        let mut turn = Turn::Nothing;
-        if !incident.settled && looked {
-            let settles = since >= quarter;
-            let renamed = kind != incident.kind;
-            if excess >= -LIVE_WITHIN && (renamed || settles) {
-                let resized = !close(incident.size, found.size);
-                let known_better = renamed || resized || incident.at != at;
-                (incident.kind, incident.size) = (kind, found.size);
-                (incident.at, incident.score) = (at, found.score);
-                if known_better {
-                    turn = Turn::Revised(incident);
-                }
-            }
-            if settles {
-                incident.settled = true;
-                turn = Turn::Settled { incident, revised: matches!(turn, Turn::Revised(_)) };
-            }
-        }
         self.incident = Some(incident);
-        if incident.settled && place.newest - incident.last_near >= index_of(incident.points / 2) {
+        let wait = index_of(close_after_points(incident.points));
+        let quiet = place.newest - incident.last_near >= wait;
+        let clearly = judgement.margin >= TELL_ANEW_ABOVE;
+        let another = match sight {
+            Sight::Shown => crossed && quiet,
+            Sight::CutOff => clearly && is_clearly_a_step(found),
+            Sight::Gone => clearly,
+        };
+        if another && incident.settled && found.is_full() {
+            return Turn::ToldAnew(self.begin(place, found, judgement));
+        }
+        if quiet && incident.settled && found.is_full() {
             self.incident = None;
             self.shift.reset();
+            self.baseline.thaw();
             return Turn::Closed;
         }
+        if incident.settled || !found.is_full() {
+            return Turn::Nothing;
+        }
+        let (turn, known) = known_better(incident, place, found, judgement);
+        self.incident = Some(known);
         turn
     }
 
-    /// The kind with the most evidence beyond what the search within one look is worth.
-    fn best_name(&self, points: usize) -> (Kind, Found) {
-        let found = &self.look.found;
-        let [step, bend, dependence] = search_of_name(points);
-        let mut best = (Kind::Step, found.step, found.step.score - step);
-        for (kind, candidate, worth) in
-            [(Kind::Bend, found.bend, bend), (Kind::Dependence, found.dependence, dependence)]
-        {
-            if candidate.score - worth > best.2 {
-                best = (kind, candidate, candidate.score - worth);
-            }
-        }
-        (best.0, best.1)
+    /// The incident begins, named after the newest look.
+    fn begin(&mut self, place: &Place<'_>, found: &Examination, judgement: &Judgement) -> Incident {
+        let score = best_of(found, judgement);
+        // What it has shown has been told; evidence of a further change starts from nothing.
+        self.shift.reset();
+        let incident = Incident {
+            kind: alert_kind(score.kind),
+            opened: place.newest,
+            points: place.points.len(),
+            last_near: place.newest,
+            settled: false,
+            size: score.size,
+            at: time_of(&score, place),
+            score: score.q,
+        };
+        self.incident = Some(incident);
+        incident
     }
 
     /// A new calibration cycle: only what is usual here is remembered.
     pub fn begin_cycle(&mut self) {
-        let baseline = std::mem::take(&mut self.baseline);
+        let mut baseline = std::mem::take(&mut self.baseline);
+        baseline.thaw();
         *self = ResidualWatch { baseline, ..ResidualWatch::default() };
     }
 
@@ -252,17 +323,81 @@ impl ResidualWatch {
     pub fn begin_anew(&mut self) {
         self.shift.reset();
         self.look = Look::default();
+        self.whitening.forget();
+    }
+}
+
+/// Names an unsettled incident again by a full look, and settles it when its time has come.
+fn known_better(
+    before: Incident,
+    place: &Place<'_>,
+    found: &Examination,
+    judgement: &Judgement,
+) -> (Turn, Incident) {
+    let mut incident = before;
+    let settles = place.newest - incident.opened >= index_of(rename_within_points(incident.points));
+    let score = best_of(found, judgement);
+    let (kind, at) = (alert_kind(score.kind), time_of(&score, place));
+    let renamed =
+        kind != incident.kind && (settles || is_clearly_ahead(score.kind, &incident, found));
+    let mut revised = false;
+    if judgement.margin >= -RENAME_WITHIN && (renamed || settles) {
+        revised = renamed || at != incident.at || !close(incident.size, score.size);
+        incident = Incident { kind, at, size: score.size, score: score.q, ..incident };
+    }
+    incident.settled = settles;
+    let turn = match (settles, revised) {
+        (true, revised) => Turn::Settled { incident, revised },
+        (false, true) => Turn::Revised(incident),
+        (false, false) => Turn::Nothing,
+    };
+    (turn, incident)
+}
+
+/// Whether a look speaks more clearly for a kind than for the name that stands.
+fn is_clearly_ahead(kind: Structure, incident: &Incident, found: &Examination) -> bool {
+    let standing = Structure::ALL.into_iter().filter(|&k| alert_kind(k) == incident.kind);
+    let for_name = standing.filter_map(|k| evidence(found, k)).fold(f64::NEG_INFINITY, f64::max);
+    evidence(found, kind).is_some_and(|score| score - for_name >= RENAME_AHEAD)
+}
+
+/// Whether a look speaks clearly for a step, against every other name.
+fn is_clearly_a_step(found: &Examination) -> bool {
+    let Some(step) = evidence(found, Structure::Step) else { return false };
+    let others = [Structure::Bend, Structure::Dependence];
+    others.into_iter().filter_map(|k| evidence(found, k)).all(|other| step - other >= RENAME_AHEAD)
+}
+
+/// Whether a look shows what the incident tells: a break shows in every score, dependence (which
+/// makes the other scores restless too) in its own.
+fn brings_evidence(incident: &Incident, judgement: &Judgement) -> bool {
+    if incident.settled && incident.kind == Kind::Dependence {
+        let own = judgement.kinds.iter().find(|k| k.score.kind == Structure::Dependence);
+        return own.is_some_and(Judged::holds_open);
+    }
+    judgement.holds_open()
+}
+
+fn best_of(found: &Examination, judgement: &Judgement) -> Score {
+    *found.score(judgement.name).unwrap_or(&found.step)
+}
+
+fn time_of(score: &Score, place: &Place<'_>) -> EventTime {
+    place.points.get(score.index).map_or(place.age_zero, |point| point.time)
+}
+
+/// Under which alert a kind of structure is told.
+pub fn alert_kind(kind: Structure) -> Kind {
+    match kind {
+        Structure::Shift | Structure::Step => Kind::Step,
+        Structure::Bend => Kind::Bend,
+        Structure::Dependence => Kind::Dependence,
     }
 }
 
 /// Within a tenth of each other.
 fn close(a: f64, b: f64) -> bool {
     (a - b).abs() <= 0.1 * a.abs().max(b.abs())
-}
-
-#[expect(clippy::cast_precision_loss, reason = "point counts are far below 2^53")]
-fn count_of(points: u64) -> f64 {
-    points as f64
 }
 
 fn index_of(points: usize) -> u64 {

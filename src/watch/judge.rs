@@ -99,6 +99,18 @@ pub fn revised(
     push(outcome, channel.alerts.revise(claim, time));
 }
 
+/// Another structure has taken the place of the one that was told.
+pub fn told_anew(
+    channel: &mut Channel,
+    context: &Context<'_>,
+    incident: &Incident,
+    time: EventTime,
+    outcome: &mut Outcome,
+) {
+    let claim = claim_of(channel, context, incident);
+    push(outcome, channel.alerts.tell_anew(claim, time));
+}
+
 /// The residuals show none any more.
 pub fn closed(channel: &mut Channel, time: EventTime, outcome: &mut Outcome) {
     push(outcome, channel.alerts.lower(Concern::Residuals, time));

@@ -17,5 +17,6 @@ pub mod report;
 pub mod said;
 pub mod settings;
 pub mod time;
+pub mod whitening;
 pub mod window;
 pub mod wording;

@@ -2,13 +2,15 @@
 
 use crate::drift::fit::Fit;
 use crate::drift::forecast::NORMAL_95;
-use crate::watch::alert::{Concern, Kind};
-use crate::watch::budget::NEAR;
+use crate::drift::structure::{Kind as Structure, Score};
+use crate::watch::alert::Concern;
+use crate::watch::budget::{CLOSE_BELOW, Judged};
 use crate::watch::channel::{Channel, Context, KnownFrom, Refit};
 use crate::watch::finding::{
     CurveFound, CycleFound, Decision, Finding, ForecastFound, NowFound, OtherFound, ReachFound,
     StructureFound, ToleranceFound, Verdict, WindowFound,
 };
+use crate::watch::incident::alert_kind;
 use crate::watch::judge::probability;
 use crate::watch::limits::{POINTS_TO_EXAMINE, POINTS_TO_FIT};
 use crate::watch::reading::Taken;
@@ -120,47 +122,49 @@ fn no_curve_words(channel: &Channel) -> Option<String> {
 }
 
 fn structure_found(channel: &Channel) -> Vec<StructureFound> {
-    let look = &channel.residuals.look;
-    if channel.window.points().len() < POINTS_TO_EXAMINE || look.bend_threshold <= 0.0 {
+    if channel.window.points().len() < POINTS_TO_EXAMINE {
         return Vec::new();
     }
-    let standing = channel.residuals.incident();
-    let date = |index: usize| channel.window.points().get(index).map(|p| p.time);
-    let entry = |kind: Kind, found: crate::drift::structure::Found, newest: f64, threshold: f64| {
-        let incident = standing.filter(|incident| incident.kind == kind);
-        let verdict = if incident.is_some() || (newest >= threshold && standing.is_none()) {
-            Verdict::Present
-        } else if newest >= threshold - NEAR {
-            Verdict::Watching
-        } else {
-            Verdict::Absent
-        };
-        let shown = verdict != Verdict::Absent;
-        // What stands is told by the evidence it is named after, not by the newest look.
-        let (score, size, at) = incident
-            .map_or((found.score, found.size, date(found.index)), |i| {
-                (i.score, i.size, Some(i.at))
-            });
-        StructureFound {
-            kind,
-            verdict,
-            statistic: Some(score),
-            p: Some(probability(score)),
-            size: shown.then_some(size),
-            at: if shown { at } else { None },
-        }
-    };
-    let found = &look.found;
-    vec![
-        entry(Kind::Step, found.step, look.shift.0, look.shift.1),
-        entry(Kind::Bend, found.bend, found.bend.score, look.bend_threshold),
-        entry(
-            Kind::Dependence,
-            found.dependence,
-            found.dependence.score,
-            look.dependence_threshold,
-        ),
+    let look = &channel.residuals.look;
+    // A shift says that there is a jump, the step of the same look which.
+    [
+        (Structure::Step, Structure::Shift),
+        (Structure::Bend, Structure::Bend),
+        (Structure::Dependence, Structure::Dependence),
     ]
+    .into_iter()
+    .filter_map(|(told, raised_by)| {
+        Some(structure_entry(channel, &look.of(told)?.score, look.of(raised_by)?))
+    })
+    .collect()
+}
+
+fn structure_entry(channel: &Channel, found: &Score, raised_by: &Judged) -> StructureFound {
+    let standing = channel.residuals.incident();
+    let kind = alert_kind(found.kind);
+    let incident = standing.filter(|incident| incident.kind == kind);
+    let margin = raised_by.margin().unwrap_or(f64::NEG_INFINITY);
+    let verdict = if incident.is_some() || (margin >= 0.0 && standing.is_none()) {
+        Verdict::Present
+    } else if margin >= -CLOSE_BELOW {
+        Verdict::Watching
+    } else {
+        Verdict::Absent
+    };
+    let shown = verdict != Verdict::Absent;
+    // What stands is told by the evidence it is named after, not by the newest look.
+    let (score, size, at) = incident.map_or_else(
+        || (found.q, found.size, channel.time_at_age(found.x)),
+        |i| (i.score, i.size, i.at),
+    );
+    StructureFound {
+        kind,
+        verdict,
+        statistic: Some(score),
+        p: Some(probability(score)),
+        size: shown.then_some(size),
+        at: shown.then_some(at),
+    }
 }
 
 /// Why nothing can be said ahead for now, when the reason is that the window is still filling.

@@ -1,111 +1,174 @@
-//! Confirmation: does the candidate still stand out when neighbours are more alike than usual?
-//!
-//! A channel whose dependence has grown looks, to a scan, as if its level had changed. So a score
-//! above [`CONFIRM_ABOVE`] is computed again with the correlation that is left when the candidate is
-//! part of the model, and the smaller score counts.
+//! Confirmation of a candidate: a change of the mean and strong dependence look alike from close by,
+//! so a candidate must stand even when the dependence is re-estimated with the candidate removed.
 
-use crate::drift::fit::robust_scale;
-use crate::drift::serial::{count, lag_correlation};
-use crate::drift::structure::whitened::{CLIP, Whitened};
-use crate::drift::tails::student_q;
-use nalgebra::{Matrix5, Vector5};
+use super::small::{Matrix, ORDER_MAX, solve};
+use super::whitened::{CLIP, Whitened};
+use crate::drift::serial;
+use crate::drift::tails::student_score_two_sided;
 
-/// Scores above this are confirmed.
-pub const CONFIRM_ABOVE: f64 = 3.0;
-/// Residuals are clipped at so many robust scales before correlations are estimated.
-pub const CLIP_FOR_CORRELATION: f64 = 3.5;
+/// Candidates with a score up to this are not worth the work of confirming.
+pub(crate) const CONFIRM_ABOVE: f64 = 3.0;
+/// The dependence used to confirm never exceeds this.
+const PHI_CONFIRM_MAX: f64 = 0.97;
 
-/// The model with the candidate in it.
-#[derive(Clone, Debug)]
-pub struct Confirmed {
-    /// Score with the correlation that is left; infinite when that is no larger than usual.
-    pub score: f64,
-    /// Residuals with the candidate removed, clipped.
-    pub residuals: Vec<f64>,
+/// Reusable memory of the looks at one window; holds nothing between looks.
+#[derive(Clone, Debug, Default)]
+pub struct Workspace {
+    /// Residuals, y's unit.
+    pub(crate) residuals: Vec<f64>,
+    /// Spacing in medians.
+    pub(crate) spacing: Vec<f64>,
+    /// Candidate column, not whitened.
+    pub(crate) column: Vec<f64>,
+    /// Residuals with the best candidate of the look removed.
+    pub(crate) best: Vec<f64>,
+    /// Residuals with the candidate at hand removed.
+    pub(crate) removed: Vec<f64>,
+    innovations: Vec<f64>,
+    rows: Vec<[f64; ORDER_MAX]>,
+    pub(crate) scratch: Vec<f64>,
 }
 
-/// Recomputes the score of candidate `column` (one entry per point) with re-estimated correlation.
+impl Workspace {
+    /// Copies residuals and spacing of the window out, in time order.
+    pub(crate) fn load(&mut self, w: &Whitened) {
+        self.residuals.clear();
+        self.residuals.extend(w.points.iter().map(|p| p.e));
+        self.spacing.clear();
+        self.spacing.extend(w.points.iter().map(|p| p.ratio));
+    }
+}
+
+/// Returns the dependence with which a candidate is confirmed: the baseline plus what the
+/// candidate's own residuals show beyond one standard error of it.
+pub(crate) fn soft_phi(phi_alternative: f64, phi_baseline: f64, n: usize) -> f64 {
+    let se = ((1.0 - phi_baseline * phi_baseline) / n as f64).sqrt();
+    (phi_baseline + (phi_alternative - phi_baseline - se).max(0.0)).min(PHI_CONFIRM_MAX)
+}
+
+/// Confirms the candidate in `work.column`: removes it by least squares of the clipped residuals
+/// on curve and candidate, re-estimates phi, and scores it again under [`soft_phi`].
 ///
-/// # Source
-/// Soft excess of one standard error: own rule; it keeps a correlation of 0.8 from being called a
-/// step.
-pub fn confirm(window: &Whitened, column: &[f64]) -> Confirmed {
-    let n = window.points();
-    let all = row_maker(window, column);
-    let limit = CLIP_FOR_CORRELATION * robust_scale(&window.residuals);
-    let clipped: Vec<f64> = window.residuals.iter().map(|e| e.clamp(-limit, limit)).collect();
-    let rows: Vec<Vector5<f64>> = (0..n).map(&all).collect();
-    let Some((c, _)) = solve(&rows, &clipped, window.parameters) else {
-        return Confirmed { score: f64::INFINITY, residuals: clipped };
-    };
-    let mut residuals: Vec<f64> = (0..n).map(|j| window.residuals[j] - rows[j].dot(&c)).collect();
-    let limit = CLIP_FOR_CORRELATION * robust_scale(&residuals);
-    residuals.iter_mut().for_each(|r| *r = r.clamp(-limit, limit));
-    let found = lag_correlation(&residuals, &window.spacing, window.parameters + 1);
-    let usual = window.phi;
-    let excess = found - usual - ((1.0 - usual * usual) / count(n)).sqrt();
-    let phi = (usual + excess.max(0.0)).min(0.97);
-    let score = if phi > usual { rescored(window, &rows, phi) } else { f64::INFINITY };
-    Confirmed { score, residuals }
+/// # Arguments
+/// `work` — loaded from `w`, with the column set; `work.removed` receives the residuals.
+/// # Outcomes
+/// The score under the softer dependence; `None` when the baseline needs no softening (the raw
+/// score stands).
+pub(crate) fn confirmed_score(w: &Whitened, work: &mut Workspace) -> Option<f64> {
+    remove_candidate(w, work);
+    let s = serial::robust_sigma(&work.removed, &mut work.scratch);
+    work.scratch.clear();
+    work.scratch.extend_from_slice(&work.removed);
+    serial::clip_in_place(&mut work.scratch, s);
+    let parameters = (w.frame.parameters() + 1) as f64;
+    let phi =
+        serial::lag_correlation_of_clipped(&work.scratch, &work.spacing, w.regular, parameters);
+    softened_score(w, work, phi)
 }
 
-fn row_maker<'a>(window: &'a Whitened, column: &'a [f64]) -> impl Fn(usize) -> Vector5<f64> + 'a {
-    let largest = column.iter().map(|d| d.abs()).fold(f64::MIN_POSITIVE, f64::max);
-    move |j| {
-        let g = window.gradients[j];
-        Vector5::new(g[0], g[1], g[2], g[3], column[j] / largest)
-    }
+/// Scores `work.column` under the dependence softened towards `phi`; `None` as above.
+pub(crate) fn softened_score(w: &Whitened, work: &mut Workspace, phi: f64) -> Option<f64> {
+    let base = w.frame.phi_baseline;
+    let soft = soft_phi(phi, base, w.len());
+    (soft > base).then(|| score_under(w, work, soft))
 }
 
-/// Ordinary least squares on five columns (unused ones stay 0); also the sum of squares explained.
-fn solve(rows: &[Vector5<f64>], y: &[f64], parameters: usize) -> Option<(Vector5<f64>, f64)> {
-    let (mut squares, mut right) = (Matrix5::zeros(), Vector5::zeros());
-    for (row, &v) in rows.iter().zip(y) {
-        squares += row * row.transpose();
-        right += row * v;
+/// `work.removed` = residuals about the least-squares fit of curve and candidate.
+fn remove_candidate(w: &Whitened, work: &mut Workspace) {
+    let p = w.frame.parameters();
+    let clip = serial::CLIP_SIGMAS * w.frame.residual_sigma;
+    let mut h: Matrix = [[0.0; ORDER_MAX]; ORDER_MAX];
+    let mut g = [0.0; ORDER_MAX];
+    for (point, &d) in w.points.iter().zip(&work.column) {
+        let row = row_of(&point.tangent, d, p);
+        accumulate(&mut h, &mut g, &row, point.e.clamp(-clip, clip), p + 1);
     }
-    for k in 0..5 {
-        squares[(k, k)] =
-            if (parameters..4).contains(&k) { 1.0 } else { squares[(k, k)] * (1.0 + 1e-12) };
-    }
-    let c = squares.cholesky()?.solve(&right);
-    let explained = c.dot(&right);
-    explained.is_finite().then_some((c, explained))
+    complete(&mut h, p + 1);
+    let c = solve(&h, &g, p + 1).unwrap_or([0.0; ORDER_MAX]);
+    work.removed.clear();
+    work.removed.extend(w.points.iter().zip(&work.column).map(|(point, &d)| {
+        let row = row_of(&point.tangent, d, p);
+        point.e - (0..=p).map(|a| c[a] * row[a]).sum::<f64>()
+    }));
 }
 
-/// The added-variable score with correlation `phi`, residuals clipped after whitening.
-fn rescored(window: &Whitened, rows: &[Vector5<f64>], phi: f64) -> f64 {
-    let n = rows.len();
-    let (mut u, mut x) = (Vec::with_capacity(n - 1), Vec::with_capacity(n - 1));
-    for j in 1..n {
-        let f = phi.powf(window.spacing[j]);
-        let w = 1.0 / (1.0 - f * f).max(1e-12).sqrt();
-        u.push(w * (window.residuals[j] - f * window.residuals[j - 1]));
-        x.push((rows[j] - rows[j - 1] * f) * w);
+/// Score of the added column in the model whitened by `phi`, innovations clipped at 3 robust
+/// sigmas.
+fn score_under(w: &Whitened, work: &mut Workspace, phi: f64) -> f64 {
+    let p = w.frame.parameters();
+    work.innovations.clear();
+    work.rows.clear();
+    for j in 1..w.points.len() {
+        let (point, last) = (&w.points[j], &w.points[j - 1]);
+        let (f, weight) = super::frame::link(phi, point.ratio);
+        // As `link` gives √((1−φ²)/(1−f²)); the common factor cancels in the ratio of sums.
+        work.innovations.push(weight * (point.e - f * last.e));
+        let now = row_of(&point.tangent, work.column[j], p);
+        let before = row_of(&last.tangent, work.column[j - 1], p);
+        let mut row = [0.0; ORDER_MAX];
+        for a in 0..=p {
+            row[a] = weight * (now[a] - f * before[a]);
+        }
+        work.rows.push(row);
     }
-    let limit = CLIP * robust_scale(&u);
-    u.iter_mut().for_each(|v| *v = v.clamp(-limit, limit));
-    let total: f64 = u.iter().map(|v| v * v).sum();
-    let without: Vec<Vector5<f64>> =
-        x.iter().map(|r| Vector5::new(r[0], r[1], r[2], r[3], 0.0)).collect();
-    // The fifth column is all 0 in the smaller model; its diagonal must not make it singular.
-    let smaller = solve_without(&without, &u, window.parameters);
-    let (Some((_, with)), Some(smaller)) = (solve(&x, &u, window.parameters), smaller) else {
+    let s = serial::robust_sigma(&work.innovations, &mut work.scratch);
+    if s <= 0.0 {
         return 0.0;
-    };
-    let freedom = count(n - 1 - window.parameters - 1);
-    let ratio = (with - smaller) / ((total - with).max(1e-300) / freedom);
-    if ratio > 0.0 { student_q(ratio.sqrt(), freedom) } else { 0.0 }
+    }
+    let mut h: Matrix = [[0.0; ORDER_MAX]; ORDER_MAX];
+    let mut g = [0.0; ORDER_MAX];
+    let mut square = 0.0;
+    for (row, &u) in work.rows.iter().zip(&work.innovations) {
+        let u = (u / s).clamp(-CLIP, CLIP);
+        square += u * u;
+        accumulate(&mut h, &mut g, row, u, p + 1);
+    }
+    complete(&mut h, p + 1);
+    let (Some(full), Some(plain)) = (solve(&h, &g, p + 1), solve(&h, &g, p)) else { return 0.0 };
+    let rss_full = square - (0..=p).map(|a| full[a] * g[a]).sum::<f64>();
+    let rss_plain = square - (0..p).map(|a| plain[a] * g[a]).sum::<f64>();
+    let nu = (work.rows.len() - p - 1) as f64;
+    if rss_full <= 1e-300 || rss_plain <= rss_full {
+        return 0.0;
+    }
+    student_score_two_sided(((rss_plain - rss_full) / (rss_full / nu)).sqrt(), nu)
 }
 
-fn solve_without(rows: &[Vector5<f64>], y: &[f64], parameters: usize) -> Option<f64> {
-    let (mut squares, mut right) = (Matrix5::zeros(), Vector5::zeros());
-    for (row, &v) in rows.iter().zip(y) {
-        squares += row * row.transpose();
-        right += row * v;
+fn row_of(tangent: &[f64], candidate: f64, p: usize) -> [f64; ORDER_MAX] {
+    let mut row = [0.0; ORDER_MAX];
+    row[..p].copy_from_slice(&tangent[..p]);
+    row[p] = candidate;
+    row
+}
+
+fn accumulate(h: &mut Matrix, g: &mut [f64; ORDER_MAX], row: &[f64; ORDER_MAX], v: f64, q: usize) {
+    for a in 0..q {
+        g[a] += row[a] * v;
+        for c in 0..=a {
+            h[a][c] += row[a] * row[c];
+        }
     }
-    for k in parameters..5 {
-        squares[(k, k)] = 1.0;
+}
+
+/// Mirrors the lower triangle; a hair of ridge, and 1 for a column without a direction.
+fn complete(h: &mut Matrix, q: usize) {
+    for a in 0..q {
+        for c in 0..a {
+            h[c][a] = h[a][c];
+        }
+        h[a][a] = if h[a][a] > 0.0 { h[a][a] * (1.0 + 1e-12) } else { 1.0 };
     }
-    Some(squares.cholesky()?.solve(&right).dot(&right))
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn softening_begins_beyond_one_standard_error() {
+        // √((1 − .09)/100) = .0954
+        assert!((soft_phi(0.35, 0.3, 100) - 0.3).abs() < 1e-12);
+        assert!((soft_phi(0.6, 0.3, 100) - (0.6 - 0.091_f64.sqrt() * 0.316_227_766)).abs() < 1e-9);
+        assert!((soft_phi(1.4, 0.3, 100) - PHI_CONFIRM_MAX).abs() < 1e-12);
+    }
 }

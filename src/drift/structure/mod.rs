@@ -1,153 +1,238 @@
 //! One file per kind of structure in residuals, and the examination that runs them all.
 //!
-//! Each kind yields one score q = −log10 p of its best candidate. How large a score must be to count
-//! is not decided here but by the budget for false alerts, one floor up.
+//! A look works on the *whitened* window ([`whitened`]): innovations about the curve of the last
+//! refit ([`frame`]), in which every change of the mean is an added-column test. The fast part
+//! ([`shift`], `step`) is cheap enough for each new point; the slow part (`bend`,
+//! `dependence`) runs at a refit, or at once when the fast part warns. Scores are −log10 p of one
+//! look's best candidate; how often looks may be wrong by chance is the business of the budget, not
+//! of this folder.
+//!
+//! To add a kind: a file with `look(&Whitened, &mut Workspace) -> Score`, a variant in [`Kind`], a
+//! line in [`examine`], a row in the budget's table.
+
+#![expect(
+    clippy::needless_range_loop,
+    reason = "index notation as in the formulas; several small arrays share one index"
+)]
 
 pub mod baseline;
-pub mod bend;
-pub mod confirm;
-pub mod dependence;
+mod bend;
+mod confirm;
+mod dependence;
+pub mod frame;
+pub mod resolution;
 pub mod shift;
-pub mod step;
+#[cfg(test)]
+pub(crate) mod simulate;
+mod small;
+mod step;
 pub mod whitened;
 
-use serde::{Deserialize, Serialize};
-use whitened::Whitened;
+pub use baseline::Baseline;
+pub use confirm::Workspace;
+pub use frame::{Frame, Framed};
+pub use shift::ShiftDetector;
+pub use whitened::Whitened;
 
-/// The best candidate of one kind.
-#[derive(Clone, Copy, Debug, Default, PartialEq, Serialize, Deserialize)]
-pub struct Found {
-    /// −log10 p of this one candidate.
-    pub score: f64,
-    /// Its size: y's unit (step), y's unit per day (bend), a correlation (dependence).
-    pub size: f64,
-    /// Index of the point at which it begins.
-    pub index: usize,
+use crate::drift::tails::probability;
+use serde::{Deserialize, Serialize};
+
+/// A fast score above this calls the slow part at once.
+const SHIFT_WARNS_ABOVE: f64 = 4.0;
+const STEP_WARNS_ABOVE: f64 = 5.5;
+/// A confirmed change of the mean above this keeps the refit out of the channel's baseline.
+const SUSPICIOUS_ABOVE: f64 = 5.0;
+/// Weaker structure is left in the residuals when dependence is judged.
+const REMOVE_ABOVE: f64 = 3.5;
+
+/// A kind of structure in residuals.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, PartialOrd, Ord, Hash, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum Kind {
+    /// The newest readings are off; warns first, names nothing.
+    Shift,
+    /// A lasting jump.
+    Step,
+    /// A lasting change of rate.
+    Bend,
+    /// Neighbours more alike than they used to be.
+    Dependence,
 }
 
-/// What one full look at the residuals found.
-#[derive(Clone, Copy, Debug, Default, PartialEq, Serialize, Deserialize)]
+impl Kind {
+    /// Every kind, in the order of the scores.
+    pub const ALL: [Kind; 4] = [Kind::Shift, Kind::Step, Kind::Bend, Kind::Dependence];
+
+    /// The name under which people and JSON know the kind; a shift is an unnamed step.
+    pub const fn name(self) -> &'static str {
+        match self {
+            Kind::Shift | Kind::Step => "step",
+            Kind::Bend => "bend",
+            Kind::Dependence => "dependence",
+        }
+    }
+
+    /// What [`Score::size`] is measured in, given the channel's unit.
+    pub fn size_unit(self, unit: &str) -> String {
+        match self {
+            Kind::Shift | Kind::Step => unit.to_owned(),
+            Kind::Bend => format!("{unit}/d"),
+            Kind::Dependence => String::new(),
+        }
+    }
+}
+
+/// What one look found of one kind.
+#[derive(Clone, Copy, Debug, PartialEq, Serialize, Deserialize)]
+pub struct Score {
+    /// The kind.
+    pub kind: Kind,
+    /// −log10 p of the best candidate of this look (for a shift: of the mixture statistic).
+    pub q: f64,
+    /// 10^−q, never 0.
+    pub p: f64,
+    /// Step: y's unit, signed. Bend: change of slope, y's unit per day. Dependence: correlation at
+    /// the median spacing. 0 where nothing was found.
+    pub size: f64,
+    /// Index in the window of the first point after the change (bend: of the hinge).
+    pub index: usize,
+    /// Age of that point, days.
+    pub x: f64,
+}
+
+impl Score {
+    pub(crate) fn new(kind: Kind, q: f64, size: f64, index: usize, x: f64) -> Score {
+        let q = if q.is_finite() { q.max(0.0) } else { 0.0 };
+        let size = if size.is_finite() { size } else { 0.0 };
+        Score { kind, q, p: probability(q), size, index, x }
+    }
+
+    /// The score of a look without a candidate.
+    pub(crate) fn none(kind: Kind, w: &Whitened) -> Score {
+        let last = w.len() - 1;
+        Score::new(kind, 0.0, 0.0, last, w.points[last].x)
+    }
+}
+
+/// How deep to look.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum Depth {
+    /// The fast part only.
+    Quick,
+    /// The slow part too if the fast part warns; at most each quarter of a refit stride.
+    QuickUnlessWarned,
+    /// Everything: at each refit.
+    Full,
+}
+
+/// What one look at the residuals found.
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
 pub struct Examination {
-    /// Jump of level.
-    pub step: Found,
-    /// Change of rate.
-    pub bend: Found,
-    /// Dependence beyond the norm.
-    pub dependence: Found,
+    /// The fast layer's warning; size and date are those of the best step.
+    pub shift: Score,
+    /// The best step.
+    pub step: Score,
+    /// The best bend; `None` where the look was quick.
+    pub bend: Option<Score>,
+    /// Dependence beyond the norm; `None` where the look was quick.
+    pub dependence: Option<Score>,
+    /// Points in the window.
+    pub points: usize,
+    /// Dependence taken as normal.
+    pub phi: f64,
+    /// Noise about the curve, y's unit.
+    pub noise: f64,
+    /// Whether a change of the mean is likely enough that the window must not become baseline.
+    pub suspicious: bool,
 }
 
 impl Examination {
-    /// The largest score of a change in the mean: above 5 the window is no example of the norm.
-    pub fn largest_in_mean(&self) -> f64 {
-        self.step.score.max(self.bend.score)
+    /// The score of a kind, `None` where this look did not reach it.
+    pub fn score(&self, kind: Kind) -> Option<&Score> {
+        match kind {
+            Kind::Shift => Some(&self.shift),
+            Kind::Step => Some(&self.step),
+            Kind::Bend => self.bend.as_ref(),
+            Kind::Dependence => self.dependence.as_ref(),
+        }
+    }
+
+    /// Whether the slow part ran.
+    pub fn is_full(&self) -> bool {
+        self.dependence.is_some()
+    }
+
+    /// Whether the fast part calls for the slow one.
+    pub fn warns(&self) -> bool {
+        warns(&self.shift, &self.step)
     }
 }
 
-/// Examines a window for every kind. `familiar`: how well the channel's norm is known, 0…1.
-pub fn examine(window: &Whitened, familiar: f64) -> Examination {
-    let step = step::scan(window);
-    let bend = bend::scan(window);
-    // Dependence is judged on what the best explanation of the mean leaves.
-    let mut left = &window.residuals;
-    let mut best = 3.5;
-    for (found, confirmed) in [&step, &bend].into_iter().flatten() {
-        if let Some(confirmed) = confirmed
-            && found.score > best
-        {
-            best = found.score;
-            left = &confirmed.residuals;
+fn warns(shift: &Score, step: &Score) -> bool {
+    shift.q > SHIFT_WARNS_ABOVE || step.q > STEP_WARNS_ABOVE
+}
+
+/// Examines the residuals of one window.
+///
+/// # Arguments
+/// `w` — the whitened window; `shift` — the channel's running detector; `new_points` — newest
+/// points the detector has not yet taken (0 at a refit without a new point); `depth` — how deep;
+/// `work` — memory to reuse.
+/// # Outcomes
+/// One [`Score`] a kind; every number finite.
+/// # Numerics
+/// Quick O(n p²/2) on top of the window's own O(n p²); confirmations and the slow part O(n p²)
+/// each, with up to 24 passes of `exp` where spacing is uneven.
+pub fn examine(
+    w: &Whitened,
+    shift: &mut ShiftDetector,
+    new_points: usize,
+    depth: Depth,
+    work: &mut Workspace,
+) -> Examination {
+    let q_shift = shift.take(w, new_points);
+    let found = step::look(w, work);
+    let step = found.score;
+    let shift = Score::new(Kind::Shift, q_shift, step.size, step.index, step.x);
+    let deep = match depth {
+        Depth::Quick => false,
+        Depth::QuickUnlessWarned => warns(&shift, &step),
+        Depth::Full => true,
+    };
+    let mut strongest = if found.removed { step.q } else { 0.0 };
+    let mut examination = Examination {
+        shift,
+        step,
+        bend: None,
+        dependence: None,
+        points: w.len(),
+        phi: w.frame.phi_baseline,
+        noise: w.frame.noise,
+        suspicious: false,
+    };
+    if deep {
+        // The best explanation of the mean is taken out before neighbours are compared.
+        work.load(w);
+        let mut removed_above = REMOVE_ABOVE;
+        if found.removed && step.q > removed_above {
+            removed_above = step.q;
+        } else {
+            work.best.clone_from(&work.residuals);
         }
+        let bend = bend::look(w, work);
+        if bend.q > confirm::CONFIRM_ABOVE && bend.q > removed_above {
+            std::mem::swap(&mut work.best, &mut work.removed);
+        }
+        if bend.q > confirm::CONFIRM_ABOVE {
+            strongest = strongest.max(bend.q);
+        }
+        examination.bend = Some(bend);
+        examination.dependence = Some(dependence::look(w, work));
     }
-    Examination {
-        dependence: dependence::score(window, left, familiar),
-        step: step.as_ref().map(|(found, _)| *found).unwrap_or_default(),
-        bend: bend.as_ref().map(|(found, _)| *found).unwrap_or_default(),
-    }
+    examination.suspicious = strongest > SUSPICIOUS_ABOVE;
+    examination
 }
 
 #[cfg(test)]
-pub(crate) mod tests {
-    use super::*;
-    use crate::drift::family::Family;
-    use crate::drift::fit::{FitOutcome, fit};
-
-    /// Normal noise with correlation phi from a fixed seed (splitmix64 and Box–Muller).
-    pub(crate) fn noise(seed: u64, n: usize, phi: f64) -> Vec<f64> {
-        let mut state = seed;
-        let mut uniform = move || {
-            state = state.wrapping_add(0x9E37_79B9_7F4A_7C15);
-            let mut z = state;
-            z = (z ^ (z >> 30)).wrapping_mul(0xBF58_476D_1CE4_E5B9);
-            z = (z ^ (z >> 27)).wrapping_mul(0x94D0_49BB_1331_11EB);
-            ((z ^ (z >> 31)) >> 11) as f64 / (1u64 << 53) as f64
-        };
-        let mut last = 0.0;
-        (0..n)
-            .map(|_| {
-                let radius = (-2.0 * (1.0 - uniform()).ln()).sqrt();
-                let normal = radius * (2.0 * std::f64::consts::PI * uniform()).cos();
-                last = phi * last + (1.0 - phi * phi).sqrt() * normal;
-                last
-            })
-            .collect()
-    }
-
-    /// Looks at 200 points of a logarithmic drift with noise of 1 and what is `added`.
-    fn check(seed: u64, phi: f64, added: impl Fn(usize) -> f64) -> Examination {
-        println!("seed {seed}");
-        let x: Vec<f64> = (1..=200).map(|i| f64::from(i) + 20.0).collect();
-        let y: Vec<f64> = noise(seed, 200, phi)
-            .iter()
-            .enumerate()
-            .map(|(i, e)| 4.0 * x[i].ln() + e + added(i))
-            .collect();
-        let FitOutcome::Fitted(curve) = fit(Family::Logarithmic, &x, &y, true) else {
-            panic!("a logarithmic curve can be fitted");
-        };
-        let window = Whitened::new(&x, &y, &curve, 0.3).unwrap();
-        examine(&window, 1.0)
-    }
-
-    #[test]
-    fn a_jump_is_found_dated_and_sized() {
-        let found = check(1, 0.3, |i| if i >= 150 { 4.0 } else { 0.0 }).step;
-        assert!(found.score > 10.0 && found.index.abs_diff(150) <= 2, "{found:?}");
-        assert!((found.size - 4.0).abs() < 1.0, "{found:?}");
-    }
-
-    #[test]
-    fn a_change_of_rate_is_found_dated_and_sized() {
-        let found = check(2, 0.3, |i| 0.1 * i.saturating_sub(120) as f64).bend;
-        assert!(found.score > 10.0 && found.index.abs_diff(120) <= 15, "{found:?}");
-        assert!((found.size - 0.1).abs() < 0.04, "{found:?}");
-    }
-
-    #[test]
-    fn growing_dependence_is_told_from_a_jump() {
-        let slow = noise(3, 200, 0.95);
-        let found = check(4, 0.3, |i| if i >= 60 { 3.0 * slow[i] } else { 0.0 });
-        assert!(found.dependence.score > 5.0 && found.dependence.size > 0.7, "{found:?}");
-        assert!(found.dependence.score > found.step.score, "{found:?}");
-    }
-
-    #[test]
-    fn nothing_is_found_where_nothing_is() {
-        let scores: Vec<f64> = (10..60)
-            .map(|seed| {
-                let found = check(seed, 0.3, |_| 0.0);
-                found.largest_in_mean().max(found.dependence.score)
-            })
-            .collect();
-        let high = scores.iter().filter(|&&q| q > 4.0).count();
-        assert!(high <= 1, "{scores:?}");
-    }
-
-    #[test]
-    fn a_window_without_scatter_is_an_outcome() {
-        let x: Vec<f64> = (1..=60).map(f64::from).collect();
-        let FitOutcome::Fitted(curve) = fit(Family::Linear, &x, &[0.0; 60], true) else {
-            panic!("a flat line can be fitted");
-        };
-        assert!(Whitened::new(&x, &[0.0; 60], &curve, 0.3).is_none());
-    }
-}
+mod tests;

@@ -1,198 +1,314 @@
-//! The whitened, winsorised, linearised model: what every kind of structure is tested against.
-//!
-//! Residuals of a curve refitted to the same data are neither independent nor free of the curve's
-//! own uncertainty. Both are taken out once, here: neighbours' correlation phi is removed (whitening),
-//! wild readings are clipped at three noise scales, and a candidate for structure is judged only by
-//! what the curve's own coefficients could not have absorbed (added-variable test).
+//! The window in whitened form: innovations of an AR(1)/Ornstein–Uhlenbeck noise about the framed
+//! curve, their tangents, and the normal equations that every added-column test shares.
 
-use crate::drift::family::COEFFICIENTS_MAX;
-use crate::drift::fit::{Fit, robust_scale};
-use crate::drift::serial::{count, spacing_of};
-use crate::drift::tails::student_q;
-use nalgebra::{Matrix4, Vector4};
+use super::frame::Frame;
+use super::small::{Matrix, ORDER_MAX, inverse};
+use crate::drift::family::{COEFFICIENTS_MAX, Coefficients};
+use crate::drift::serial;
 
-/// Whitened residuals are clipped at so many noise scales.
+/// Innovations are clipped at ± this many noise sigmas (P. J. Huber, Robust estimation of a
+/// location parameter, 1964).
 pub const CLIP: f64 = 3.0;
-/// The mean square of a standard normal deviate clipped at 3.
-const CLIPPED_VARIANCE: f64 = 0.995_02;
 
-/// A window ready for examination.
-#[derive(Clone, Debug)]
+/// One point of the window. All but the first depend on the point before.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub(crate) struct Point {
+    /// Age, days.
+    pub x: f64,
+    /// Age from the frame's origin in median spacings.
+    pub t: f64,
+    /// Spacing from the point before, in medians.
+    pub ratio: f64,
+    /// Residual, y's unit.
+    pub e: f64,
+    /// Orthonormal tangents of the curve.
+    pub tangent: Coefficients,
+    /// Innovation, noise sigmas.
+    pub u: f64,
+    /// Innovation clipped at ± [`CLIP`].
+    pub uc: f64,
+    /// Whitened tangents.
+    pub jt: Coefficients,
+    /// Whitened image of 1 here and 0 before: w.
+    pub a1: f64,
+    /// Whitened image of the constant 1: w (1 − f).
+    pub b1: f64,
+    /// Whitened image of t: w (t − f t before).
+    pub t1: f64,
+}
+
+impl Point {
+    /// The same point as the first of a window.
+    fn without_past(&self) -> Point {
+        Point {
+            ratio: 1.0,
+            u: 0.0,
+            uc: 0.0,
+            jt: [0.0; COEFFICIENTS_MAX],
+            a1: 0.0,
+            b1: 0.0,
+            t1: 0.0,
+            ..*self
+        }
+    }
+}
+
+/// The whitened window; rebuilt in place by [`Whitened::refill`], moved on by [`Whitened::slide`].
+#[derive(Clone, Debug, PartialEq)]
 pub struct Whitened {
-    /// Ages, days.
-    pub x: Vec<f64>,
-    /// Residuals of the curve, in y's unit.
-    pub residuals: Vec<f64>,
-    /// Gradients of the curve, each column scaled to a largest size of 1.
-    pub gradients: Vec<Vector4<f64>>,
-    /// Spacings over their median; the first is 1.
-    pub spacing: Vec<f64>,
-    /// The correlation that was taken out.
-    pub phi: f64,
-    /// Marginal noise scale s, in y's unit.
-    pub scale: f64,
-    /// Whitened, scaled, clipped residuals; entry 0 unused (0).
-    pub clipped: Vec<f64>,
-    /// Whitened gradients; entry 0 unused (0).
-    pub columns: Vec<Vector4<f64>>,
-    /// Weight w_j of a whitened entry; entry 0 unused.
-    pub weight: Vec<f64>,
-    /// w_j (1 − f_j): what a constant becomes; entry 0 unused.
-    pub constant: Vec<f64>,
-    /// (JᵀJ)⁻¹ of the whitened columns; unused places are those of the identity.
-    pub inverse: Matrix4<f64>,
-    /// Coefficients that the clipped residuals still ask for.
-    pub beta: Vector4<f64>,
-    /// Sum of squares left after them.
-    pub left: f64,
-    /// Degrees of freedom left with one candidate added.
-    pub freedom: f64,
-    /// Number of the curve's coefficients.
-    pub parameters: usize,
+    pub(crate) frame: Frame,
+    pub(crate) points: Vec<Point>,
+    /// Whether the spacing of the whole window counts as even.
+    pub(crate) regular: bool,
+    /// Inverse of G = Jtᵀ Jt.
+    pub(crate) g_inverse: Matrix,
+    /// G⁻¹ Jtᵀ uc: what the clipped innovations would move the curve by.
+    pub(crate) beta: [f64; ORDER_MAX],
+    /// Residual sum of squares of uc on Jt, noise sigmas².
+    pub(crate) rss: f64,
+    /// Degrees of freedom of an added-column test, n − 2 − p.
+    pub(crate) nu: f64,
 }
 
 impl Whitened {
-    /// Whitens the residuals of a curve.
+    /// Builds the whitened window.
     ///
     /// # Arguments
-    /// `x` — ages, days, strictly increasing, at least p + 4; `y` — deviations; `curve` —
-    /// fitted to them; `phi` — the channel's usual correlation at the median spacing, 0 ≤ phi < 1.
-    ///
-    /// # Returns
-    /// None when the residuals have no scatter at all, or the curve's columns are dependent.
-    ///
-    /// # Source
-    /// f_j = phi^(Δt_j/δ), w_j = √((1−phi²)/(1−f_j²))/s, u_j = w_j (e_j − f_j e_(j−1)):
-    /// Ornstein–Uhlenbeck process at irregular times. Scale: iterated winsorised mean square.
-    pub fn new(x: &[f64], y: &[f64], curve: &Fit, phi: f64) -> Option<Whitened> {
-        let parameters = curve.family.parameter_count();
-        assert!(x.len() == y.len() && x.len() >= parameters + 4, "enough points, one y each");
-        let residuals = curve.residuals(x, y);
-        let gradients = scaled_gradients(x, curve);
-        let (_, spacing) = spacing_of(x);
-        let mut whitened = Whitened {
-            x: x.to_vec(),
-            residuals,
-            gradients,
-            spacing,
-            phi,
-            scale: 1.0,
-            clipped: Vec::new(),
-            columns: Vec::new(),
-            weight: Vec::new(),
-            constant: Vec::new(),
-            inverse: Matrix4::identity(),
-            beta: Vector4::zeros(),
-            left: 0.0,
-            freedom: count(x.len() - 2 - parameters),
-            parameters,
+    /// `frame` — from the last refit; `x` — ages, days, ascending; `y` — deviations; at least
+    /// [`super::frame::POINTS_MIN`] points, the same bounds as for the frame.
+    /// # Outcomes
+    /// `None` when there are too few points or one is not finite.
+    pub fn new(frame: Frame, x: &[f64], y: &[f64]) -> Option<Whitened> {
+        let mut w = Whitened {
+            frame,
+            points: Vec::with_capacity(x.len()),
+            regular: true,
+            g_inverse: [[0.0; ORDER_MAX]; ORDER_MAX],
+            beta: [0.0; ORDER_MAX],
+            rss: 0.0,
+            nu: 1.0,
         };
-        whitened.whiten()?;
-        Some(whitened)
+        w.fill(x, y).then_some(w)
     }
 
-    /// Number of points.
-    pub fn points(&self) -> usize {
-        self.x.len()
+    /// Rebuilds the window for a new frame in the same memory; `false` as `None` of [`Self::new`].
+    pub fn refill(&mut self, frame: Frame, x: &[f64], y: &[f64]) -> bool {
+        self.frame = frame;
+        self.fill(x, y)
     }
 
-    fn whiten(&mut self) -> Option<()> {
-        let n = self.points();
-        let f: Vec<f64> = self.spacing.iter().map(|d| self.phi.powf(*d)).collect();
-        let relative: Vec<f64> = f
-            .iter()
-            .map(|f| ((1.0 - self.phi * self.phi) / (1.0 - f * f).max(1e-12)).sqrt())
-            .collect();
-        let raw: Vec<f64> = (1..n)
-            .map(|j| relative[j] * (self.residuals[j] - f[j] * self.residuals[j - 1]))
-            .collect();
-        let lost = count(n - 1) / count(n - 1 - self.parameters);
-        self.scale = winsorised_scale(&raw)? * lost.sqrt();
-        self.weight = relative.iter().map(|w| w / self.scale).collect();
-        self.constant = (0..n).map(|j| self.weight[j] * (1.0 - f[j])).collect();
-        self.clipped = vec![0.0; n];
-        self.columns = vec![Vector4::zeros(); n];
-        let mut squares = Matrix4::zeros();
-        let (mut right, mut total) = (Vector4::zeros(), 0.0);
-        for j in 1..n {
-            self.clipped[j] = (raw[j - 1] / self.scale).clamp(-CLIP, CLIP);
-            self.columns[j] = (self.gradients[j] - self.gradients[j - 1] * f[j]) * self.weight[j];
-            squares += self.columns[j] * self.columns[j].transpose();
-            right += self.columns[j] * self.clipped[j];
-            total += self.clipped[j] * self.clipped[j];
-        }
-        for k in self.parameters..COEFFICIENTS_MAX {
-            squares[(k, k)] = 1.0;
-        }
-        self.inverse = squares.try_inverse()?;
-        self.beta = self.inverse * right;
-        self.left = total - self.beta.dot(&right);
-        (self.left.is_finite() && self.left > 0.0).then_some(())
-    }
-
-    /// Judges one candidate column D by its sums over the whitened window.
+    /// Appends one point and drops the oldest beyond `keep`; bit for bit what a rebuild gives.
     ///
     /// # Arguments
-    /// `with_residuals` — Dᵀu; `squares` — DᵀD; `with_columns` — JᵀD.
-    ///
-    /// # Returns
-    /// The gain in sum of squares and the coefficient of D in y's units per unit of D; None when the
-    /// curve's own columns leave nothing of D.
-    pub fn candidate(
-        &self,
-        with_residuals: f64,
-        squares: f64,
-        with_columns: &Vector4<f64>,
-    ) -> Option<Gain> {
-        let numerator = with_residuals - with_columns.dot(&self.beta);
-        let denominator = squares - with_columns.dot(&(self.inverse * with_columns));
-        (denominator > 1e-8 * squares && denominator > 0.0).then(|| Gain {
-            gain: numerator * numerator / denominator,
-            size: numerator / denominator,
-        })
-    }
-
-    /// The score q = −log10 p of a gain, against Student's t.
-    pub fn score(&self, gain: f64) -> f64 {
-        student_q(self.t_of(gain), self.freedom)
-    }
-
-    /// The t statistic of a gain.
-    pub fn t_of(&self, gain: f64) -> f64 {
-        (gain / ((self.left - gain) / self.freedom).max(1e-12)).sqrt()
-    }
-}
-
-/// What a candidate explains.
-#[derive(Clone, Copy, Debug, PartialEq)]
-pub struct Gain {
-    /// Reduction of the whitened sum of squares.
-    pub gain: f64,
-    /// The candidate's coefficient; in y's unit per unit of the candidate.
-    pub size: f64,
-}
-
-fn scaled_gradients(x: &[f64], curve: &Fit) -> Vec<Vector4<f64>> {
-    let mut rows: Vec<Vector4<f64>> = x.iter().map(|&v| Vector4::from(curve.gradient(v))).collect();
-    for k in 0..curve.family.parameter_count() {
-        let largest = rows.iter().map(|row| row[k].abs()).fold(0.0, f64::max);
-        if largest > 0.0 {
-            rows.iter_mut().for_each(|row| row[k] /= largest);
+    /// `x` — age, days, not below the newest; `y` — deviation; `keep` — points to stay.
+    /// # Outcomes
+    /// `false` (nothing changed) when the point is not finite, goes back in time, or `keep` is
+    /// below [`super::frame::POINTS_MIN`].
+    pub fn slide(&mut self, x: f64, y: f64, keep: usize) -> bool {
+        let Some(last) = self.points.last().copied() else { return false };
+        let ok = x.is_finite() && y.is_finite() && x >= last.x && keep >= super::frame::POINTS_MIN;
+        if !ok {
+            return false;
         }
+        self.points.push(self.point(x, y, Some(&last)));
+        let surplus = self.points.len().saturating_sub(keep);
+        self.points.drain(..surplus);
+        if surplus > 0 {
+            self.points[0] = self.points[0].without_past();
+        }
+        self.solve();
+        true
     }
-    rows
-}
 
-/// Starts at 1.4826 MAD, then three times the root of the mean clipped square. None without scatter.
-fn winsorised_scale(u: &[f64]) -> Option<f64> {
-    let largest = u.iter().map(|v| v.abs()).fold(0.0, f64::max);
-    let mut scale = robust_scale(u).max(1e-3 * largest);
-    if !(scale.is_finite() && scale > 0.0) {
-        return None;
+    /// Points in the window.
+    pub fn len(&self) -> usize {
+        self.points.len()
     }
-    for _ in 0..3 {
-        let sum: f64 = u.iter().map(|v| v.clamp(-CLIP * scale, CLIP * scale).powi(2)).sum();
-        scale = (sum / count(u.len()) / CLIPPED_VARIANCE).sqrt();
+
+    /// Whether the window holds no point (it never does once built).
+    pub fn is_empty(&self) -> bool {
+        self.points.is_empty()
     }
-    Some(scale)
+
+    /// Age of the newest point, days.
+    pub fn newest_age(&self) -> f64 {
+        self.points.last().map_or(f64::NEG_INFINITY, |point| point.x)
+    }
+
+    /// The frame of the last refit.
+    pub fn frame(&self) -> &Frame {
+        &self.frame
+    }
+
+    /// Leverage and fitted innovation of point j in the window's own regression.
+    pub(crate) fn fitted(&self, j: usize) -> (f64, f64) {
+        let p = self.frame.parameters();
+        let jt = &self.points[j].jt;
+        let mut leverage = 0.0;
+        let mut fit = 0.0;
+        for a in 0..p {
+            fit += jt[a] * self.beta[a];
+            for c in 0..p {
+                leverage += jt[a] * self.g_inverse[a][c] * jt[c];
+            }
+        }
+        (leverage, fit)
+    }
+
+    /// Projects a candidate column out of the curve: returns numerator Dᵀuc − Sᵀbeta and
+    /// denominator DᵀD − SᵀG⁻¹S, where S = JtᵀD.
+    pub(crate) fn project(&self, cross: f64, square: f64, s: &Coefficients) -> (f64, f64) {
+        let p = self.frame.parameters();
+        let mut numerator = cross;
+        let mut denominator = square;
+        for a in 0..p {
+            numerator -= s[a] * self.beta[a];
+            for c in 0..p {
+                denominator -= s[a] * self.g_inverse[a][c] * s[c];
+            }
+        }
+        (numerator, denominator)
+    }
+
+    /// t² of a candidate that lowers the residual sum of squares by `gain`.
+    pub(crate) fn t_of_gain(&self, gain: f64) -> f64 {
+        (gain / ((self.rss - gain) / self.nu).max(1e-12)).sqrt()
+    }
+
+    /// Estimates the size of a candidate effect with large residuals clipped *about the
+    /// alternative* (the scan clips about the curve, which shortens large effects).
+    ///
+    /// # Arguments
+    /// `column` — whitened candidate value of point j ≥ 1.
+    /// # Numerics
+    /// Huber's modified residuals at fixed scale: convex, ten Gauss–Newton steps.
+    pub(crate) fn effect(&self, column: impl Fn(usize) -> f64) -> f64 {
+        let p = self.frame.parameters();
+        let mut s: Coefficients = [0.0; COEFFICIENTS_MAX];
+        let mut square = 0.0;
+        for j in 1..self.points.len() {
+            let d = column(j);
+            square += d * d;
+            for a in 0..p {
+                s[a] += d * self.points[j].jt[a];
+            }
+        }
+        let (_, denominator) = self.project(0.0, square, &s);
+        if denominator <= 1e-10 * square {
+            return 0.0;
+        }
+        let (mut size, mut beta) = (0.0, [0.0; COEFFICIENTS_MAX]);
+        for step in 0..10 {
+            let mut cross = 0.0;
+            let mut b = [0.0; COEFFICIENTS_MAX];
+            for j in 1..self.points.len() {
+                let point = &self.points[j];
+                let d = column(j);
+                let mut r = point.u - size * d;
+                for a in 0..p {
+                    r -= beta[a] * point.jt[a];
+                }
+                // The first step starts from plain least squares, so that no effect is clipped.
+                let r = if step == 0 { r } else { r.clamp(-CLIP, CLIP) };
+                cross += d * r;
+                for a in 0..p {
+                    b[a] += point.jt[a] * r;
+                }
+            }
+            let mut move_ = cross;
+            let mut g_b = [0.0; COEFFICIENTS_MAX];
+            for a in 0..p {
+                g_b[a] = (0..p).map(|c| self.g_inverse[a][c] * b[c]).sum();
+                move_ -= s[a] * g_b[a];
+            }
+            move_ /= denominator;
+            size += move_;
+            for a in 0..p {
+                let g_s: f64 = (0..p).map(|c| self.g_inverse[a][c] * s[c]).sum();
+                beta[a] += g_b[a] - g_s * move_;
+            }
+        }
+        if size.is_finite() { size } else { 0.0 }
+    }
+
+    fn fill(&mut self, x: &[f64], y: &[f64]) -> bool {
+        assert_eq!(x.len(), y.len(), "one deviation per age");
+        let finite = x.iter().chain(y).all(|v| v.is_finite());
+        if x.len() < super::frame::POINTS_MIN || !finite || x.windows(2).any(|w| w[1] < w[0]) {
+            return false;
+        }
+        self.points.clear();
+        let mut last: Option<Point> = None;
+        for (&x, &y) in x.iter().zip(y) {
+            let point = self.point(x, y, last.as_ref());
+            self.points.push(point);
+            last = Some(point);
+        }
+        self.solve();
+        true
+    }
+
+    fn point(&self, x: f64, y: f64, last: Option<&Point>) -> Point {
+        let frame = &self.frame;
+        let t = (x - frame.origin_days) / frame.spacing_days;
+        let mut point = Point {
+            x,
+            t,
+            ratio: 1.0,
+            e: frame.residual(x, y),
+            tangent: frame.tangent(x),
+            u: 0.0,
+            uc: 0.0,
+            jt: [0.0; COEFFICIENTS_MAX],
+            a1: 0.0,
+            b1: 0.0,
+            t1: 0.0,
+        };
+        if let Some(last) = last {
+            point.ratio = serial::spacing_ratio(x - last.x, frame.spacing_days);
+            let (f, weight) = frame.link(point.ratio);
+            let w = weight / frame.noise;
+            // ± 1e6 sigmas: sums of squares stay finite whatever arrives.
+            point.u = (w * (point.e - f * last.e)).clamp(-1e6, 1e6);
+            point.uc = point.u.clamp(-CLIP, CLIP);
+            for a in 0..frame.parameters() {
+                point.jt[a] = w * (point.tangent[a] - f * last.tangent[a]);
+            }
+            (point.a1, point.b1, point.t1) = (w, w * (1.0 - f), w * (t - f * last.t));
+        }
+        point
+    }
+
+    fn solve(&mut self) {
+        let p = self.frame.parameters();
+        let mut g: Matrix = [[0.0; ORDER_MAX]; ORDER_MAX];
+        let mut b = [0.0; ORDER_MAX];
+        let mut square = 0.0;
+        self.regular = true;
+        for point in &self.points[1..] {
+            self.regular &= (point.ratio - 1.0).abs() <= serial::REGULAR_TOLERANCE;
+            square += point.uc * point.uc;
+            for a in 0..p {
+                b[a] += point.jt[a] * point.uc;
+                for c in 0..=a {
+                    g[a][c] += point.jt[a] * point.jt[c];
+                }
+            }
+        }
+        for a in 0..p {
+            for c in 0..a {
+                g[c][a] = g[a][c];
+            }
+            // A tangent without a direction of its own takes no part.
+            g[a][a] = if g[a][a] > 0.0 { g[a][a] * (1.0 + 1e-13) } else { 1.0 };
+        }
+        self.g_inverse = inverse(&g, p).unwrap_or([[0.0; ORDER_MAX]; ORDER_MAX]);
+        self.rss = square;
+        for a in 0..p {
+            self.beta[a] = (0..p).map(|c| self.g_inverse[a][c] * b[c]).sum();
+            self.rss -= b[a] * self.beta[a];
+        }
+        self.rss = self.rss.max(0.0);
+        self.nu = (self.points.len() - 2 - p) as f64;
+    }
 }

@@ -1,7 +1,7 @@
 //! Lives of one store, one after the other, without a broker: what a start makes of what it finds.
 
 use super::*;
-use crate::drift::structure::tests::noise;
+use crate::drift::structure::simulate::noise;
 use crate::service::clock::Clock;
 use crate::service::desk::{Arrival, Desk, Put};
 use crate::service::settings::Environment;
