@@ -14,13 +14,8 @@ use fastrand::Rng;
 use std::hint::black_box;
 
 /// The families of the watch's default settings, in their order.
-const FAMILIES: [Family; 5] = [
-    Family::Logarithmic,
-    Family::Power,
-    Family::OffsetPower,
-    Family::Linear,
-    Family::Exponential,
-];
+const FAMILIES: [Family; 5] =
+    [Family::Logarithmic, Family::Power, Family::OffsetPower, Family::Linear, Family::Exponential];
 /// Correlation of neighbouring points, of the noise and as the channel knows it.
 const RHO: f64 = 0.3;
 /// Seed of all noise.

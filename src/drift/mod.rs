@@ -1,6 +1,7 @@
 //! The mathematics of one window: slices in, values out. Knows no channel, no clock, no unit name.
 
 pub mod choose;
+pub mod confidence;
 pub mod family;
 pub mod fit;
 pub mod forecast;

@@ -1,7 +1,7 @@
 //! Dependence of residuals in time: one number, the correlation at the median spacing.
 
 /// Longest memory considered: correlations above this are held there.
-const PHI_MAX: f64 = 0.97;
+pub const PHI_MAX: f64 = 0.97;
 
 /// From so many residuals on the correction for bias is smaller than what it corrects (own rule).
 const CORRECTED_FROM: usize = 20;
