@@ -5,7 +5,8 @@ use crate::drift::family::{Coefficients, Family};
 use crate::drift::lanes::{about, dot, sum};
 use crate::drift::least_squares::solve_columns;
 use crate::drift::outcome::{EXPONENT, FitOutcome, Undetermined};
-use crate::drift::robust::{Target, power};
+use crate::drift::robust::Target;
+use crate::drift::robust::shape::exponentials;
 use crate::drift::serial::count;
 use crate::drift::workspace::refill;
 
@@ -92,14 +93,21 @@ impl Target<'_> {
             Family::Exponential => self.time_constants(),
             _ => self.exponents(),
         };
-        let k = self.best_place(&grid);
+        let place = self.best_place(&grid);
+        let k = match self.family {
+            Family::OffsetPower if place.abs() < EXPONENT_START_MIN => {
+                EXPONENT_START_MIN.copysign(place)
+            }
+            Family::Exponential => -(-place).exp(),
+            _ => place,
+        };
         Ok(self.coefficients(k, mean))
     }
 
-    /// The coefficients with the smallest sum of squares with the nonlinear one given (tau itself).
+    /// The coefficients with the smallest sum of squares with the nonlinear one given.
     pub fn project_at(&mut self, k: f64) -> Coefficients {
         let mean = self.centred();
-        self.coefficients(if self.family == Family::Exponential { k.ln() } else { k }, mean)
+        self.coefficients(k, mean)
     }
 
     /// Puts y less its mean, where the family has a constant, in place of clipped residuals.
@@ -187,16 +195,11 @@ impl Target<'_> {
         0.5 * (a + b)
     }
 
-    fn explained_at(&mut self, k: f64) -> f64 {
-        self.fill_column(k);
-        self.explained(&self.scratch[0])
-    }
-
-    /// x^k or e^(−u/tau) into the first buffer.
-    fn fill_column(&mut self, k: f64) {
-        let rate = if self.family == Family::Exponential { -(-k).exp() } else { k };
+    fn explained_at(&mut self, place: f64) -> f64 {
+        let k = if self.family == Family::Exponential { -(-place).exp() } else { place };
         self.scratch[0].resize(self.ages.len(), 0.0);
-        power(&mut self.scratch[0], self.ages, rate);
+        exponentials(&mut self.scratch[0], self.ages, k);
+        self.explained(&self.scratch[0])
     }
 
     /// The sum of squares that a line on this column explains; 0 where it is not finite.
@@ -210,19 +213,17 @@ impl Target<'_> {
         if self.family == Family::Power { 0.0 } else { sum(column) / count(column.len()) }
     }
 
-    /// The family's own coefficients with the nonlinear one at `k`.
+    /// The shape's coefficients with the nonlinear one at `k`.
     fn coefficients(&mut self, k: f64, mean: f64) -> Coefficients {
-        let near_zero = self.family == Family::OffsetPower && k.abs() < EXPONENT_START_MIN;
-        let k = if near_zero { EXPONENT_START_MIN.copysign(k) } else { k };
-        self.fill_column(k);
-        let centre = self.centre(&self.scratch[0]);
-        let (squares, products) = about(&self.scratch[0], centre, self.clipped);
+        self.fill_columns(k);
+        let column = &self.columns[self.linear() - 1];
+        let centre = self.centre(column);
+        let (squares, products) = about(column, centre, self.clipped);
         let slope = products / squares;
-        match self.family {
-            Family::Power => [slope, k, 0.0, 0.0],
-            Family::OffsetPower => [mean - slope * centre, slope, k, 0.0],
-            // The curve rises with 1 − e^(−u/tau).
-            _ => [mean + slope * (1.0 - centre), -slope, k.exp(), 0.0],
+        if self.family == Family::Power {
+            [slope, k, 0.0, 0.0]
+        } else {
+            [mean - slope * centre, slope, k, 0.0]
         }
     }
 }
