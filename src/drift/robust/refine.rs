@@ -25,6 +25,8 @@ const NEAR: f64 = 1e-4;
 const ROUNDING: f64 = 1e-14;
 /// Residuals whose squares are below this share of y's are rounding noise.
 const ROUNDING_SQUARED: f64 = 1e-28;
+/// A step is corrected by at most these factors.
+const SECANT: std::ops::Range<f64> = 0.2..5.0;
 /// An exponent beyond this is out of all bounds; the step that went there is not followed.
 const EXPONENT_LOST: f64 = 60.0;
 
@@ -36,6 +38,22 @@ pub(crate) struct Refined {
     pub steps: usize,
     /// Whether it went there straight: no step was halved, and it settled.
     pub straight: bool,
+}
+
+/// The nonlinear coefficient's last place and the step that was wanted there.
+#[derive(Clone, Copy, Debug, Default)]
+struct Secant(Option<(f64, f64)>);
+
+impl Secant {
+    /// The step to where, going by this one and the last, no step will be wanted: Newton without the
+    /// curve's second derivatives, and with a limit that follows, goes too far or not far enough by
+    /// about the same share each time.
+    fn corrected(&mut self, place: f64, step: f64) -> f64 {
+        let last = self.0.replace((place, step));
+        let slope = last.map_or(-1.0, |(before, wanted)| (step - wanted) / (place - before));
+        let share = -slope.recip();
+        if SECANT.contains(&share) { share * step } else { step }
+    }
 }
 
 impl Target<'_> {
@@ -53,6 +71,7 @@ impl Target<'_> {
         let p = self.family.parameter_count();
         self.evaluate(&theta);
         let (mut limit, mut last, mut straight) = (f64::INFINITY, None, true);
+        let mut secant = Secant::default();
         for step in 1..=STEPS_MAX {
             if step <= STEPS_RESCALED {
                 limit = self.limit();
@@ -64,9 +83,10 @@ impl Target<'_> {
             let Some((mut change, length)) = self.newton(p, limit) else {
                 return Err(FitOutcome::Entangled);
             };
-            // The nonlinear coefficient's column came without its factor.
             if let Some(factor) = self.factor(&theta) {
-                change[p - 1] /= factor;
+                // The nonlinear coefficient's column came without its factor.
+                let whole = change[p - 1] / factor;
+                change[p - 1] = secant.corrected(theta[p - 1], whole);
             }
             let sd = if limit.is_finite() {
                 limit / CLIP_WINSOR
