@@ -6,8 +6,9 @@
 use asfound::drift::choose::choose;
 use asfound::drift::family::Family;
 use asfound::drift::fit::{Fit, fit};
-use asfound::drift::forecast::{Forecaster, fit_all, own_correlation, sandwich};
+use asfound::drift::forecast::{Forecaster, fit_all};
 use asfound::drift::reach::assess;
+use asfound::drift::sandwich::{own_correlation, sandwich};
 use asfound::drift::serial::{effective_count, spacing_of};
 use criterion::{BenchmarkId, Criterion, criterion_group, criterion_main};
 use fastrand::Rng;

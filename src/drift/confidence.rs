@@ -5,8 +5,8 @@
 
 use crate::drift::family::Coefficients;
 use crate::drift::fit::Fit;
-use crate::drift::forecast::{own_correlation, sandwich};
 use crate::drift::interval::{Interval, student_quantile};
+use crate::drift::sandwich::{own_correlation, sandwich};
 use crate::drift::serial::{PHI_MAX, count, effective_count, spacing_of};
 use nalgebra::{Matrix4, Vector4};
 

@@ -17,6 +17,7 @@ pub(crate) mod reference;
 pub mod refine;
 pub mod residual_tests;
 pub mod robust;
+pub mod sandwich;
 pub mod serial;
 pub mod structure;
 pub mod tails;

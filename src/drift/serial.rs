@@ -23,10 +23,11 @@ const SEARCH_STEPS: usize = 22;
 /// Median spacing in days (> 0), and ratios of the length of `x`; the first is 1 by convention.
 pub fn spacing_of(x: &[f64]) -> (f64, Vec<f64>) {
     assert!(x.len() >= 2, "spacing needs two ages");
-    let mut sorted: Vec<f64> = x.windows(2).map(|w| w[1] - w[0]).collect();
-    let raw = sorted.clone();
-    sorted.sort_by(f64::total_cmp);
-    let median = sorted[sorted.len() / 2].max(f64::MIN_POSITIVE);
+    let raw: Vec<f64> = x.windows(2).map(|w| w[1] - w[0]).collect();
+    let mut sorted = raw.clone();
+    let middle = sorted.len() / 2;
+    let (_, median, _) = sorted.select_nth_unstable_by(middle, f64::total_cmp);
+    let median = median.max(f64::MIN_POSITIVE);
     let ratios = std::iter::once(1.0).chain(raw.iter().map(|d| d / median)).collect();
     (median, ratios)
 }
