@@ -20,6 +20,9 @@ use crate::drift::robust::start::TAU_MAX;
 use crate::drift::serial::count;
 use crate::drift::workspace::{Room, Workspace, refill};
 
+/// A refinement that takes more steps than this did not begin near its end.
+const STEPS_NEAR_MAX: usize = 12;
+
 /// One family on one window, in its frame.
 pub(crate) struct Target<'a> {
     pub family: Family,
@@ -99,7 +102,53 @@ pub fn fit_robust(family: Family, x: &[f64], y: &[f64], workspace: &mut Workspac
     told(target.fit(), family, x)
 }
 
+/// Fits one family as the watch does, beginning where the fit of an earlier window ended.
+///
+/// # Arguments
+/// As for [`fit_robust`]; `previous` — a fit of the channel's window as it was at the last refit. Only
+/// its exponent or time constant is used: the rest follows from it by a line.
+///
+/// # Outcomes
+/// Those of [`fit_robust`], the coefficients the same within 10⁻⁶ standard errors, unless the sum of
+/// squares has two minima and the better one has changed sides. Whatever is not plain is fitted anew:
+/// another family, a curve near the bounds of its family, a refinement that does not go straight.
+///
+/// # Numerics
+/// Saves the grid, a quarter of the cost at most; families linear in their coefficients need no start
+/// and gain nothing.
+pub fn fit_from(
+    family: Family,
+    x: &[f64],
+    y: &[f64],
+    previous: &Fit,
+    workspace: &mut Workspace,
+) -> FitOutcome {
+    if let Some(declined) = declined(family, x, y) {
+        return declined;
+    }
+    if previous.family == family
+        && let Some(mut target) = Target::new(family, x, y, workspace)
+        && let Some(fit) = target.fit_near(previous)
+    {
+        return FitOutcome::Fitted(Box::new(fit));
+    }
+    fit_robust(family, x, y, workspace)
+}
+
 impl Target<'_> {
+    /// The fit whose start is known; None where it had better be looked for.
+    fn fit_near(&mut self, previous: &Fit) -> Option<Fit> {
+        let first = self.project_at(self.nonlinear(&previous.theta)?);
+        let refined = self.refine(first).ok()?;
+        let plain = refined.straight && refined.steps <= STEPS_NEAR_MAX;
+        if !plain || !self.well_within_bounds(&refined.theta) {
+            return None;
+        }
+        let power = self.family == Family::Power;
+        let start = if power { self.log_log_line() } else { self.told(&first) };
+        self.finish(&refined, start).ok()
+    }
+
     fn fit(&mut self) -> Result<Fit, FitOutcome> {
         let family = self.family;
         let through_logarithms = if family == Family::Power { self.log_log_line() } else { None };
@@ -148,3 +197,6 @@ impl Target<'_> {
         .finish()
     }
 }
+
+#[cfg(test)]
+mod tests;

@@ -6,7 +6,7 @@ use crate::drift::fit::{CLIP_WINSOR, Fit};
 use crate::drift::lanes::dot;
 use crate::drift::robust::scale::robust_scale_in;
 use crate::drift::serial::{count, lag_correlation};
-use crate::drift::workspace::{Room, Workspace, refill};
+use crate::drift::workspace::{Room, Workspace};
 use nalgebra::Matrix4;
 
 /// Returns the correlation of a fit's residuals, clipped at 3 robust standard deviations, at the median
@@ -87,8 +87,8 @@ pub fn sandwich_in(
         }
         scale[k] = length.recip();
         columns[k].iter_mut().for_each(|v| *v *= scale[k]);
-        sum_of_the_past(&columns[k], decays, &mut scratch[k]);
     }
+    sum_the_past(columns, decays, scratch);
     let (mut squares, mut meat) = (Matrix4::identity(), Matrix4::zeros());
     for i in 0..p {
         for k in 0..p {
@@ -110,17 +110,20 @@ pub fn sandwich_in(
     covariance.iter().all(|v| v.is_finite()).then_some((covariance, noise))
 }
 
-/// For each reading, the earlier entries of the column, each times what is left of it by then.
-fn sum_of_the_past(column: &[f64], decays: &[f64], past: &mut Vec<f64>) {
-    let mut sum = 0.0;
-    let before = std::iter::once(&0.0).chain(column);
-    refill(
-        past,
-        before.zip(decays).map(|(before, decay)| {
-            sum = (sum + before) * decay;
-            sum
-        }),
-    );
+/// For each column and reading, the earlier entries, each times what is left of it by then.
+fn sum_the_past(columns: &[Vec<f64>; COEFFICIENTS_MAX], decays: &[f64], past: &mut [Vec<f64>]) {
+    for past in past.iter_mut() {
+        past.clear();
+        past.resize(decays.len(), 0.0);
+    }
+    // All columns in one go: each sum waits for its own last value only.
+    let mut sums = [0.0; COEFFICIENTS_MAX];
+    for j in 1..decays.len() {
+        for k in 0..COEFFICIENTS_MAX {
+            sums[k] = (sums[k] + columns[k][j - 1]) * decays[j];
+            past[k][j] = sums[k];
+        }
+    }
 }
 
 #[cfg(test)]

@@ -16,9 +16,9 @@ const STEPS_RESCALED: usize = 30;
 /// Most halvings of one step before the fit counts as settled.
 const HALVINGS_MAX: usize = 20;
 /// Settled when no more than this is left to go, in standard errors.
-const SETTLED: f64 = 1e-7;
+const SETTLED: f64 = 1e-8;
 /// A step is never expected to leave less than this share of itself to go.
-const SHARE_LEFT_MIN: f64 = 0.02;
+const SHARE_LEFT_MIN: f64 = 0.05;
 /// Steps shorter than this, in standard errors, are taken whole: the cost cannot tell them apart.
 const NEAR: f64 = 1e-4;
 /// Settled too when no coefficient moves by more than this share of itself.
@@ -62,7 +62,7 @@ impl Target<'_> {
     /// # Numerics
     /// Newton on Huber's loss by scaled normal equations, the limit taken anew at each step; steps are
     /// halved while they raise the loss. Settled when what is left to go, judged by how fast the steps
-    /// shrink, is below 10⁻⁷ standard errors. One `exp` for each reading and step.
+    /// shrink, is below 10⁻⁸ standard errors. One `exp` for each reading and step.
     ///
     /// # Source
     /// Huber (1981), Robust Statistics, ch. 7. From memory.

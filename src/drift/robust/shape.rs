@@ -7,11 +7,18 @@
 
 use crate::drift::family::{Coefficients, Family};
 use crate::drift::lanes::add;
+use crate::drift::outcome::EXPONENT;
 use crate::drift::robust::Target;
+use crate::drift::robust::start::TAU_MAX;
 use crate::drift::workspace::refill;
 
 /// Below this size of kt, h and its derivative are summed as series: six terms leave 10⁻¹⁴.
 const SERIES_BELOW: f64 = 0.02;
+/// Distance from the bounds of the exponent, and from 0, within which a curve is fitted anew.
+const CLEAR: f64 = 0.5;
+const CLEAR_OF_ZERO: f64 = 0.02;
+/// Time constants outside of these shares of the range of ages are looked for anew.
+const TAU_CLEAR: (f64, f64) = (0.04, 0.5 * TAU_MAX);
 
 impl Target<'_> {
     /// Number of leading coefficients in which the curve is linear.
@@ -90,13 +97,25 @@ impl Target<'_> {
         }
     }
 
-    /// The nonlinear coefficient of the shape, from the family's own.
-    pub fn nonlinear(family: Family, inner: &Coefficients) -> Option<f64> {
-        match family {
-            Family::Power => Some(inner[1]),
-            Family::OffsetPower => Some(inner[2]),
-            Family::Exponential => Some(-inner[2].recip()),
+    /// The nonlinear coefficient of the shape, from the family's own in the units of the data.
+    pub fn nonlinear(&self, outer: &Coefficients) -> Option<f64> {
+        match self.family {
+            Family::Power => Some(outer[1]),
+            Family::OffsetPower => Some(outer[2]),
+            Family::Exponential => Some(-self.frame.scale / outer[2]),
             _ => None,
+        }
+    }
+
+    /// Whether the nonlinear coefficient keeps clear of where the family's bounds are.
+    pub fn well_within_bounds(&self, theta: &Coefficients) -> bool {
+        let [_, b, k, _] = *theta;
+        let clear = |k: f64| EXPONENT.0 + CLEAR < k && k < EXPONENT.1 - CLEAR;
+        match self.family {
+            Family::Power => clear(b),
+            Family::OffsetPower => clear(k) && k.abs() > CLEAR_OF_ZERO,
+            Family::Exponential => (TAU_CLEAR.0..TAU_CLEAR.1).contains(&-k.recip()),
+            _ => true,
         }
     }
 
