@@ -11,6 +11,8 @@ use nalgebra::{Matrix4, Vector4};
 
 /// Most steps of the refinement; it settles in about four.
 const STEPS_MAX: usize = 60;
+/// From then on the limit too goes by secants: it and the curve may drive each other to and fro.
+const STEPS_FOLLOWED: usize = 6;
 /// From then on the limit is held: a refinement that has not settled goes round in circles.
 const STEPS_RESCALED: usize = 30;
 /// Most halvings of one step before the fit counts as settled.
@@ -71,10 +73,15 @@ impl Target<'_> {
         let p = self.family.parameter_count();
         self.evaluate(&theta);
         let (mut limit, mut last, mut straight) = (f64::INFINITY, None, true);
-        let mut secant = Secant::default();
+        let (mut secant, mut secant_limit) = (Secant::default(), Secant::default());
         for step in 1..=STEPS_MAX {
             if step <= STEPS_RESCALED {
-                limit = self.limit();
+                let fresh = self.limit();
+                limit = if step > STEPS_FOLLOWED && fresh.is_finite() && limit.is_finite() {
+                    (limit + secant_limit.corrected(limit, fresh - limit)).max(0.5 * fresh)
+                } else {
+                    fresh
+                };
             }
             let before = self.cost(limit);
             if before <= rounding {
