@@ -5,11 +5,13 @@
 
 use asfound::drift::choose::choose;
 use asfound::drift::family::Family;
-use asfound::drift::fit::{Fit, fit};
-use asfound::drift::forecast::{Forecaster, fit_all};
-use asfound::drift::reach::assess;
-use asfound::drift::sandwich::{own_correlation, sandwich};
+use asfound::drift::fit::{Fit, FitOutcome};
+use asfound::drift::forecast::{Forecaster, fit_all_in};
+use asfound::drift::reach::assess_in;
+use asfound::drift::robust::{fit_from, fit_robust};
+use asfound::drift::sandwich::{decays, own_correlation_in, sandwich_in};
 use asfound::drift::serial::{effective_count, spacing_of};
+use asfound::drift::workspace::Workspace;
 use criterion::{BenchmarkId, Criterion, criterion_group, criterion_main};
 use fastrand::Rng;
 use std::hint::black_box;
@@ -38,33 +40,77 @@ fn window(n: u32) -> (Vec<f64>, Vec<f64>) {
 }
 
 /// All that a refit computes about the curve.
-fn refit(x: &[f64], y: &[f64]) -> (Vec<Fit>, [f64; 4]) {
-    let fits = fit_all(x, y, &FAMILIES);
-    let (_, spacing) = spacing_of(x);
-    let chosen = &fits[choose(&fits, effective_count(x.len(), RHO), None).chosen];
-    let own = own_correlation(chosen, x, y, &spacing);
-    let (covariance, _) = sandwich(chosen, x, &spacing, RHO.max(own)).expect("a power curve");
-    let errors = chosen.standard_errors_of(&covariance);
+fn refit(x: &[f64], y: &[f64], workspace: &mut Workspace) -> (Vec<Fit>, [f64; 4]) {
+    let fits = fit_all_in(x, y, &FAMILIES, workspace);
+    let errors = errors(&fits, x, y, workspace);
     (fits, errors)
 }
 
+/// Chooses, and returns the chosen curve's standard errors with dependence.
+fn errors(fits: &[Fit], x: &[f64], y: &[f64], workspace: &mut Workspace) -> [f64; 4] {
+    let (_, spacing) = spacing_of(x);
+    let chosen = &fits[choose(fits, effective_count(x.len(), RHO), None).chosen];
+    let own = own_correlation_in(chosen, x, y, &spacing, workspace);
+    let decays = decays(&spacing, RHO.max(own));
+    let (covariance, _) = sandwich_in(chosen, x, &decays, workspace).expect("a power curve");
+    chosen.standard_errors_of(&covariance)
+}
+
 fn cold(criterion: &mut Criterion) {
-    let mut group = criterion.benchmark_group("refit-cold");
+    let mut group = criterion.benchmark_group("refit");
+    let mut workspace = Workspace::default();
     for n in [64, 128, 256, 512, 1024] {
         let (x, y) = window(n);
         group.bench_with_input(BenchmarkId::from_parameter(n), &n, |bencher, _| {
-            bencher.iter(|| refit(black_box(&x), black_box(&y)));
+            // The logarithms of other ages: a window that has moved on knows none of its own.
+            let (other, _) = window(20);
+            bencher.iter(|| {
+                fit_robust(Family::Logarithmic, &other, &other, &mut workspace);
+                refit(black_box(&x), black_box(&y), &mut workspace)
+            });
         });
     }
     group.finish();
 }
 
+/// A refit whose starts are known from the window as it was a day ago.
+fn known(criterion: &mut Criterion) {
+    let mut group = criterion.benchmark_group("refit-known-start");
+    let mut workspace = Workspace::default();
+    let (x, y) = window(536);
+    let previous = fit_all_in(&x[..512], &y[..512], &FAMILIES, &mut workspace);
+    let (x, y) = (&x[24..], &y[24..]);
+    group.bench_function("512", |bencher| {
+        let (other, _) = window(20);
+        bencher.iter(|| {
+            fit_robust(Family::Logarithmic, &other, &other, &mut workspace);
+            let mut fits = Vec::with_capacity(FAMILIES.len());
+            for previous in &previous {
+                let family = previous.family;
+                if let FitOutcome::Fitted(fit) = fit_from(family, x, y, previous, &mut workspace) {
+                    fits.push(*fit);
+                }
+            }
+            errors(&fits, x, y, &mut workspace)
+        });
+    });
+    group.bench_function("512 anew", |bencher| {
+        let (other, _) = window(20);
+        bencher.iter(|| {
+            fit_robust(Family::Logarithmic, &other, &other, &mut workspace);
+            refit(x, y, &mut workspace)
+        });
+    });
+    group.finish();
+}
+
 fn family(criterion: &mut Criterion) {
-    let mut group = criterion.benchmark_group("family-cold-512");
+    let mut group = criterion.benchmark_group("family-512");
+    let mut workspace = Workspace::default();
     let (x, y) = window(512);
     for family in FAMILIES {
         group.bench_function(family.name(), |bencher| {
-            bencher.iter(|| fit(family, black_box(&x), black_box(&y), true));
+            bencher.iter(|| fit_robust(family, black_box(&x), black_box(&y), &mut workspace));
         });
     }
     group.finish();
@@ -72,17 +118,21 @@ fn family(criterion: &mut Criterion) {
 
 fn ahead(criterion: &mut Criterion) {
     let mut group = criterion.benchmark_group("ahead");
+    let mut workspace = Workspace::default();
     for n in [200, 512] {
         let (x, y) = window(n);
         group.bench_with_input(BenchmarkId::new("reach", n), &n, |bencher, _| {
-            bencher.iter(|| assess(black_box(&x), black_box(&y), &FAMILIES, RHO));
+            bencher
+                .iter(|| assess_in(black_box(&x), black_box(&y), &FAMILIES, RHO, &mut workspace));
         });
         group.bench_with_input(BenchmarkId::new("forecaster", n), &n, |bencher, _| {
-            bencher.iter(|| Forecaster::new(black_box(&x), black_box(&y), &FAMILIES, RHO));
+            bencher.iter(|| {
+                Forecaster::new_in(black_box(&x), black_box(&y), &FAMILIES, RHO, &mut workspace)
+            });
         });
     }
     group.finish();
 }
 
-criterion_group!(benches, cold, family, ahead);
+criterion_group!(benches, cold, known, family, ahead);
 criterion_main!(benches);
