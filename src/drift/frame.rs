@@ -57,7 +57,7 @@ impl Frame {
 
     /// The same for families with ln x, from the logarithms of the ages.
     pub(crate) fn of_logarithms(ln_x: &[f64]) -> Option<Frame> {
-        let varied = ln_x.windows(2).any(|pair| pair[0] < pair[1] || pair[0] > pair[1]);
+        let varied = ln_x.iter().any(|l| (l - ln_x[0]).abs() > 0.0);
         let frame = Frame { centre: 0.0, scale: (sum(ln_x) / count(ln_x.len())).exp() };
         (varied && frame.scale.is_finite() && frame.scale > 0.0).then_some(frame)
     }

@@ -90,8 +90,7 @@ pub(crate) fn solve_columns(
     for k in 0..p {
         let (this, later) = room[k..].split_first_mut().expect("p columns");
         let length = dot(this, this).sqrt();
-        // Not "<": a length that is no number is refused as well.
-        if !(length >= RANK_MIN) {
+        if length.is_nan() || length < RANK_MIN {
             return None;
         }
         this.iter_mut().for_each(|v| *v /= length);

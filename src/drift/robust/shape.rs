@@ -56,8 +56,8 @@ impl Target<'_> {
             self.fill_columns(k);
         }
         refill(self.residuals, self.y.iter().copied());
-        for k in 0..self.linear() {
-            add(self.residuals, -theta[k], &self.columns[k]);
+        for (theta, column) in theta.iter().zip(&*self.columns).take(self.linear()) {
+            add(self.residuals, -theta, column);
         }
     }
 
