@@ -5,11 +5,14 @@
 //! silence and the shelf follow the shell's time.
 
 use crate::drift::choose::{Choice, choose};
-use crate::drift::fit::{Fit, FitOutcome, fit};
-use crate::drift::forecast::{Forecaster, own_correlation, sandwich};
-use crate::drift::reach::{Limit, Reach, assess};
+use crate::drift::fit::{Fit, FitOutcome};
+use crate::drift::forecast::Forecaster;
+use crate::drift::reach::{Limit, Reach, assess_in};
+use crate::drift::robust::fit_robust;
+use crate::drift::sandwich::{decays, own_correlation_in, sandwich_in};
 use crate::drift::serial::{count, effective_count, spacing_of};
 use crate::drift::structure::whitened::Whitened;
+use crate::drift::workspace::Workspace;
 use crate::watch::alert::{AlertBook, AlertEvent, Owner};
 use crate::watch::budget::Budget;
 use crate::watch::finding::Finding;
@@ -221,9 +224,10 @@ impl Channel {
                 (0.5 * self.stride + 0.5 * points(self.points_ever, self.points_at_refit)).max(1.0);
         }
         self.points_at_refit = self.points_ever;
+        let mut workspace = Workspace::default();
         let (mut fits, mut not_fitted) = (Vec::new(), Vec::new());
         for &family in &context.rules.families {
-            match fit(family, &x, &y, true) {
+            match fit_robust(family, &x, &y, &mut workspace) {
                 FitOutcome::Fitted(fit) => fits.push(*fit),
                 other => {
                     not_fitted.push((family.name().to_owned(), other.why_not().unwrap_or_default()))
@@ -237,17 +241,18 @@ impl Channel {
             let phi = self.residuals.phi(x.len());
             let best = choose(&fits, effective_count(x.len(), phi), current);
             let chosen = &fits[best.chosen];
-            let own = own_correlation(chosen, &x, &y, &spacing);
+            let own = own_correlation_in(chosen, &x, &y, &spacing, &mut workspace);
             let place = self.place_free(context);
             self.residuals.refitted(&place, x.len(), own);
-            if let Some((v, _)) = sandwich(chosen, &x, &spacing, phi.max(own).clamp(0.0, 0.97)) {
+            let decays = decays(&spacing, phi.max(own).clamp(0.0, 0.97));
+            if let Some((v, _)) = sandwich_in(chosen, &x, &decays, &mut workspace) {
                 standard_errors = chosen.standard_errors_of(&v);
             }
             choice = Some(best);
         }
-        let reach = self.reach(context, &x, &y, fits.is_empty());
-        let forecaster =
-            Forecaster::new(&x, &y, &context.rules.families, self.residuals.phi(x.len()));
+        let reach = self.reach(context, &x, &y, fits.is_empty(), &mut workspace);
+        let phi = self.residuals.phi(x.len());
+        let forecaster = Forecaster::new_in(&x, &y, &context.rules.families, phi, &mut workspace);
         let said = forecaster.map_or_else(Said::default, |forecaster| {
             Said::of(&forecaster, &reach, context.rules, at, *x.last().unwrap_or(&0.0))
         });
@@ -256,7 +261,14 @@ impl Channel {
 
     /// Reach is assessed anew every tenth of the window, else carried on: how far ahead of its newest
     /// point a window like this one carries does not change faster than the window itself.
-    fn reach(&mut self, context: &Context<'_>, x: &[f64], y: &[f64], no_curve: bool) -> Reach {
+    fn reach(
+        &mut self,
+        context: &Context<'_>,
+        x: &[f64],
+        y: &[f64],
+        no_curve: bool,
+        workspace: &mut Workspace,
+    ) -> Reach {
         if no_curve {
             return Reach::none(Limit::NoCurve);
         }
@@ -270,7 +282,7 @@ impl Channel {
             return refit.reach.clone();
         }
         self.points_at_reach = self.points_ever;
-        assess(x, y, &context.rules.families, self.residuals.phi(x.len()))
+        assess_in(x, y, &context.rules.families, self.residuals.phi(x.len()), workspace)
     }
 
     fn place_free(&self, context: &Context<'_>) -> Place<'static> {
