@@ -91,7 +91,7 @@ impl<'a> Target<'a> {
 ///
 /// # Numerics
 /// Linear, logarithmic and power curves in the ages as they are. Start: a line, through logarithms
-/// where there are any, or by projection on a grid; see [`Target::refine`] for the rest. O(n p²).
+/// where there are any, or by projection on a grid; see `Target::refine` for the rest. O(n p²).
 pub fn fit_robust(family: Family, x: &[f64], y: &[f64], workspace: &mut Workspace) -> FitOutcome {
     if let Some(declined) = declined(family, x, y) {
         return declined;
@@ -114,8 +114,8 @@ pub fn fit_robust(family: Family, x: &[f64], y: &[f64], workspace: &mut Workspac
 /// another family, a curve near the bounds of its family, a refinement that does not go straight.
 ///
 /// # Numerics
-/// Saves the grid, a quarter of the cost at most; families linear in their coefficients need no start
-/// and gain nothing.
+/// Saves the grid, a sixth of the cost of all five curves; families linear in their coefficients need
+/// no start and gain nothing.
 pub fn fit_from(
     family: Family,
     x: &[f64],

@@ -56,7 +56,7 @@ pub fn lag_correlation(residuals: &[f64], spacing: &[f64], parameters: usize) ->
     ((n * raw + p) / (n - p - 2.0)).clamp(-1.0, PHI_MAX)
 }
 
-/// The same for one short series: below [`CORRECTED_FROM`] residuals the correction, which is right
+/// The same for one short series: below `CORRECTED_FROM` residuals the correction, which is right
 /// to the order of 1/n, would be all there is, and is left out.
 pub fn lag_correlation_short(residuals: &[f64], spacing: &[f64], parameters: usize) -> f64 {
     if residuals.len() >= CORRECTED_FROM {
