@@ -5,10 +5,15 @@
 //! newer half of the window with the whole. It does not yet know whether the future resembles the
 //! window: that is what the backtests of [`crate::drift::reach`] are for.
 
+pub use crate::drift::sandwich::{own_correlation, sandwich, winsorised};
+
 use crate::drift::choose::{Choice, choose};
-use crate::drift::family::{COEFFICIENTS_MAX, Family};
-use crate::drift::fit::{CLIP_WINSOR, Fit, FitOutcome, fit, robust_scale};
-use crate::drift::serial::{count, effective_count, lag_correlation, spacing_of};
+use crate::drift::family::Family;
+use crate::drift::fit::{Fit, FitOutcome};
+use crate::drift::robust::fit_robust;
+use crate::drift::sandwich::{decays, own_correlation_in, sandwich_in};
+use crate::drift::serial::{effective_count, spacing_of};
+use crate::drift::workspace::Workspace;
 use nalgebra::{Matrix4, Vector4};
 
 /// Families with less Akaike weight than this are left out.
@@ -59,18 +64,31 @@ impl Forecaster {
     /// Akaike-weighted mean and unconditional variance: Buckland, Burnham and Augustin (1997),
     /// Biometrics 53; contrast of the halves after Hausman (1978), own use. From memory.
     pub fn new(x: &[f64], y: &[f64], families: &[Family], phi: f64) -> Option<Forecaster> {
-        let fits = fit_all(x, y, families);
+        Forecaster::new_in(x, y, families, phi, &mut Workspace::default())
+    }
+
+    /// The same in a workspace.
+    pub fn new_in(
+        x: &[f64],
+        y: &[f64],
+        families: &[Family],
+        phi: f64,
+        workspace: &mut Workspace,
+    ) -> Option<Forecaster> {
+        let fits = fit_all_in(x, y, families, workspace);
         if fits.is_empty() || x.len() < 8 {
             return None;
         }
         let (_, spacing) = spacing_of(x);
         let best = choose(&fits, effective_count(x.len(), phi), None).chosen;
-        let phi = phi.max(own_correlation(&fits[best], x, y, &spacing)).clamp(0.0, 0.97);
+        let phi =
+            phi.max(own_correlation_in(&fits[best], x, y, &spacing, workspace)).clamp(0.0, 0.97);
         let choice = choose(&fits, effective_count(x.len(), phi), None);
+        let decays = decays(&spacing, phi);
         let mut noise = None;
         let mut members = Vec::new();
         for (i, fit) in fits.iter().enumerate() {
-            let Some((covariance, variance)) = sandwich(fit, x, &spacing, phi) else {
+            let Some((covariance, variance)) = sandwich_in(fit, x, &decays, workspace) else {
                 // A family whose uncertainty cannot be had makes no forecast; the others may.
                 continue;
             };
@@ -83,122 +101,78 @@ impl Forecaster {
         }
         let total: f64 = members.iter().map(|m| m.weight).sum();
         members.iter_mut().for_each(|m| m.weight /= total);
-        let half = newer_half(x, y, fits[choice.chosen].family, phi);
+        let half = newer_half(x, y, fits[choice.chosen].family, phi, workspace);
         Some(Forecaster { members, half, choice, noise: noise? })
     }
 
     /// The forecast at age `x`, days.
     pub fn at(&self, x: f64) -> Expected {
-        let value: f64 = self.members.iter().map(|m| m.weight * m.value(x)).sum();
-        let between: f64 = self
-            .members
-            .iter()
-            .map(|m| m.weight * (m.variance(x) + (m.value(x) - value).powi(2)))
+        let mut own = [(0.0, 0.0); Family::ALL.len()];
+        for (own, member) in own.iter_mut().zip(&self.members) {
+            *own = member.at(x);
+        }
+        let weighed = || self.members.iter().map(|m| m.weight).zip(own);
+        let value: f64 = weighed().map(|(weight, (value, _))| weight * value).sum();
+        let between: f64 = weighed()
+            .map(|(weight, (own, variance))| weight * (variance + (own - value).powi(2)))
             .sum();
-        let contrast = self
-            .half
-            .as_ref()
-            .map_or(0.0, |half| ((value - half.value(x)).powi(2) - half.variance(x)).max(0.0));
+        let contrast = self.half.as_ref().map_or(0.0, |half| {
+            let (newer, variance) = half.at(x);
+            ((value - newer).powi(2) - variance).max(0.0)
+        });
         Expected { value, sd: (self.noise + between + contrast).sqrt() }
     }
 }
 
 impl Member {
-    fn value(&self, x: f64) -> f64 {
-        self.fit.value(x)
-    }
-
-    fn variance(&self, x: f64) -> f64 {
-        let g = Vector4::from(self.fit.gradient(x));
-        g.dot(&(self.covariance * g)).max(0.0)
+    /// The curve's value and its variance.
+    fn at(&self, x: f64) -> (f64, f64) {
+        let (value, gradient) = self.fit.value_and_gradient(x);
+        let g = Vector4::from(gradient);
+        (value, g.dot(&(self.covariance * g)).max(0.0))
     }
 }
 
 /// Fits each family robustly and keeps those that could be fitted.
 pub fn fit_all(x: &[f64], y: &[f64], families: &[Family]) -> Vec<Fit> {
+    fit_all_in(x, y, families, &mut Workspace::default())
+}
+
+/// The same in a workspace.
+pub fn fit_all_in(
+    x: &[f64],
+    y: &[f64],
+    families: &[Family],
+    workspace: &mut Workspace,
+) -> Vec<Fit> {
     families
         .iter()
-        .filter_map(|&family| match fit(family, x, y, true) {
+        .filter_map(|&family| match fit_robust(family, x, y, workspace) {
             FitOutcome::Fitted(fit) => Some(*fit),
             _ => None,
         })
         .collect()
 }
 
-/// Returns the correlation of a fit's clipped residuals at the median spacing, bias-corrected.
-pub fn own_correlation(fit: &Fit, x: &[f64], y: &[f64], spacing: &[f64]) -> f64 {
-    lag_correlation(&winsorised(fit, x, y), spacing, fit.family.parameter_count())
-}
-
-/// Residuals clipped at 3 robust standard deviations.
-pub fn winsorised(fit: &Fit, x: &[f64], y: &[f64]) -> Vec<f64> {
-    let mut residuals = fit.residuals(x, y);
-    let limit = CLIP_WINSOR * robust_scale(&residuals);
-    if limit > 0.0 {
-        residuals.iter_mut().for_each(|r| *r = r.clamp(-limit, limit));
-    }
-    residuals
-}
-
-fn newer_half(x: &[f64], y: &[f64], family: Family, phi: f64) -> Option<Member> {
+fn newer_half(
+    x: &[f64],
+    y: &[f64],
+    family: Family,
+    phi: f64,
+    workspace: &mut Workspace,
+) -> Option<Member> {
     let from = x.len() / 2;
     let (x, y) = (&x[from..], &y[from..]);
-    let fit = fit_all(x, y, &[family]).pop()?;
+    let fit = fit_all_in(x, y, &[family], workspace).pop()?;
     let (_, spacing) = spacing_of(x);
-    let (covariance, _) = sandwich(&fit, x, &spacing, phi)?;
+    let (covariance, _) = sandwich_in(&fit, x, &decays(&spacing, phi), workspace)?;
     Some(Member { fit, weight: 1.0, covariance })
-}
-
-/// Returns the inner coefficients' covariance with serial dependence allowed for, and the noise
-/// variance; [`Fit::standard_errors_of`] turns it into the data's units.
-///
-/// V = s² (JᵀJ)⁻¹ JᵀRJ (JᵀJ)⁻¹, s² = RSS/(n − tr[(JᵀJ)⁻¹ JᵀRJ]), R_ij = phi^(|t_i − t_j|/δ).
-///
-/// # Arguments
-/// `spacing` — ratios to the median spacing δ; `phi` — correlation at δ, 0 ≤ phi < 1.
-///
-/// # Numerics
-/// Columns scaled to unit length; JᵀRJ by forward recursion, O(n p²). None when columns are dependent.
-pub fn sandwich(fit: &Fit, x: &[f64], spacing: &[f64], phi: f64) -> Option<(Matrix4<f64>, f64)> {
-    let p = fit.family.parameter_count();
-    let mut rows: Vec<Vector4<f64>> = x.iter().map(|&v| Vector4::from(fit.gradient(v))).collect();
-    let mut scale = Vector4::repeat(1.0);
-    for k in 0..p {
-        let length = rows.iter().map(|row| row[k] * row[k]).sum::<f64>().sqrt();
-        if !(length.is_finite() && length > 0.0) {
-            return None;
-        }
-        scale[k] = 1.0 / length;
-        rows.iter_mut().for_each(|row| row[k] *= scale[k]);
-    }
-    let (mut squares, mut meat) = (Matrix4::zeros(), Matrix4::zeros());
-    let mut past = Vector4::zeros();
-    for (j, row) in rows.iter().enumerate() {
-        if j > 0 {
-            past = (past + rows[j - 1]) * phi.powf(spacing[j]);
-        }
-        squares += row * row.transpose();
-        meat += row * row.transpose() + row * past.transpose() + past * row.transpose();
-    }
-    for k in p..COEFFICIENTS_MAX {
-        squares[(k, k)] = 1.0;
-    }
-    let inverse = squares.try_inverse()?;
-    let inner = inverse * meat;
-    let freedom = (count(fit.n) - inner.trace()).max(1.0);
-    let noise = fit.residual_ss / freedom;
-    let mut covariance = inner * inverse * noise;
-    for i in 0..COEFFICIENTS_MAX {
-        for k in 0..COEFFICIENTS_MAX {
-            covariance[(i, k)] *= scale[i] * scale[k];
-        }
-    }
-    covariance.iter().all(|v| v.is_finite()).then_some((covariance, noise))
 }
 
 #[cfg(test)]
 mod tests {
     use super::*;
+    use crate::drift::fit::fit;
     use crate::drift::structure::simulate::noise;
 
     #[test]

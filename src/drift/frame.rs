@@ -6,6 +6,7 @@
 //! coefficients in the units of the data.
 
 use crate::drift::family::{COEFFICIENTS_MAX, Coefficients, Family};
+use crate::drift::lanes::sum;
 use crate::drift::serial::count;
 use nalgebra::Matrix4;
 use serde::{Deserialize, Serialize};
@@ -47,11 +48,18 @@ impl Frame {
             }
             Family::Exponential => Frame { centre: least, scale: most - least },
             Family::Logarithmic | Family::Power | Family::OffsetPower => {
-                let mean_log = x.iter().map(|v| v.ln()).sum::<f64>() / count(x.len());
-                Frame { centre: 0.0, scale: mean_log.exp() }
+                let ln_x: Vec<f64> = x.iter().map(|v| v.ln()).collect();
+                return Frame::of_logarithms(&ln_x);
             }
         };
         (frame.centre.is_finite() && frame.scale.is_finite() && frame.scale > 0.0).then_some(frame)
+    }
+
+    /// The same for families with ln x, from the logarithms of the ages.
+    pub(crate) fn of_logarithms(ln_x: &[f64]) -> Option<Frame> {
+        let varied = ln_x.iter().any(|l| (l - ln_x[0]).abs() > 0.0);
+        let frame = Frame { centre: 0.0, scale: (sum(ln_x) / count(ln_x.len())).exp() };
+        (varied && frame.scale.is_finite() && frame.scale > 0.0).then_some(frame)
     }
 
     /// The inner age.

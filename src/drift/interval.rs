@@ -71,7 +71,7 @@ impl<'a> Intervals<'a> {
 ///
 /// # Arguments
 /// `probability` — 0.5 to 1, exclusive; `freedom` — degrees of freedom, at least 1.
-fn student_quantile(probability: f64, freedom: f64) -> f64 {
+pub fn student_quantile(probability: f64, freedom: f64) -> f64 {
     let student = StudentsT::new(0.0, 1.0, freedom).expect("at least one degree of freedom");
     student.inverse_cdf(probability)
 }

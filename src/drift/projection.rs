@@ -6,52 +6,23 @@ use crate::drift::outcome::{EXPONENT, EXPONENT_MIN, FitOutcome, Undetermined};
 use crate::drift::refine::Data;
 use crate::drift::serial::count;
 
-/// How finely the nonlinear coefficient is looked for.
-#[derive(Clone, Copy, Debug)]
-pub struct Search {
-    /// Grid step of the exponent; must divide the width of its range.
-    exponent_step: f64,
-    /// Grid step of ln tau.
-    log_tau_step: f64,
-    /// Bounds of tau as shares of the range of ages; the lower one is raised where the second age
-    /// lies further off.
-    tau: (f64, f64),
-    /// Golden-section steps between grid points; each keeps 0.618 of the bracket.
-    golden_steps: usize,
-    /// Whether only a start is wanted.
-    quick: bool,
-}
-
-impl Search {
-    /// The upper bound of tau, as a share of the range of ages.
-    pub fn tau_max(self) -> f64 {
-        self.tau.1
-    }
-}
-
-/// To the last digit that a sum of squares can tell. The bound of 10⁴ ranges lies past the slowest
-/// settling that calibrated instruments show as a curve at all (own rule).
-pub const SEARCH_FULL: Search = Search {
-    exponent_step: 0.25,
-    log_tau_step: 0.4,
-    tau: (1e-6, 1e4),
-    golden_steps: 44,
-    quick: false,
-};
-/// A start for the watch, whose robust refinement does the rest.
-pub const SEARCH_QUICK: Search = Search {
-    exponent_step: 0.5,
-    log_tau_step: 0.5,
-    tau: (0.02, 10.0),
-    golden_steps: 8,
-    quick: true,
-};
+/// Grid step of the exponent; must divide the width of its range.
+const EXPONENT_STEP: f64 = 0.25;
+/// Grid step of ln tau.
+const LOG_TAU_STEP: f64 = 0.4;
+/// Bounds of tau as shares of the range of ages; the lower one is raised where the second age lies
+/// further off. The upper one lies past the slowest settling that calibrated instruments show as a
+/// curve at all (own rule).
+const TAU: (f64, f64) = (1e-6, TAU_MAX);
+/// Upper bound of tau as a share of the range of ages.
+pub const TAU_MAX: f64 = 1e4;
+/// Golden-section steps between grid points, to the last digit that a sum of squares can tell; each
+/// keeps 0.618 of the bracket.
+const GOLDEN_STEPS: usize = 44;
 
 /// tau is not looked for below this share of the distance to the second age: there only the oldest
 /// readings differ from the rest, by e^−15 and less.
 const SECOND_AGE_SHARE: f64 = 1.0 / 15.0;
-/// A robust start keeps so far from exponent 0, where c and a run off to infinity.
-const EXPONENT_START_MIN: f64 = 0.01;
 /// Most secants of the polish; each doubles the digits, nearly.
 const SECANTS_MAX: usize = 12;
 const GOLDEN: f64 = 0.618_033_988_749_894_9;
@@ -68,11 +39,7 @@ const GOLDEN: f64 = 0.618_033_988_749_894_9;
 ///
 /// # Source
 /// Golub and Pereyra (1973), SIAM Journal on Numerical Analysis 10. From memory.
-pub fn project(
-    family: Family,
-    data: &Data<'_>,
-    search: Search,
-) -> Result<Coefficients, FitOutcome> {
+pub fn project(family: Family, data: &Data<'_>) -> Result<Coefficients, FitOutcome> {
     let mut profile = Profile::new(family, data);
     let undetermined = |what| Err(FitOutcome::WeaklyDetermined(what));
     if data.y.iter().all(|v| (v - profile.mean).abs() <= 0.0) {
@@ -81,8 +48,8 @@ pub fn project(
     if !(profile.total.is_finite() && profile.total > 0.0) {
         return Err(FitOutcome::NonFinite);
     }
-    let (low, high, step) = range(family, data, search);
-    let found = profile.least(low, high, step, search.golden_steps);
+    let (low, high, step) = range(family, data);
+    let found = profile.least(low, high, step);
     let margin = 1e-3 * step;
     let (at_low, at_high) = (found <= low + margin, found >= high - margin);
     match family {
@@ -93,26 +60,23 @@ pub fn project(
             return undetermined(Undetermined::Line { tau: high.exp() * data.frame.scale });
         }
         _ if at_low || at_high => return undetermined(Undetermined::Exponent { exponent: found }),
-        Family::OffsetPower if search.quick && found.abs() < EXPONENT_START_MIN => {
-            return Ok(profile.coefficients(EXPONENT_START_MIN.copysign(found)));
-        }
         Family::OffsetPower if found.abs() < EXPONENT_MIN => {
             return undetermined(Undetermined::Logarithmic { exponent: found });
         }
         _ => {}
     }
-    let found = if search.quick { found } else { profile.polished(family, found, margin) };
+    let found = profile.polished(family, found, margin);
     Ok(profile.coefficients(found))
 }
 
 /// Bounds of the nonlinear coefficient (tau: of its logarithm) and the grid's step.
-fn range(family: Family, data: &Data<'_>, search: Search) -> (f64, f64, f64) {
+fn range(family: Family, data: &Data<'_>) -> (f64, f64, f64) {
     if family != Family::Exponential {
-        return (EXPONENT.0, EXPONENT.1, search.exponent_step);
+        return (EXPONENT.0, EXPONENT.1, EXPONENT_STEP);
     }
     let second = data.u.iter().copied().filter(|&u| u > 0.0).fold(f64::INFINITY, f64::min);
-    let low = search.tau.0.max(SECOND_AGE_SHARE * second).ln();
-    (low, search.tau.1.ln(), search.log_tau_step)
+    let low = TAU.0.max(SECOND_AGE_SHARE * second).ln();
+    (low, TAU.1.ln(), LOG_TAU_STEP)
 }
 
 /// The sum of squares as a function of the nonlinear coefficient.
@@ -182,7 +146,7 @@ impl<'a> Profile<'a> {
     }
 
     /// The place of the least sum of squares in [low, high].
-    fn least(&mut self, low: f64, high: f64, step: f64, golden_steps: usize) -> f64 {
+    fn least(&mut self, low: f64, high: f64, step: f64) -> f64 {
         let mut best = (f64::INFINITY, low);
         let mut k = low;
         while k < high + 0.5 * step {
@@ -196,7 +160,7 @@ impl<'a> Profile<'a> {
         let (mut a, mut b) = ((best.1 - step).max(low), (best.1 + step).min(high));
         let (mut c, mut d) = (b - GOLDEN * (b - a), a + GOLDEN * (b - a));
         let (mut at_c, mut at_d) = (self.left(c), self.left(d));
-        for _ in 0..golden_steps {
+        for _ in 0..GOLDEN_STEPS {
             if at_c < at_d {
                 (b, d, at_d) = (d, c, at_c);
                 c = b - GOLDEN * (b - a);
@@ -294,21 +258,6 @@ mod tests {
                 let close = (analytic - numeric).abs() < 1e-6 * numeric.abs();
                 assert!(close, "{family:?} at {k}: {analytic} against {numeric}");
             }
-        }
-    }
-
-    #[test]
-    fn quick_and_full_search_find_the_same_curve() {
-        let (x, y): (Vec<f64>, Vec<f64>) = MISRA1A.iter().copied().unzip();
-        for family in [Family::Power, Family::OffsetPower, Family::Exponential] {
-            let frame = Frame::of(family, &x).unwrap();
-            let data = Data::new(family, frame, &x, &y);
-            let (full, quick) = (
-                project(family, &data, SEARCH_FULL).unwrap(),
-                project(family, &data, SEARCH_QUICK).unwrap(),
-            );
-            let k = family.parameter_count() - 1;
-            assert!((quick[k] / full[k] - 1.0).abs() < 0.05, "{family:?}: {quick:?}, {full:?}");
         }
     }
 }

@@ -8,6 +8,7 @@
 use crate::drift::family::Family;
 use crate::drift::forecast::{Forecaster, NORMAL_95};
 use crate::drift::serial::count;
+use crate::drift::workspace::Workspace;
 use serde::{Deserialize, Serialize};
 
 /// Origins of the backtests, as shares of the window's points.
@@ -162,18 +163,34 @@ pub fn cap(n: usize) -> f64 {
 /// Widening by the largest miss: own rule, measured by simulation; distribution-free coverage does
 /// not hold under dependence.
 pub fn assess(x: &[f64], y: &[f64], families: &[Family], phi: f64) -> Reach {
+    assess_in(x, y, families, phi, &mut Workspace::default())
+}
+
+/// The same in a workspace.
+pub fn assess_in(
+    x: &[f64],
+    y: &[f64],
+    families: &[Family],
+    phi: f64,
+    workspace: &mut Workspace,
+) -> Reach {
     let n = x.len();
     if n < POINTS_FOR_REACH {
         return Reach::none(Limit::TooFewPoints { found: n, needed: POINTS_FOR_REACH });
     }
     let span = x[n - 1] - x[0];
+    if x.iter().all(|&age| age > 0.0) {
+        // All parts of the window are then among the ages whose logarithms are known.
+        workspace.logarithms(x);
+    }
     let mut worst: [(usize, f64); HORIZONS.len()] = [(0, 0.0); HORIZONS.len()];
     for origin in ORIGINS {
         let m = part_of(origin, n);
         if m < POINTS_TO_TRAIN {
             continue;
         }
-        let Some(forecaster) = Forecaster::new(&x[..m], &y[..m], families, phi) else {
+        let Some(forecaster) = Forecaster::new_in(&x[..m], &y[..m], families, phi, workspace)
+        else {
             return Reach::none(Limit::NoCurve);
         };
         for (k, miss) in misses(&forecaster, x, y, m, span).into_iter().enumerate() {
