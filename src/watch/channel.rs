@@ -14,7 +14,7 @@ use crate::watch::finding::Finding;
 use crate::watch::incident::{Incident, Place, ResidualWatch, Turn};
 use crate::watch::limits::{POINTS_AFTER_BREAK, POINTS_TO_FIT};
 use crate::watch::reading::{Counts, Reading, Taken};
-use crate::watch::said::{Said, asked_day};
+use crate::watch::said::Said;
 use crate::watch::settings::{Basis, WatchSettings};
 use crate::watch::time::{EventTime, ShellTime, Span};
 use crate::watch::window::Window;
