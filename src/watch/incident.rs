@@ -403,3 +403,138 @@ fn close(a: f64, b: f64) -> bool {
 fn index_of(points: usize) -> u64 {
     u64::try_from(points).unwrap_or(u64::MAX)
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::drift::tails::probability;
+
+    const WINDOW: usize = 100;
+    const PACE: Pace =
+        Pace { window_points: WINDOW, stride_points: 1, points_per_year: DAYS_IN_YEAR };
+    const BUDGET: Budget = Budget { false_alerts_per_year_site: 1.0, channels: 1 };
+
+    /// A watch that sees made-up scores, a point a day.
+    struct Seen {
+        watch: ResidualWatch,
+        points: VecDeque<Point>,
+        newest: u64,
+    }
+
+    impl Seen {
+        fn new() -> Seen {
+            let mut seen = Seen { watch: ResidualWatch::default(), points: [].into(), newest: 0 };
+            (0..WINDOW).for_each(|_| seen.take_point());
+            seen
+        }
+
+        fn take_point(&mut self) {
+            self.newest += 1;
+            let time = EventTime::plus(EventTime(0), Span::from_days(self.newest as f64));
+            self.points.push_back(Point { time, mean: 0.0, count: 1, spread: 0.0 });
+            if self.points.len() > WINDOW {
+                self.points.pop_front();
+            }
+        }
+
+        /// One point and a full look with these scores over their thresholds; the break is `ago`
+        /// points old. The step has no threshold: its score itself.
+        fn look(&mut self, shift: f64, step: f64, bend: f64, ago: usize) -> Turn {
+            self.take_point();
+            let index = self.points.len() - 1 - ago;
+            let over = |kind| BUDGET.threshold(kind, &PACE, 0.3).unwrap_or(0.0);
+            let score =
+                |kind, q: f64| Score { kind, q, p: probability(q), size: 1.0, index, x: 0.0 };
+            let found = Examination {
+                shift: score(Structure::Shift, over(Structure::Shift) + shift),
+                step: score(Structure::Step, step),
+                bend: Some(score(Structure::Bend, over(Structure::Bend) + bend)),
+                dependence: Some(score(Structure::Dependence, 0.3)),
+                points: self.points.len(),
+                phi: 0.3,
+                noise: 1.0,
+                suspicious: false,
+            };
+            let place = Place {
+                newest: self.newest,
+                stride_points: 1,
+                budget: BUDGET,
+                window_points: WINDOW,
+                window_span: Span::from_days(1e4),
+                age_zero: EventTime(0),
+                points: &self.points,
+            };
+            let judgement = BUDGET.judge(&found, &PACE);
+            self.watch.decide(&place, &found, &judgement)
+        }
+
+        /// The same look so many times; what came of it but nothing.
+        fn looks(&mut self, times: usize, shift: f64, step: f64, bend: f64) -> Vec<Turn> {
+            let turns = (0..times).map(|_| self.look(shift, step, bend, 0));
+            turns.filter(|turn| *turn != Turn::Nothing).collect()
+        }
+
+        /// A bend that is settled, with the window begun anew there.
+        fn settled_bend() -> Seen {
+            let mut seen = Seen::new();
+            assert!(matches!(seen.look(0.0, 0.0, 2.0, 10), Turn::Opened(_)));
+            let turns = seen.looks(WINDOW / 4, -3.0, 0.0, -0.8);
+            assert!(matches!(turns[..], [Turn::Settled { .. }]), "{turns:?}");
+            let at = seen.watch.incident().unwrap().settled_break().unwrap();
+            seen.points.retain(|point| point.time >= at);
+            seen
+        }
+    }
+
+    #[test]
+    fn a_second_bend_after_the_cut_is_not_told_while_the_window_fills() {
+        let mut seen = Seen::settled_bend();
+        assert!(seen.looks(20, -3.0, 0.0, 5.0).is_empty());
+    }
+
+    #[test]
+    fn a_clear_step_after_the_cut_is_told_at_once() {
+        let mut seen = Seen::settled_bend();
+        let turn = seen.look(2.0, 15.0, 0.0, 1);
+        let Turn::ToldAnew(incident) = turn else { panic!("{turn:?}") };
+        assert_eq!((incident.kind, incident.settled_break()), (Kind::Step, None));
+        assert_eq!(incident.at, seen.points[seen.points.len() - 2].time);
+    }
+
+    #[test]
+    fn a_break_that_has_left_the_window_gives_way_to_what_is_clearly_there() {
+        let mut seen = Seen::settled_bend();
+        // Near its threshold, the bend keeps the incident open until the window has filled …
+        assert!(seen.looks(WINDOW - WINDOW / 4 - 1, -3.0, 0.0, -0.5).is_empty());
+        // … then what lies above it does, and what is clearly above is told.
+        assert!(seen.looks(WINDOW, -3.0, 0.0, 0.5).is_empty());
+        let turn = seen.look(-3.0, 0.0, 1.5, 7);
+        let Turn::ToldAnew(incident) = turn else { panic!("{turn:?}") };
+        assert_eq!(incident.at, seen.points[seen.points.len() - 8].time);
+        assert!(seen.watch.baseline.is_frozen());
+    }
+
+    #[test]
+    fn a_break_that_has_left_the_window_is_not_kept_by_scores_below_their_thresholds() {
+        let mut seen = Seen::settled_bend();
+        let turns = seen.looks(2 * WINDOW, -3.0, 0.0, -0.5);
+        assert_eq!(turns, [Turn::Closed]);
+        assert!(!seen.watch.baseline.is_frozen());
+    }
+
+    #[test]
+    fn a_name_changes_only_for_ten_times_the_evidence_until_it_is_settled() {
+        let mut seen = Seen::new();
+        assert!(matches!(seen.look(0.0, 0.0, 2.0, 10), Turn::Opened(_)));
+        let bend = BUDGET.threshold(Structure::Bend, &PACE, 0.3).unwrap() + 2.0 - 0.85;
+        let step = |ahead: f64| bend + 1.2 + ahead;
+        assert_eq!(seen.look(0.0, step(0.9), 2.0, 10), Turn::Nothing);
+        let turn = seen.look(0.0, step(1.1), 2.0, 10);
+        assert!(matches!(turn, Turn::Revised(Incident { kind: Kind::Step, .. })), "{turn:?}");
+        let turns = seen.looks(WINDOW / 4, 0.0, step(-0.5), 2.0);
+        assert!(
+            matches!(turns[..], [Turn::Settled { incident, .. }] if incident.kind == Kind::Bend),
+            "{turns:?}"
+        );
+    }
+}
