@@ -243,8 +243,8 @@ impl Replaying<'_> {
         if unsorted > 0 {
             writeln!(
                 self.err,
-                "             in {unsorted} channels age zero is the first row, and older rows came after \
-                 it: sort the table by time, or set `calibrated`"
+                "             age zero is the first row and older ones came after it, in so many channels: \
+                 {unsorted}; sort the table by time, or set `calibrated`"
             )?;
         }
         for (code, count) in &self.tally.refused {
@@ -266,11 +266,10 @@ impl Replaying<'_> {
     }
 }
 
-/// Whether a channel took its age zero from its first row and older rows came after that one. The
-/// first row itself is at age zero, not after it.
+/// Whether a channel took its age zero from its first row and older rows came after that one.
 fn began_too_late(channel: &Channel) -> bool {
     channel.cycle.is_some_and(|cycle| cycle.known_from == KnownFrom::FirstReading)
-        && channel.counts.of(Taken::BeforeAgeZero) > 1
+        && channel.counts.of(Taken::BeforeAgeZero) > 0
 }
 
 /// One look at the residuals, as `--scores` writes it; null where this look did not go, and for the
@@ -355,7 +354,7 @@ mod tests {
     #[test]
     fn a_table_that_is_not_sorted_is_told_how_to_help_itself() {
         let said = check("", REVERSED);
-        assert!(said.contains("        3  not after age zero\n"), "{said}");
+        assert!(said.contains("        2  not after age zero\n"), "{said}");
         assert!(said.contains(HINT), "{said}");
     }
 

@@ -301,7 +301,7 @@ impl Desk {
 
     fn note_unfitted(&mut self, channel: &str, applied: Applied) {
         let Applied::Reading(taken) = applied else { return };
-        if taken == Taken::Accepted {
+        if taken.is_used() {
             return;
         }
         *self.arrivals.unfitted.entry(taken.code()).or_default() += 1;

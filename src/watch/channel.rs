@@ -156,15 +156,18 @@ impl Channel {
         work: &mut structure::Workspace,
     ) -> (Taken, Outcome) {
         let mut outcome = Outcome::default();
+        let began = self.cycle.is_none();
         let age_zero = self.age_zero(reading.time);
-        let taken = if reading.time <= age_zero {
+        let taken = if began && reading.time == age_zero {
+            Taken::AgeZero
+        } else if reading.time <= age_zero {
             Taken::BeforeAgeZero
         } else {
             self.window.take(reading.time, reading.deviation)
         };
         self.counts.note(taken);
-        self.unusable = (taken != Taken::Accepted).then_some(taken);
-        if taken == Taken::Accepted {
+        self.unusable = (!taken.is_used()).then_some(taken);
+        if taken.is_used() {
             self.last_arrival = self.last_arrival.max(now);
             judge::no_longer_silent(self, context, reading.time, &mut outcome);
         }

@@ -32,11 +32,13 @@ pub enum Taken {
     TooManyChannels,
     /// Of another watch than its channel: another unit, perhaps, and other rules. Counted, not fitted.
     OtherWatch,
+    /// The first of its channel, where nobody said when it was calibrated: age is counted from it.
+    AgeZero,
 }
 
 impl Taken {
     /// All outcomes, in the order in which they are listed to people.
-    pub const ALL: [Taken; 7] = [
+    pub const ALL: [Taken; 8] = [
         Taken::Accepted,
         Taken::Duplicate,
         Taken::Contradicts,
@@ -44,7 +46,13 @@ impl Taken {
         Taken::BeforeAgeZero,
         Taken::TooManyChannels,
         Taken::OtherWatch,
+        Taken::AgeZero,
     ];
+
+    /// Whether the reading was of use.
+    pub const fn is_used(self) -> bool {
+        matches!(self, Taken::Accepted | Taken::AgeZero)
+    }
 
     /// The outcome as a code, for logs and JSON.
     pub const fn code(self) -> &'static str {
@@ -56,6 +64,7 @@ impl Taken {
             Taken::BeforeAgeZero => "not-after-age-zero",
             Taken::TooManyChannels => "too-many-channels",
             Taken::OtherWatch => "other-watch",
+            Taken::AgeZero => "age-zero",
         }
     }
 
@@ -69,6 +78,7 @@ impl Taken {
             Taken::BeforeAgeZero => "not after age zero",
             Taken::TooManyChannels => "too many channels",
             Taken::OtherWatch => "belongs to another watch",
+            Taken::AgeZero => "taken for age zero",
         }
     }
 }
