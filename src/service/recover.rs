@@ -28,7 +28,7 @@ const ROWS_AT_A_TIME: i64 = 10_000;
 
 /// The version of a state's bytes, their first byte. To be raised with every change of a stored type
 /// (fields and variants are known by their order): states of another version are rebuilt.
-const STATE_VERSION: u8 = 0xA2;
+const STATE_VERSION: u8 = 0xA3;
 
 /// What was recovered.
 #[derive(Debug)]

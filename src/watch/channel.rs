@@ -12,7 +12,7 @@ use crate::watch::alert::{AlertBook, AlertEvent, Owner};
 use crate::watch::budget::Budget;
 use crate::watch::finding::Finding;
 use crate::watch::incident::{Incident, Place, ResidualWatch, Turn};
-use crate::watch::limits::{POINTS_AFTER_BREAK, POINTS_TO_FIT};
+use crate::watch::limits::{POINTS_AFTER_BREAK, POINTS_TO_EXAMINE, POINTS_TO_FIT};
 use crate::watch::reading::{Counts, Reading, Taken};
 use crate::watch::said::Said;
 use crate::watch::settings::{Basis, WatchSettings};
@@ -98,6 +98,8 @@ pub struct Channel {
     pub patience: judge::Patience,
     points_ever: u64,
     points_at_refit: u64,
+    /// Points that the window held then.
+    points_in_refit: usize,
     points_at_reach: u64,
     stride: f64,
 }
@@ -142,6 +144,7 @@ impl Channel {
             patience: judge::Patience::default(),
             points_ever: 0,
             points_at_refit: 0,
+            points_in_refit: 0,
             points_at_reach: 0,
             stride: 1.0,
         }
@@ -272,7 +275,9 @@ impl Channel {
         }
         let due = match &self.refit {
             None => self.window.points().len() >= POINTS_TO_FIT,
-            Some(refit) => refit.at.plus(context.rules.refit_every) <= newest,
+            Some(refit) => {
+                refit.at.plus(context.rules.refit_every) <= newest || self.is_first_examination()
+            }
         };
         if due {
             self.refit(context, newest);
@@ -286,6 +291,12 @@ impl Channel {
             judge::after_refit(self, context, newest, outcome);
             outcome.findings.push(report::finding(self, context));
         }
+    }
+
+    /// Whether residuals can be examined now and could not at the last refit, whose curve and noise rest
+    /// on too few points to judge by.
+    fn is_first_examination(&self) -> bool {
+        self.points_in_refit < POINTS_TO_EXAMINE && self.window.points().len() >= POINTS_TO_EXAMINE
     }
 
     fn look(

@@ -23,6 +23,7 @@ impl Channel {
             self.stride = (0.5 * self.stride + 0.5 * points(fresh)).max(1.0);
         }
         self.points_at_refit = self.points_ever;
+        self.points_in_refit = x.len();
         let mut workspace = Workspace::default();
         let (mut fits, mut not_fitted) = (Vec::new(), Vec::new());
         for &family in &context.rules.families {
