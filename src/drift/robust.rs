@@ -29,10 +29,15 @@ pub(crate) struct Target<'a> {
     pub frame: Frame,
     /// Inner ages; their logarithms where the family needs them.
     ages: &'a [f64],
+    /// The deviations as they are: starts go by them.
+    raw: &'a [f64],
+    /// Roots of the weights; None: all weigh 1.
+    roots: Option<&'a [f64]>,
+    /// The deviations, by the roots of their weights.
     pub y: &'a [f64],
-    /// Derivatives to the shape's coefficients at the curve held last.
+    /// Derivatives to the shape's coefficients at the curve held last, by the roots.
     pub columns: &'a mut [Vec<f64>; COEFFICIENTS_MAX],
-    /// y less that curve.
+    /// y less that curve, by the roots.
     pub residuals: &'a mut Vec<f64>,
     clipped: &'a mut Vec<f64>,
     sizes: &'a mut Vec<u64>,
@@ -44,7 +49,8 @@ impl<'a> Target<'a> {
     pub fn new(
         family: Family,
         x: &'a [f64],
-        y: &'a [f64],
+        raw: &'a [f64],
+        weights: Option<&[f64]>,
         workspace: &'a mut Workspace,
     ) -> Option<Target<'a>> {
         let (ln_x, room) = if family.needs_positive_age() {
@@ -52,7 +58,7 @@ impl<'a> Target<'a> {
         } else {
             (x, &mut workspace.room)
         };
-        let Room { ages, columns, residuals, clipped, sizes, scratch } = room;
+        let Room { ages, columns, roots, weighted_y, residuals, clipped, sizes, scratch } = room;
         let (frame, ages): (Frame, &[f64]) = match family {
             // Well conditioned in any days since calibration.
             Family::Linear => (Frame::AS_IS, x),
@@ -72,8 +78,25 @@ impl<'a> Target<'a> {
         for column in columns.iter_mut() {
             column.resize(x.len(), 0.0);
         }
-        let mut target =
-            Target { family, frame, ages, y, columns, residuals, clipped, sizes, scratch };
+        let roots = weights.map(|weights| {
+            refill(roots, weights.iter().map(|w| w.sqrt()));
+            refill(weighted_y, raw.iter().zip(&*roots).map(|(y, root)| root * y));
+            &roots[..]
+        });
+        let y = if roots.is_some() { &weighted_y[..] } else { raw };
+        let mut target = Target {
+            family,
+            frame,
+            ages,
+            raw,
+            roots,
+            y,
+            columns,
+            residuals,
+            clipped,
+            sizes,
+            scratch,
+        };
         target.fill_constant_columns();
         Some(target)
     }
@@ -93,10 +116,40 @@ impl<'a> Target<'a> {
 /// Linear, logarithmic and power curves in the ages as they are. Start: a line, through logarithms
 /// where there are any, or by projection on a grid; see `Target::refine` for the rest. O(n p²).
 pub fn fit_robust(family: Family, x: &[f64], y: &[f64], workspace: &mut Workspace) -> FitOutcome {
+    fit_robust_weighted(family, x, y, None, workspace)
+}
+
+/// Fits one family as the watch does, some data weighing more than others.
+///
+/// # Arguments
+/// As for [`fit_robust`]; `weights` — (n), finite, above 0, of mean 1; None: all alike, to the same bits
+/// as [`fit_robust`].
+///
+/// # Outcomes
+/// Those of [`fit_robust`]. Sums of squares are Σ w r²; the residual standard deviation is in y's unit,
+/// that of a datum of weight 1.
+///
+/// # Numerics
+/// Residuals and derivatives by √w; clipped at 3 robust standard deviations of √w r, which scatter
+/// alike where weights are right. Starts go by the data as they are.
+///
+/// # Source
+/// Aitken (1935), Proceedings of the Royal Society of Edinburgh 55. From memory.
+pub fn fit_robust_weighted(
+    family: Family,
+    x: &[f64],
+    y: &[f64],
+    weights: Option<&[f64]>,
+    workspace: &mut Workspace,
+) -> FitOutcome {
+    if let Some(weights) = weights {
+        assert_eq!(weights.len(), x.len(), "one weight per age");
+        assert!(weights.iter().all(|w| w.is_finite() && *w > 0.0), "weights are above 0");
+    }
     if let Some(declined) = declined(family, x, y) {
         return declined;
     }
-    let Some(mut target) = Target::new(family, x, y, workspace) else {
+    let Some(mut target) = Target::new(family, x, y, weights, workspace) else {
         return FitOutcome::Singular;
     };
     told(target.fit(), family, x)
@@ -127,7 +180,7 @@ pub fn fit_from(
         return declined;
     }
     if previous.family == family
-        && let Some(mut target) = Target::new(family, x, y, workspace)
+        && let Some(mut target) = Target::new(family, x, y, None, workspace)
         && let Some(fit) = target.fit_near(previous)
     {
         return FitOutcome::Fitted(Box::new(fit));
@@ -181,7 +234,7 @@ impl Target<'_> {
         self.own_columns(&inner);
         let solved = solve_columns(&self.columns[..p], self.residuals, self.scratch)
             .ok_or(FitOutcome::Entangled)?;
-        let mean = sum(self.y) / count(n);
+        let total_ss = self.total_ss();
         Held {
             family,
             frame: self.frame,
@@ -189,13 +242,24 @@ impl Target<'_> {
             start,
             n,
             residual_ss: dot(self.residuals, self.residuals),
-            total_ss: sum_of(self.y, |v| (v - mean) * (v - mean)),
-            largest: self.y.iter().fold(0.0, |most: f64, v| most.max(v.abs())),
+            total_ss,
+            largest: self.raw.iter().fold(0.0, |most: f64, v| most.max(v.abs())),
             left: self.residuals.iter().any(|r| r.abs() > 0.0),
             factor: solved.factor,
             iterations: refined.steps,
         }
         .finish()
+    }
+
+    /// The sum of squares about the mean; of both, each datum by its weight.
+    fn total_ss(&self) -> f64 {
+        let Some(roots) = self.roots else {
+            let mean = sum(self.y) / count(self.y.len());
+            return sum_of(self.y, |v| (v - mean) * (v - mean));
+        };
+        let mean = dot(roots, self.y) / dot(roots, roots);
+        let off = |(root, y): (&f64, &f64)| (root * (y - mean)).powi(2);
+        roots.iter().zip(self.raw).map(off).sum()
     }
 }
 

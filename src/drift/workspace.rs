@@ -25,6 +25,10 @@ pub(crate) struct Room {
     pub ages: Vec<f64>,
     /// The curve's derivative to each coefficient.
     pub columns: [Vec<f64>; COEFFICIENTS_MAX],
+    /// Roots of the weights; empty without weights.
+    pub roots: Vec<f64>,
+    /// y times these.
+    pub weighted_y: Vec<f64>,
     /// y less the curve.
     pub residuals: Vec<f64>,
     /// The same, clipped.
@@ -74,8 +78,9 @@ impl Workspace {
 
     /// Numbers for which there is room, all buffers together.
     pub fn capacity(&self) -> usize {
-        let Room { ages, columns, residuals, clipped, sizes, scratch } = &self.room;
-        [&self.known_x, &self.ln_x, ages, residuals, clipped]
+        let Room { ages, columns, roots, weighted_y, residuals, clipped, sizes, scratch } =
+            &self.room;
+        [&self.known_x, &self.ln_x, ages, roots, weighted_y, residuals, clipped]
             .into_iter()
             .chain(columns)
             .chain(scratch)

@@ -17,6 +17,7 @@ pub mod report;
 pub mod said;
 pub mod settings;
 pub mod time;
+pub mod weights;
 pub mod whitening;
 pub mod window;
 pub mod wording;

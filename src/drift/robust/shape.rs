@@ -48,12 +48,28 @@ impl Target<'_> {
             refill(third, self.ages.iter().map(|u| u * u));
             refill(fourth, self.ages.iter().map(|u| u * u * u));
         }
+        self.weigh(0..self.family.parameter_count());
+    }
+
+    /// Columns by the roots of the weights. Those that depend on the nonlinear coefficient come as
+    /// they are, and the exponentials stay so.
+    fn weigh(&mut self, columns: std::ops::Range<usize>) {
+        let Some(roots) = self.roots else { return };
+        for column in &mut self.columns[columns] {
+            column.iter_mut().zip(roots).for_each(|(v, root)| *v *= root);
+        }
+    }
+
+    /// The columns that depend on the nonlinear coefficient.
+    fn curved(&self) -> std::ops::Range<usize> {
+        self.linear() - 1..self.family.parameter_count()
     }
 
     /// Holds a curve against the data: columns and residuals.
     pub fn evaluate(&mut self, theta: &Coefficients) {
         if let Some(k) = self.factor(theta).map(|_| theta[self.linear()]) {
             self.fill_columns(k);
+            self.weigh(self.curved());
         }
         refill(self.residuals, self.y.iter().copied());
         for (theta, column) in theta.iter().zip(&*self.columns).take(self.linear()) {
@@ -61,8 +77,8 @@ impl Target<'_> {
         }
     }
 
-    /// The columns that depend on the nonlinear coefficient; one `exp` for each reading. The
-    /// exponentials themselves stay in the first column of the power, the last of the others.
+    /// The columns that depend on the nonlinear coefficient, not weighted yet; one `exp` for each
+    /// reading. The exponentials themselves stay in the first column of the power, the last of the others.
     pub fn fill_columns(&mut self, k: f64) {
         let [first, second, third, fourth] = &mut *self.columns;
         if self.family == Family::Power {
@@ -138,7 +154,10 @@ impl Target<'_> {
                     *to = rate * e * t;
                 }
             }
-            _ => {}
+            _ => return,
+        }
+        if self.family != Family::Power {
+            self.weigh(self.curved());
         }
     }
 }

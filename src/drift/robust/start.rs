@@ -61,12 +61,12 @@ impl Target<'_> {
 
     /// ln|y| against ln x, a line, transformed back. None when y changes sign or touches 0.
     pub fn log_log_line(&mut self) -> Option<Coefficients> {
-        let sign = self.y[0].signum();
-        if !self.y.iter().all(|v| v * sign > 0.0) {
+        let sign = self.raw[0].signum();
+        if !self.raw.iter().all(|v| v * sign > 0.0) {
             return None;
         }
-        refill(self.clipped, self.y.iter().map(|v| v.abs().ln()));
-        let n = count(self.y.len());
+        refill(self.clipped, self.raw.iter().map(|v| v.abs().ln()));
+        let n = count(self.raw.len());
         let (age, level) = (sum(self.ages) / n, sum(self.clipped) / n);
         self.clipped.iter_mut().for_each(|l| *l -= level);
         let (squares, products) = about(self.ages, age, self.clipped);
@@ -112,9 +112,9 @@ impl Target<'_> {
 
     /// Puts y less its mean, where the family has a constant, in place of clipped residuals.
     fn centred(&mut self) -> f64 {
-        let n = count(self.y.len());
-        let mean = if self.family == Family::Power { 0.0 } else { sum(self.y) / n };
-        refill(self.clipped, self.y.iter().map(|v| v - mean));
+        let n = count(self.raw.len());
+        let mean = if self.family == Family::Power { 0.0 } else { sum(self.raw) / n };
+        refill(self.clipped, self.raw.iter().map(|v| v - mean));
         mean
     }
 
