@@ -41,30 +41,33 @@ const DANWOOD: [Digits; 4] = [
     (Family::Quadratic, 12.0, 12.0),
 ];
 const MISRA1A: [Digits; 7] = [
-    (Family::Linear, 11.0, 12.0),
-    (Family::Logarithmic, 12.0, 12.0),
-    (Family::Power, 9.5, 12.0),
-    (Family::OffsetPower, 9.5, 12.0),
-    (Family::Exponential, 9.5, 12.0),
-    (Family::Quadratic, 11.0, 12.0),
+    (Family::Linear, 12.5, 13.0),
+    (Family::Logarithmic, 13.0, 13.0),
+    (Family::Power, 11.0, 13.0),
+    (Family::OffsetPower, 11.0, 12.5),
+    (Family::Exponential, 11.0, 12.5),
+    (Family::Quadratic, 11.5, 12.5),
     (Family::Cubic, 9.5, 12.0),
 ];
-const NOINT1: [Digits; 2] = [(Family::Logarithmic, 9.5, 12.0), (Family::Power, 9.5, 12.0)];
+/// The line that NoInt1 is, and the families that contain it, are held apart.
+const NOINT1: [Digits; 2] = [(Family::Logarithmic, 12.0, 12.0), (Family::Power, 11.0, 11.5)];
+/// R² of the logarithmic and the power curve is 5e-4: three digits go in 1 − RSS/TSS.
 const ENSO: [Digits; 5] = [
-    (Family::Linear, 9.5, 12.0),
-    (Family::Logarithmic, 9.5, 12.0),
-    (Family::Power, 9.5, 12.0),
-    (Family::Quadratic, 9.5, 12.0),
-    (Family::Cubic, 9.5, 12.0),
+    (Family::Linear, 12.5, 12.5),
+    (Family::Logarithmic, 12.0, 11.5),
+    (Family::Power, 11.0, 11.5),
+    (Family::Quadratic, 12.5, 12.5),
+    (Family::Cubic, 12.0, 12.5),
 ];
+/// The curves leave a thousandth of a per cent of y, and its digits with it.
 const PONTIUS: [Digits; 7] = [
-    (Family::Linear, 9.5, 12.0),
-    (Family::Logarithmic, 9.5, 12.0),
-    (Family::Power, 9.5, 12.0),
-    (Family::OffsetPower, 9.5, 12.0),
-    (Family::Exponential, 9.5, 12.0),
-    (Family::Quadratic, 9.5, 12.0),
-    (Family::Cubic, 9.5, 12.0),
+    (Family::Linear, 11.5, 12.5),
+    (Family::Logarithmic, 13.0, 13.0),
+    (Family::Power, 11.0, 12.0),
+    (Family::OffsetPower, 11.0, 12.0),
+    (Family::Exponential, 11.0, 12.0),
+    (Family::Quadratic, 10.5, 12.0),
+    (Family::Cubic, 10.0, 12.0),
 ];
 
 /// A data set with its reference values.
@@ -368,7 +371,8 @@ fn lag_correlation_is_the_sample_autocorrelation_with_its_known_bias_taken_off()
 
 #[test]
 fn dependence_widens_the_line_as_the_written_out_matrix_says() {
-    for (name, series, _) in every_series() {
+    // NoInt1 is an exact line: nothing is left that could depend.
+    for (name, series, _) in every_series().into_iter().filter(|(name, ..)| *name != "NoInt1") {
         let reference = &series.reference["computed"]["linear-dependent"];
         let fit = series.fit(Family::Linear);
         let phi = text_at(reference, "phi").parse().unwrap();
