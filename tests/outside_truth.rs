@@ -59,7 +59,7 @@ const ENSO: [Digits; 5] = [
     (Family::Quadratic, 12.5, 12.5),
     (Family::Cubic, 12.0, 12.5),
 ];
-/// The curves leave a thousandth of a per cent of y, and its digits with it.
+/// The curves that bend leave some 0.01 % of y: four digits of y go in the residuals.
 const PONTIUS: [Digits; 7] = [
     (Family::Linear, 11.5, 12.5),
     (Family::Logarithmic, 13.0, 13.0),
