@@ -85,7 +85,13 @@ fn run(args: &FitArgs, out: &mut dyn Write, err: &mut dyn Write) -> io::Result<u
     if series.bad_rows_unnamed > 0 {
         writeln!(err, "and {} more rows that are no readings", series.bad_rows_unnamed)?;
     }
-    let families = if args.family.is_empty() { &Family::ALL[..] } else { &args.family };
+    let mut asked: Vec<Family> = Vec::new();
+    for &family in &args.family {
+        if !asked.contains(&family) {
+            asked.push(family);
+        }
+    }
+    let families = if asked.is_empty() { &Family::ALL[..] } else { &asked[..] };
     let look = look::look(&series.x, &series.y, families, &args.at);
     // First, for a reader of the numbers may go away early.
     let mut code = EXIT_DONE;

@@ -18,6 +18,10 @@ pub const TURN_ABOVE: f64 = 16.0;
 /// of it: a change of rate alone bends a polynomial, too, without changing its direction (own rule).
 const ARM_RESIDUAL_SDS: f64 = 2.0;
 
+/// Below this difference two families fit about as well (Burnham and Anderson 2002, section 2.6; from
+/// memory).
+const HARDLY_TOLD_BELOW: f64 = 2.0;
+
 /// The choice among some fits.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
 pub struct Choice {
@@ -67,11 +71,17 @@ pub fn choose(fits: &[Fit], n_effective: f64, current: Option<Family>) -> Choice
         return choice;
     }
     let values: Vec<Option<f64>> = fits.iter().map(|fit| aicc(fit, n_effective)).collect();
-    // Without AICc (a perfect fit, a tiny sample) the smaller residual sum of squares decides.
-    let rank = |i: usize| (values[i].is_none(), values[i].unwrap_or(fits[i].residual_ss));
-    let best = (0..fits.len())
-        .min_by(|&a, &b| rank(a).partial_cmp(&rank(b)).unwrap_or(std::cmp::Ordering::Equal))
-        .expect("there is a fit");
+    // Where too few data allow no AICc, nothing speaks for a curve of more coefficients.
+    let coefficients = |i: usize| fits[i].family.parameter_count();
+    let rank = |a: usize, b: usize| match (values[a], values[b]) {
+        (Some(this), Some(that)) => this.total_cmp(&that),
+        (Some(_), None) => std::cmp::Ordering::Less,
+        (None, Some(_)) => std::cmp::Ordering::Greater,
+        (None, None) => coefficients(a)
+            .cmp(&coefficients(b))
+            .then(fits[a].residual_ss.total_cmp(&fits[b].residual_ss)),
+    };
+    let best = (0..fits.len()).min_by(|&a, &b| rank(a, b)).expect("there is a fit");
     let kept = current.and_then(|family| fits.iter().position(|fit| fit.family == family));
     let chosen = match kept.and_then(|k| Some((k, values[k]? - values[best]?))) {
         Some((k, behind)) if behind <= SWITCH_ABOVE => k,
@@ -185,7 +195,15 @@ fn explain(fits: &[Fit], chosen: usize, kept: bool, differences: &[Option<f64>])
         .filter_map(|i| Some((differences[i]?, fits[i].family)))
         .min_by(|a, b| a.0.total_cmp(&b.0));
     match next {
-        None => format!("{name}, the only family that could be fitted and compared"),
+        None if fits.len() > 1 => {
+            format!(
+                "{name}, closest of those with the fewest coefficients: too few independent readings to compare"
+            )
+        }
+        None => format!("{name}, the only family that could be fitted"),
+        Some((d, other)) if (0.0..HARDLY_TOLD_BELOW).contains(&d) => {
+            format!("{name}, hardly to be told from {} ({d:.1} AICc better)", other.name())
+        }
         Some((d, other)) if d >= 0.0 => {
             format!("{name}, {d:.1} AICc better than {}", other.name())
         }

@@ -19,7 +19,7 @@ pub const CLIP_SIGMAS: f64 = 3.5;
 pub const PHI_MAX: f64 = 0.995;
 
 /// From so many residuals on the correction for bias is smaller than what it corrects (own rule).
-const CORRECTED_FROM: usize = 20;
+pub const CORRECTED_FROM: usize = 20;
 /// 1/Φ⁻¹(3/4): makes the median absolute deviation consistent for normal noise.
 const MAD_TO_SIGMA: f64 = 1.4826;
 /// Search range of the likelihood estimate and its number of golden-section steps (width 2e-5).

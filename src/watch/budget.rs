@@ -235,6 +235,9 @@ impl Budget {
 /// # Outcomes
 /// `None` when the look holds no kind that names; a shift never names.
 pub fn name(found: &Examination) -> Option<Kind> {
+    if found.jumped {
+        return Some(Kind::Step);
+    }
     let mut best: Option<(Kind, f64)> = None;
     for candidate in Kind::ALL.into_iter().filter_map(|k| Some((k, evidence(found, k)?))) {
         if best.is_none_or(|(_, v)| candidate.1 > v) {

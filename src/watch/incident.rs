@@ -271,6 +271,10 @@ impl ResidualWatch {
         let wait = index_of(close_after_points(incident.points));
         let quiet = place.newest - incident.last_near >= wait;
         let clearly = judgement.margin >= TELL_ANEW_ABOVE;
+        // A jump since then is news, whatever stands.
+        if found.jumped && number_of(found.step.index, place) > incident.opened {
+            return Turn::ToldAnew(self.begin(place, found, judgement));
+        }
         let another = match sight {
             Sight::Shown => crossed && quiet,
             Sight::CutOff => clearly && is_clearly_a_step(found),
@@ -338,10 +342,12 @@ fn known_better(
     let settles = place.newest - incident.opened >= index_of(rename_within_points(incident.points));
     let score = best_of(found, judgement);
     let (kind, at) = (alert_kind(score.kind), time_of(&score, place));
-    let renamed =
-        kind != incident.kind && (settles || is_clearly_ahead(score.kind, &incident, found));
+    let renamed = kind != incident.kind
+        && (settles || found.jumped || is_clearly_ahead(score.kind, &incident, found));
     let mut revised = false;
-    if judgement.margin >= -RENAME_WITHIN && (renamed || settles) {
+    // A jump is sized as soon as its level is seen, not only at the end.
+    let resized = found.jumped && kind == Kind::Step && !close(incident.size, score.size);
+    if judgement.margin >= -RENAME_WITHIN && (renamed || settles || resized) {
         revised = renamed || at != incident.at || !close(incident.size, score.size);
         incident = Incident { kind, at, size: score.size, score: score.q, ..incident };
     }
@@ -380,6 +386,12 @@ fn brings_evidence(incident: &Incident, judgement: &Judgement) -> bool {
 
 fn best_of(found: &Examination, judgement: &Judgement) -> Score {
     *found.score(judgement.name).unwrap_or(&found.step)
+}
+
+/// A point's running number, counted over the channel's life.
+fn number_of(index: usize, place: &Place<'_>) -> u64 {
+    let newer = place.points.len().saturating_sub(index + 1);
+    place.newest.saturating_sub(index_of(newer))
 }
 
 fn time_of(score: &Score, place: &Place<'_>) -> EventTime {
@@ -452,6 +464,7 @@ mod tests {
                 dependence: Some(score(Structure::Dependence, 0.3)),
                 points: self.points.len(),
                 phi: 0.3,
+                jumped: false,
                 noise: 1.0,
                 suspicious: false,
             };

@@ -269,7 +269,7 @@ fn gone_by_readings(kind: Kind) -> &'static str {
         Kind::ToleranceAhead => "The forecast for the asked day stays inside the tolerance.",
         Kind::OutOfTolerance => "The deviation is inside the tolerance again.",
         Kind::NoCurve => "A curve describes this channel again.",
-        Kind::Silent => "Readings arrive again.",
+        Kind::Silent => "Readings that can be used arrive again.",
     }
 }
 

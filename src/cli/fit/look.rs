@@ -1,19 +1,30 @@
 //! What one look at one series finds, and its JSON.
 
+use super::table::short;
 use crate::drift::choose::{SWITCH_ABOVE, aicc, aicc_classical, choose, eligible};
 use crate::drift::family::{Coefficients, Family};
 use crate::drift::fit::{Fit, FitOutcome, fit};
-use crate::drift::forecast::{sandwich, winsorised};
+use crate::drift::forecast::sandwich;
 use crate::drift::interval::{Interval, Intervals};
 use crate::drift::residual_tests::{ResidualTests, test_residuals};
-use crate::drift::serial::{effective_count, lag_correlation_short, spacing_of};
+use crate::drift::robust::scale::robust_scale;
+use crate::drift::serial::{
+    CORRECTED_FROM, count, effective_count, is_regular, lag_correlation_of_clipped,
+    lag_correlation_short, spacing_of,
+};
 use serde_json::{Map, Value, json};
+
+/// A reading is far off from so many robust standard deviations on (own rule).
+const FAR_OFF_SDS: f64 = 6.0;
 
 /// Level of the intervals.
 pub const LEVEL: f64 = 0.95;
 /// A test's p-value below this is worth a caution (common practice, no source).
 const TELLING: f64 = 0.01;
 
+/// What is said of a polynomial beyond the readings.
+const TURNS_ASTRAY: &str =
+    "a polynomial is no forecast: beyond the readings it turns away from whatever they do";
 /// The caution about predictions beyond the readings.
 pub const EXTRAPOLATED: &str =
     "beyond the readings nothing here tells whether the curve goes on like this";
@@ -96,7 +107,12 @@ fn spacing(x: &[f64]) -> Vec<f64> {
 
 /// Correlation of a curve's neighbouring residuals.
 fn lag1(fit: &Fit, x: &[f64], y: &[f64], spacing: &[f64]) -> f64 {
-    lag_correlation_short(&winsorised(fit, x, y), spacing, fit.family.parameter_count())
+    // Of the residuals as they are: a plain fit that follows a wild reading leaves them so.
+    let (residuals, parameters) = (fit.residuals(x, y), fit.family.parameter_count());
+    if x.len() < CORRECTED_FROM {
+        return lag_correlation_short(&residuals, spacing, parameters);
+    }
+    lag_correlation_of_clipped(&residuals, spacing, is_regular(spacing), count(parameters))
 }
 
 struct Ranking {
@@ -164,9 +180,28 @@ fn rank(fits: &[Fit], x: &[f64], y: &[f64], spacing: &[f64]) -> Ranking {
     Ranking { order, why: Some(choice.why) }
 }
 
+/// Names readings that lie so far off the curve that a plain fit follows them.
+fn far_off(fit: &Fit, x: &[f64], y: &[f64]) -> Option<String> {
+    let residuals = fit.residuals(x, y);
+    let limit = FAR_OFF_SDS * robust_scale(&residuals);
+    let farthest =
+        (0..x.len()).max_by(|&a, &b| residuals[a].abs().total_cmp(&residuals[b].abs()))?;
+    let far = residuals.iter().filter(|r| r.abs() > limit).count();
+    let share = far * 10 <= x.len();
+    (limit > 0.0 && far > 0 && share).then(|| {
+        format!(
+            "{far} of the readings lie far off the curve, the farthest at {}: this plain fit follows \
+             them",
+            short(x[farthest])
+        )
+    })
+}
+
 impl Curve {
     fn examine(fit: &Fit, x: &[f64], y: &[f64], spacing: &[f64], at: &[f64]) -> Curve {
-        let lag1 = lag1(fit, x, y, spacing);
+        let exact = fit.is_exact();
+        // What an exact curve leaves are rounding errors: nothing follows from how they hang together.
+        let lag1 = if exact { 0.0 } else { lag1(fit, x, y, spacing) };
         let serial_errors = sandwich(fit, x, spacing, lag1.clamp(0.0, 0.97))
             .map(|(covariance, _)| fit.standard_errors_of(&covariance));
         let intervals = Intervals::new(fit, x, LEVEL);
@@ -179,10 +214,9 @@ impl Curve {
                 extrapolated: !(oldest..=newest).contains(&x),
             })
             .collect();
-        let exact = fit.is_exact();
         let mut curve = Curve {
             fit: fit.clone(),
-            aicc: aicc_classical(fit),
+            aicc: aicc_classical(fit).filter(|_| !exact),
             lag1,
             effective_n: effective_count(x.len(), lag1),
             serial_errors,
@@ -191,6 +225,7 @@ impl Curve {
             cautions: Vec::new(),
         };
         curve.cautions = curve.cautions();
+        curve.cautions.extend(far_off(fit, x, y).filter(|_| !exact));
         if exact {
             curve.cautions.push(EXACT.to_owned());
         }
@@ -227,6 +262,9 @@ impl Curve {
             cautions.push("the scatter changes along the curve".to_owned());
         }
         if self.predictions.iter().any(|p| p.extrapolated) {
+            if family.may_turn() {
+                cautions.push(TURNS_ASTRAY.to_owned());
+            }
             cautions.push(EXTRAPOLATED.to_owned());
         }
         cautions

@@ -20,6 +20,7 @@ mod bend;
 mod confirm;
 mod dependence;
 pub mod frame;
+mod jump;
 pub mod resolution;
 pub mod shift;
 #[cfg(test)]
@@ -141,6 +142,8 @@ pub struct Examination {
     pub points: usize,
     /// Dependence taken as normal.
     pub phi: f64,
+    /// Whether the step is a jump that needs no test: then it is what happened, whatever else scores.
+    pub jumped: bool,
     /// Noise about the curve, y's unit.
     pub noise: f64,
     /// Whether a change of the mean is likely enough that the window must not become baseline.
@@ -208,9 +211,15 @@ pub fn examine(
         dependence: None,
         points: w.len(),
         phi: w.frame.phi_baseline,
+        jumped: false,
         noise: w.frame.noise,
         suspicious: false,
     };
+    if let Some(jump) = jump::look(w, &mut work.scratch) {
+        let (q, x) = (examination.step.q, w.points[jump.index].x);
+        examination.step = Score::new(Kind::Step, q, jump.size, jump.index, x);
+        examination.jumped = true;
+    }
     if deep {
         // The best explanation of the mean is taken out before neighbours are compared.
         work.load(w);
