@@ -56,7 +56,10 @@ pub fn aicc(fit: &Fit, n_effective: f64) -> Option<f64> {
 /// n (ln 2π + ln(RSS/n) + 1) + 2k + 2k(k+1)/(n−k−1).
 ///
 /// # Arguments
-/// `fit` — by plain least squares, residuals taken as independent; None as for [`aicc`].
+/// `fit` — by plain least squares, its residuals taken as independent.
+///
+/// # Outcomes
+/// None as for [`aicc`].
 pub fn aicc_classical(fit: &Fit) -> Option<f64> {
     let n = count(fit.n);
     aicc(fit, n).map(|value| value + n * ((2.0 * std::f64::consts::PI).ln() + 1.0))

@@ -22,10 +22,7 @@ pub fn own_correlation(fit: &Fit, x: &[f64], y: &[f64], spacing: &[f64]) -> f64 
 /// Returns the correlation of a fit's clipped residuals at the median spacing, in a workspace.
 ///
 /// # Arguments
-/// As for `own_correlation`: `fit` — the curve; `x` — the ages it was fitted to (n), days; `y` —
-/// the deviations (n); `spacing` — (n), ratios to the median spacing, from
-/// [`crate::drift::serial::spacing_of`]; `workspace` — room to work in: any, it does not change the
-/// result.
+/// As for [`own_correlation`]; `workspace` — room to work in: any, it does not change the result.
 pub fn own_correlation_in(
     fit: &Fit,
     x: &[f64],
@@ -84,7 +81,7 @@ pub fn sandwich(fit: &Fit, x: &[f64], spacing: &[f64], phi: f64) -> Option<(Matr
     sandwich_in(fit, x, &decays(spacing, phi), &mut Workspace::default())
 }
 
-/// Returns what [`sandwich`] does, in a workspace, phi^(spacing) given by [`decays`].
+/// Returns the covariance and noise variance of [`sandwich`], in a workspace.
 ///
 /// # Arguments
 /// `fit`, `x` — as for [`sandwich`]; `decays` — (n), from [`decays`]; `workspace` — room to work

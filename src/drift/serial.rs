@@ -178,7 +178,7 @@ pub fn effective_count(n: usize, phi: f64) -> f64 {
 /// Returns the median, reordering `values`; 0 of an empty slice.
 ///
 /// # Arguments
-/// `values` — any unit and order, not NaN; their order is lost.
+/// `values` — any unit and order; their order is lost.
 pub fn median(values: &mut [f64]) -> f64 {
     let m = values.len();
     if m == 0 {

@@ -88,7 +88,7 @@ impl Target<'_> {
     /// the others.
     ///
     /// # Arguments
-    /// `k` — the nonlinear coefficient, not 0.
+    /// `k` — the nonlinear coefficient, finite, may be 0.
     pub(super) fn fill_columns(&mut self, k: f64) {
         let [first, second, third, fourth] = &mut *self.columns;
         if self.family == Family::Power {
@@ -158,7 +158,7 @@ impl Target<'_> {
     /// Turns the columns into derivatives to the family's own inner coefficients.
     ///
     /// # Arguments
-    /// `inner` — the family's own inner coefficients, from `inner`.
+    /// `inner` — the family's own inner coefficients, from `Target::inner`.
     pub(super) fn own_columns(&mut self, inner: &Coefficients) {
         let a = inner[self.linear() - 1];
         let [_, second, third, fourth] = &mut *self.columns;
