@@ -90,6 +90,35 @@ const TOP: [&str; 11] = [
     "benches",
 ];
 
+/// Files of `drift` whose formulas have authors: each names them under `# Source`.
+const SOURCED: [&str; 25] = [
+    "choose.rs",
+    "confidence.rs",
+    "forecast.rs",
+    "interval.rs",
+    "least_squares.rs",
+    "projection.rs",
+    "reach.rs",
+    "refine.rs",
+    "residual_tests/breusch_pagan.rs",
+    "residual_tests/durbin_watson.rs",
+    "residual_tests/ljung_box.rs",
+    "residual_tests/reset.rs",
+    "residual_tests/runs.rs",
+    "robust.rs",
+    "robust/refine.rs",
+    "robust/scale.rs",
+    "sandwich.rs",
+    "serial.rs",
+    "structure/baseline.rs",
+    "structure/bend.rs",
+    "structure/dependence.rs",
+    "structure/resolution.rs",
+    "structure/shift.rs",
+    "structure/step.rs",
+    "tails.rs",
+];
+
 // ---- The scanner ------------------------------------------------------------------------------
 
 /// A Rust source as the rules read it; lines stand where they stood.
@@ -437,6 +466,60 @@ fn nothing_is_unfinished(source: &Source) -> Vec<String> {
     complaints
 }
 
+/// In `drift`, who calls learns what each argument means, and formulas keep their authors.
+fn mathematics_is_explained(source: &Source) -> Vec<String> {
+    if !source.is_on("drift") {
+        return Vec::new();
+    }
+    let mut complaints = Vec::new();
+    let code = source.own_code();
+    let lines: Vec<&str> = source.text.lines().collect();
+    for start in ["pub fn ", "pub const fn "] {
+        for (at, _) in code.match_indices(start) {
+            let above = code[..at].matches('\n').count();
+            let doc = lines[..above].iter().rev().map(|line| line.trim_start());
+            let mut doc = doc.take_while(|line| line.starts_with("///") || line.starts_with("#["));
+            if takes_arguments(&code[at..]) && !doc.any(|line| line == "/// # Arguments") {
+                complaints.push(source.complaint(above + 1, "a pub fn without # Arguments"));
+            }
+        }
+    }
+    let sourced = SOURCED.iter().any(|file| source.path == format!("src/drift/{file}"));
+    let mut own = lines.iter().take(source.lines);
+    if sourced && !own.any(|line| line.trim_start() == "/// # Source") {
+        complaints.push(source.complaint(1, "formulas without # Source"));
+    }
+    complaints
+}
+
+/// Whether a function takes anything besides self, given its signature and what follows.
+fn takes_arguments(signature: &str) -> bool {
+    let (mut angles, mut before, mut from) = (0, ' ', signature.len());
+    for (at, c) in signature.char_indices() {
+        match c {
+            '<' => angles += 1,
+            '>' if before != '-' => angles -= 1,
+            '(' if angles == 0 => {
+                from = at + 1;
+                break;
+            }
+            _ => {}
+        }
+        before = c;
+    }
+    let list = signature[from..].trim_start();
+    let first = list.split([',', ')']).next().unwrap_or_default().trim();
+    if has_word(first, "self") {
+        list[first.len()..]
+            .trim_start_matches(|c: char| c == ',' || c.is_whitespace())
+            .chars()
+            .next()
+            .is_some_and(|c| c != ')')
+    } else {
+        !first.is_empty()
+    }
+}
+
 /// Plain words, the same ones everywhere.
 fn words_are_plain(path: &str, text: &str) -> Vec<String> {
     let mut complaints = Vec::new();
@@ -640,6 +723,40 @@ fn files_say_what_they_are_for_and_leave_nothing_open() {
             ("src/a.rs", "//! A.\n// todo! is a macro\nconst A: &str = \"#[ignore\";"),
             ("src/a.rs", "//! A.\n#[cfg(test)]\nmod tests {\n    fn f() { g().unwrap(); }\n}"),
             ("tests/a.rs", "//! A.\nfn f() { g().unwrap(); }"),
+        ],
+    );
+}
+
+#[test]
+fn the_mathematics_names_its_arguments_and_authors() {
+    let found = sources(&["src/drift"]);
+    for file in SOURCED {
+        let there = found.iter().any(|source| source.path == format!("src/drift/{file}"));
+        assert!(there, "src/drift/{file} has moved: so must its line in SOURCED");
+    }
+    let explained = "/// Returns it.\n///\n/// # Arguments\n/// `x` — age, days.\n";
+    let before = format!("{explained}pub fn f(x: f64) {{}}\n\npub fn g(x: f64) {{}}");
+    let marked = format!("{explained}#[must_use]\npub fn f(x: f64) -> f64 {{ x }}");
+    check(
+        mathematics_is_explained,
+        &found,
+        &[
+            ("src/drift/a.rs", "/// Returns it.\npub fn f(x: f64) -> f64 { x }"),
+            ("src/drift/a.rs", "impl A {\n    pub fn f(&self, x: f64) {}\n}"),
+            ("src/drift/a.rs", "pub fn f(\n    &mut self,\n    x: f64,\n) {}"),
+            ("src/drift/a.rs", "pub const fn f<F: Fn(u8) -> u8>(f: F) {}"),
+            ("src/drift/a.rs", "// # Arguments\npub fn f(x: f64) {}"),
+            ("src/drift/a.rs", &before),
+            ("src/drift/serial.rs", "fn f() {}"),
+            ("src/drift/serial.rs", "fn f() {}\n#[cfg(test)]\nmod tests {\n    /// # Source\n}"),
+        ],
+        &[
+            ("src/drift/a.rs", &marked),
+            ("src/drift/a.rs", "pub fn f() {} pub fn g(&self) {} pub fn h(\n    mut self,\n) {}"),
+            ("src/drift/a.rs", "fn f(x: f64) {} pub(crate) fn g(x: f64) {}"),
+            ("src/drift/a.rs", "#[cfg(test)]\nmod tests {\n    pub fn f(x: f64) {}\n}"),
+            ("src/drift/serial.rs", "/// # Source\n/// An author, a year.\nfn f() {}"),
+            ("src/watch/a.rs", "pub fn f(x: f64) {}"),
         ],
     );
 }

@@ -42,6 +42,9 @@ pub struct Choice {
 /// AICc = n_e ln(RSS/n) + 2k + 2k(k+1)/(n_e − k − 1), k = p + 1, up to a constant common to all
 /// families on the same data.
 ///
+/// # Arguments
+/// `fit` — a curve; `n_effective` — independent data it rests on, 1 to n.
+///
 /// # Source
 /// Hurvich and Tsai (1989), Biometrika 76, for n_e = n; n_e instead of n: own rule. From memory.
 pub fn aicc(fit: &Fit, n_effective: f64) -> Option<f64> {
@@ -55,6 +58,12 @@ pub fn aicc(fit: &Fit, n_effective: f64) -> Option<f64> {
 
 /// Returns the classical AICc with all constants, as statistics packages print it:
 /// n (ln 2π + ln(RSS/n) + 1) + 2k + 2k(k+1)/(n−k−1).
+///
+/// # Arguments
+/// `fit` — by plain least squares, its residuals taken as independent.
+///
+/// # Outcomes
+/// None as for [`aicc`].
 pub fn aicc_classical(fit: &Fit) -> Option<f64> {
     let n = count(fit.n);
     aicc(fit, n).map(|value| value + n * ((2.0 * std::f64::consts::PI).ln() + 1.0))
@@ -65,6 +74,9 @@ pub fn aicc_classical(fit: &Fit) -> Option<f64> {
 /// # Arguments
 /// `fits` — at least one, same data; `n_effective` — independent data they are worth;
 /// `current` — the family chosen last time, kept unless another is better by more than 4.
+///
+/// # Outcomes
+/// See [`Choice`]; an exact curve is chosen outright, the plainest of several.
 pub fn choose(fits: &[Fit], n_effective: f64, current: Option<Family>) -> Choice {
     assert!(!fits.is_empty(), "a choice needs a fit");
     if let Some(choice) = plainest_exact(fits) {
@@ -117,8 +129,8 @@ fn plainest_exact(fits: &[Fit]) -> Option<Choice> {
 /// `better_by`. All of them where there is no monotone family.
 ///
 /// # Arguments
-/// `fits` — to the same data; `(oldest, newest)` — the range of ages; `better_by` — in AICc, of the
-/// family: [`SWITCH_ABOVE`] for one look.
+/// `fits` — to the same data; `n_effective` — independent data they are worth; `(oldest, newest)` —
+/// the range of ages, days; `better_by` — in AICc, of the family: [`SWITCH_ABOVE`] for one look.
 pub fn eligible(
     fits: &[Fit],
     n_effective: f64,

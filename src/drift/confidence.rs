@@ -56,7 +56,11 @@ impl<'a> Confidence<'a> {
         Some(Confidence { fit, covariance, phi, freedom, quantile })
     }
 
-    /// The curve at an age with its interval; None where the curve is not defined or not finite.
+    /// Returns the curve at an age with its interval; None where the curve is not defined or not
+    /// finite.
+    ///
+    /// # Arguments
+    /// `x` — age, days; > 0 where the family needs it.
     pub fn curve_at(&self, x: f64) -> Option<Interval> {
         if self.fit.family.needs_positive_age() && x <= 0.0 {
             return None;
@@ -65,7 +69,8 @@ impl<'a> Confidence<'a> {
         self.about(self.fit.value(x), g.dot(&(self.covariance * g)).max(0.0).sqrt())
     }
 
-    /// A coefficient with its interval, in the units of the data; None where it is not finite.
+    /// Returns a coefficient with its interval, in the units of the data; None where it is not
+    /// finite.
     ///
     /// # Arguments
     /// `k` — its place in the order of [`crate::drift::family::Family::coefficient_names`].

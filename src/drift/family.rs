@@ -57,7 +57,10 @@ impl Family {
         }
     }
 
-    /// The family of that name, or `None`.
+    /// Returns the family of that name, or `None`.
+    ///
+    /// # Arguments
+    /// `name` — as [`Family::name`] gives it.
     pub fn from_name(name: &str) -> Option<Family> {
         Family::ALL.into_iter().find(|f| f.name() == name)
     }
@@ -104,7 +107,8 @@ impl Family {
     /// Returns the curve's value f(x; theta), in y's unit.
     ///
     /// # Arguments
-    /// `theta` — coefficients; `x` — age, > 0 where [`Family::needs_positive_age`].
+    /// `theta` — coefficients, in the order of [`Family::coefficient_names`]; `x` — age, in the
+    /// unit of the coefficients, > 0 where [`Family::needs_positive_age`].
     pub fn value(self, theta: &Coefficients, x: f64) -> f64 {
         let [t0, t1, t2, t3] = *theta;
         match self {
@@ -122,7 +126,8 @@ impl Family {
     /// exponential is needed, none elsewhere. For the inner loop of a fit.
     ///
     /// # Arguments
-    /// `ln_x` — ln x where [`Family::needs_positive_age`]; not read otherwise.
+    /// `theta`, `x` — as for [`Family::value`]; `ln_x` — ln x where [`Family::needs_positive_age`];
+    /// not read otherwise.
     pub fn value_and_gradient(
         self,
         theta: &Coefficients,
@@ -159,7 +164,7 @@ impl Family {
     /// Returns the gradient ∂f/∂theta at x, unused places 0.
     ///
     /// # Arguments
-    /// `theta` — coefficients; `x` — age, > 0 where [`Family::needs_positive_age`].
+    /// `theta`, `x` — as for [`Family::value`].
     pub fn gradient(self, theta: &Coefficients, x: f64) -> Coefficients {
         let [_, t1, t2, _] = *theta;
         match self {

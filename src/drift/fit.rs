@@ -24,8 +24,9 @@ const TIME_CONSTANTS_MAX: f64 = 20.0;
 /// Fits one family.
 ///
 /// # Arguments
-/// `x` — ages (n), finite; `y` — deviations (n), finite, one unit; `robust` — winsorise residuals at
-/// 3 robust standard deviations during refinement (for the watch), instead of plain least squares.
+/// `family` — the curve's; `x` — ages (n), finite; `y` — deviations (n), finite, one unit; `robust`
+/// — winsorise residuals at 3 robust standard deviations during refinement (for the watch), instead
+/// of plain least squares.
 ///
 /// # Outcomes
 /// See [`FitOutcome`].

@@ -67,7 +67,11 @@ impl Forecaster {
         Forecaster::new_in(x, y, families, phi, &mut Workspace::default())
     }
 
-    /// The same in a workspace.
+    /// Fits the families and prepares their uncertainties, in a workspace.
+    ///
+    /// # Arguments
+    /// As for [`Forecaster::new`]; `workspace` — room to work in: any, it does not change the
+    /// result.
     pub fn new_in(
         x: &[f64],
         y: &[f64],
@@ -105,7 +109,10 @@ impl Forecaster {
         Some(Forecaster { members, half, choice, noise: noise? })
     }
 
-    /// The forecast at age `x`, days.
+    /// Returns the forecast at an age: value and standard deviation of a new reading.
+    ///
+    /// # Arguments
+    /// `x` — age, days; > 0 where a family needs it.
     pub fn at(&self, x: f64) -> Expected {
         let mut own = [(0.0, 0.0); Family::ALL.len()];
         for (own, member) in own.iter_mut().zip(&self.members) {
@@ -134,11 +141,18 @@ impl Member {
 }
 
 /// Fits each family robustly and keeps those that could be fitted.
+///
+/// # Arguments
+/// `x` — ages (n), days, strictly increasing; `y` — deviations (n), in the unit; `families` — those
+/// to fit.
 pub fn fit_all(x: &[f64], y: &[f64], families: &[Family]) -> Vec<Fit> {
     fit_all_in(x, y, families, &mut Workspace::default())
 }
 
-/// The same in a workspace.
+/// Fits each family robustly, in a workspace, and keeps those that could be fitted.
+///
+/// # Arguments
+/// As for [`fit_all`]; `workspace` — room to work in: any, it does not change the result.
 pub fn fit_all_in(
     x: &[f64],
     y: &[f64],

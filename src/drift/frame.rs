@@ -30,7 +30,8 @@ impl Frame {
     /// with ln x: the geometric mean, for they know no shift.
     ///
     /// # Arguments
-    /// `x` — ages, finite, at least one; > 0 where [`Family::needs_positive_age`].
+    /// `family` — the curve's; `x` — ages, days, finite, at least one; > 0 where
+    /// [`Family::needs_positive_age`].
     ///
     /// # Returns
     /// None when all ages are equal.
@@ -62,7 +63,10 @@ impl Frame {
         (varied && frame.scale.is_finite() && frame.scale > 0.0).then_some(frame)
     }
 
-    /// The inner age.
+    /// Returns the inner age (x − centre)/scale, a pure number.
+    ///
+    /// # Arguments
+    /// `x` — age, days.
     pub fn inside(&self, x: f64) -> f64 {
         (x - self.centre) / self.scale
     }
@@ -71,7 +75,8 @@ impl Frame {
     /// entry (i, k) is ∂ outer_i / ∂ inner_k.
     ///
     /// # Arguments
-    /// `inner` — coefficients in this frame, in the order of [`Family::coefficient_names`].
+    /// `family` — the curve's; `inner` — coefficients in this frame, in the order of
+    /// [`Family::coefficient_names`].
     pub fn outside(&self, family: Family, inner: &Coefficients) -> (Coefficients, Matrix4<f64>) {
         if *self == Frame::AS_IS {
             return (*inner, Matrix4::identity());

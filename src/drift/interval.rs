@@ -31,7 +31,8 @@ impl<'a> Intervals<'a> {
     /// Prepares intervals about a curve.
     ///
     /// # Arguments
-    /// `fit` — by plain least squares; `x` — the ages it was fitted to; `level` — such as 0.95.
+    /// `fit` — by plain least squares; `x` — the ages it was fitted to (n), days; `level` — between
+    /// 0 and 1, such as 0.95.
     ///
     /// # Returns
     /// None when the curve's columns are dependent.
@@ -44,6 +45,9 @@ impl<'a> Intervals<'a> {
     }
 
     /// Returns value ± t √(s² + g' V g) at an age; None where the curve is not defined or not finite.
+    ///
+    /// # Arguments
+    /// `x` — age, days.
     ///
     /// # Source
     /// Draper and Smith (1998), Applied Regression Analysis, ch. 3; delta method for curves nonlinear
@@ -59,7 +63,10 @@ impl<'a> Intervals<'a> {
         (interval.low.is_finite() && interval.high.is_finite()).then_some(interval)
     }
 
-    /// Orthonormal rows that span what the curve's columns span; unused places 0.
+    /// Returns orthonormal rows (n) that span what the curve's columns span; unused places 0.
+    ///
+    /// # Arguments
+    /// `x` — the ages the curve was fitted to (n), days.
     pub fn orthonormal_rows(&self, x: &[f64]) -> Vec<[f64; COEFFICIENTS_MAX]> {
         x.iter()
             .map(|&v| (self.factor.transpose() * Vector4::from(self.fit.gradient(v))).into())
@@ -71,7 +78,7 @@ impl<'a> Intervals<'a> {
 ///
 /// # Arguments
 /// `probability` — 0.5 to 1, exclusive; `freedom` — degrees of freedom, at least 1.
-pub fn student_quantile(probability: f64, freedom: f64) -> f64 {
+pub(crate) fn student_quantile(probability: f64, freedom: f64) -> f64 {
     let student = StudentsT::new(0.0, 1.0, freedom).expect("at least one degree of freedom");
     student.inverse_cdf(probability)
 }

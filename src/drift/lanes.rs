@@ -4,12 +4,18 @@
 const LANES: usize = 8;
 
 /// Returns Σ a.
-pub fn sum(a: &[f64]) -> f64 {
+///
+/// # Arguments
+/// `a` — numbers, any unit; 0 of none.
+pub(crate) fn sum(a: &[f64]) -> f64 {
     sum_of(a, |v| v)
 }
 
 /// Returns Σ f(a).
-pub fn sum_of(a: &[f64], f: impl Fn(f64) -> f64) -> f64 {
+///
+/// # Arguments
+/// `a` — numbers; `f` — of one number, the same at every call.
+pub(crate) fn sum_of(a: &[f64], f: impl Fn(f64) -> f64) -> f64 {
     let (whole, rest) = a.as_chunks::<LANES>();
     let mut lanes = [0.0; LANES];
     for a in whole {
@@ -24,7 +30,7 @@ pub fn sum_of(a: &[f64], f: impl Fn(f64) -> f64) -> f64 {
 ///
 /// # Arguments
 /// `a`, `b` — of one length.
-pub fn dot(a: &[f64], b: &[f64]) -> f64 {
+pub(crate) fn dot(a: &[f64], b: &[f64]) -> f64 {
     assert_eq!(a.len(), b.len(), "two columns of one length");
     let ((whole_a, rest_a), (whole_b, rest_b)) = (a.as_chunks::<LANES>(), b.as_chunks::<LANES>());
     let mut lanes = [0.0; LANES];
@@ -39,8 +45,8 @@ pub fn dot(a: &[f64], b: &[f64]) -> f64 {
 /// Returns Σ (a − centre)² and Σ (a − centre) b.
 ///
 /// # Arguments
-/// `a`, `b` — of one length.
-pub fn about(a: &[f64], centre: f64, b: &[f64]) -> (f64, f64) {
+/// `a`, `b` — of one length; `centre` — in a's unit.
+pub(crate) fn about(a: &[f64], centre: f64, b: &[f64]) -> (f64, f64) {
     assert_eq!(a.len(), b.len(), "two columns of one length");
     let ((whole_a, rest_a), (whole_b, rest_b)) = (a.as_chunks::<LANES>(), b.as_chunks::<LANES>());
     let (mut squares, mut products) = ([0.0; LANES], [0.0; LANES]);
@@ -60,7 +66,10 @@ pub fn about(a: &[f64], centre: f64, b: &[f64]) -> (f64, f64) {
 }
 
 /// Adds `times` b to a.
-pub fn add(a: &mut [f64], times: f64, b: &[f64]) {
+///
+/// # Arguments
+/// `a`, `b` — of one length; `times` — a factor.
+pub(crate) fn add(a: &mut [f64], times: f64, b: &[f64]) {
     assert_eq!(a.len(), b.len(), "two columns of one length");
     for (a, b) in a.iter_mut().zip(b) {
         *a += times * b;

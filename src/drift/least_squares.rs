@@ -27,7 +27,7 @@ pub struct Solved {
 ///
 /// # Numerics
 /// Householder reflections of nalgebra, O(n p²).
-pub fn solve(rows: &[Coefficients], r: &[f64], p: usize) -> Option<Solved> {
+pub(crate) fn solve(rows: &[Coefficients], r: &[f64], p: usize) -> Option<Solved> {
     let mut a = DMatrix::from_fn(rows.len(), p, |i, k| rows[i][k]);
     let mut scale = [1.0; COEFFICIENTS_MAX];
     for (k, mut column) in a.column_iter_mut().enumerate() {

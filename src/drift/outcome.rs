@@ -44,16 +44,25 @@ pub struct Fit {
 impl Fit {
     /// Returns the curve's value at an age, in y's unit; by the frame, so that it keeps its digits
     /// where the coefficients alone would cancel.
+    ///
+    /// # Arguments
+    /// `x` — age, days; > 0 where the family needs it.
     pub fn value(&self, x: f64) -> f64 {
         self.family.value(&self.inner, self.frame.inside(x))
     }
 
     /// Returns the gradient of the curve to its inner coefficients.
+    ///
+    /// # Arguments
+    /// `x` — age, days; > 0 where the family needs it.
     pub fn gradient(&self, x: f64) -> Coefficients {
         self.family.gradient(&self.inner, self.frame.inside(x))
     }
 
     /// Returns value and gradient at once, in a third of the time; their last digit may differ.
+    ///
+    /// # Arguments
+    /// `x` — age, days; > 0 where the family needs it.
     pub fn value_and_gradient(&self, x: f64) -> (f64, Coefficients) {
         let u = self.frame.inside(x);
         let ln_u = if self.family.needs_positive_age() { u.ln() } else { 0.0 };
@@ -61,6 +70,9 @@ impl Fit {
     }
 
     /// Returns the standard errors of `theta` that follow from a covariance of the inner coefficients.
+    ///
+    /// # Arguments
+    /// `covariance` — of `inner`, its leading p rows and columns used.
     pub fn standard_errors_of(&self, covariance: &Matrix4<f64>) -> Coefficients {
         let (_, turn) = self.frame.outside(self.family, &self.inner);
         let outer = turn * covariance * turn.transpose();
@@ -76,7 +88,10 @@ impl Fit {
         self.residual_sd <= ROUNDING * self.largest
     }
 
-    /// Returns y less the curve.
+    /// Returns y less the curve (n), in y's unit.
+    ///
+    /// # Arguments
+    /// `x` — ages (n), days; `y` — deviations (n), in the unit.
     pub fn residuals(&self, x: &[f64], y: &[f64]) -> Vec<f64> {
         x.iter().zip(y).map(|(&v, &w)| w - self.value(v)).collect()
     }

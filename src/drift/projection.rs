@@ -39,7 +39,7 @@ const GOLDEN: f64 = 0.618_033_988_749_894_9;
 ///
 /// # Source
 /// Golub and Pereyra (1973), SIAM Journal on Numerical Analysis 10. From memory.
-pub fn project(family: Family, data: &Data<'_>) -> Result<Coefficients, FitOutcome> {
+pub(crate) fn project(family: Family, data: &Data<'_>) -> Result<Coefficients, FitOutcome> {
     let mut profile = Profile::new(family, data);
     let undetermined = |what| Err(FitOutcome::WeaklyDetermined(what));
     if data.y.iter().all(|v| (v - profile.mean).abs() <= 0.0) {

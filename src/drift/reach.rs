@@ -115,12 +115,18 @@ pub struct Reach {
 }
 
 impl Reach {
-    /// No reach, for that reason.
+    /// Returns no reach, for that reason.
+    ///
+    /// # Arguments
+    /// `limit` — why.
     pub fn none(limit: Limit) -> Reach {
         Reach { days_past_newest: 0.0, limit, widening: Vec::new() }
     }
 
-    /// The factor for a statement so many days ahead; None beyond the reach.
+    /// Returns the factor for a statement so many days ahead; None beyond the reach.
+    ///
+    /// # Arguments
+    /// `days_ahead` — past the newest age; below 0 counts as 0.
     pub fn widening_at(&self, days_ahead: f64) -> Option<f64> {
         if days_ahead <= 0.0 {
             return Some(self.widening.first().map_or(1.0, |&(_, factor)| factor));
@@ -128,8 +134,12 @@ impl Reach {
         self.widening.iter().find(|&&(edge, _)| days_ahead <= edge + 1e-9).map(|&(_, f)| f)
     }
 
-    /// The statement so many days past the newest age: value and half width of its 95 % interval.
-    /// None beyond the reach.
+    /// Returns the statement so many days past the newest age: value and half width of its 95 %
+    /// interval, in the unit. None beyond the reach.
+    ///
+    /// # Arguments
+    /// `forecaster` — of the same window; `newest_age` — of its readings, days; `days_ahead` — past
+    /// that, days.
     pub fn statement(
         &self,
         forecaster: &Forecaster,
@@ -145,6 +155,9 @@ impl Reach {
 }
 
 /// Returns the largest share of its span that a window of `n` points may be carried past its newest.
+///
+/// # Arguments
+/// `n` — points in the window.
 pub fn cap(n: usize) -> f64 {
     if n < POINTS_FOR_FULL_CAP { CAP_OF_SHORT_WINDOWS } else { HORIZONS[HORIZONS.len() - 1] }
 }
@@ -166,7 +179,10 @@ pub fn assess(x: &[f64], y: &[f64], families: &[Family], phi: f64) -> Reach {
     assess_in(x, y, families, phi, &mut Workspace::default())
 }
 
-/// The same in a workspace.
+/// Assesses how far a window supports statements, in a workspace.
+///
+/// # Arguments
+/// As for [`assess`]; `workspace` — room to work in: any, it does not change the result.
 pub fn assess_in(
     x: &[f64],
     y: &[f64],

@@ -40,7 +40,11 @@ struct Evaluated {
 
 impl<'a> Data<'a> {
     /// Takes the data into a frame.
-    pub fn new(family: Family, frame: Frame, x: &[f64], y: &'a [f64]) -> Data<'a> {
+    ///
+    /// # Arguments
+    /// `family` — the curve's; `frame` — its frame; `x` — ages (n), days; `y` — deviations (n), in
+    /// the unit.
+    pub(crate) fn new(family: Family, frame: Frame, x: &[f64], y: &'a [f64]) -> Data<'a> {
         let u: Vec<f64> = x.iter().map(|&v| frame.inside(v)).collect();
         let ln_u = if family.needs_positive_age() {
             u.iter().map(|v| v.ln()).collect()
@@ -71,6 +75,9 @@ impl Evaluated {
 /// Refines by plain least squares until no digit changes. Returns the inner coefficients and the
 /// number of steps.
 ///
+/// # Arguments
+/// `family` — the curve's; `data` — in its frame; `theta` — where to start, in that frame.
+///
 /// # Numerics
 /// Gauss–Newton by QR; steps are halved while they raise the sum of squares. Near the optimum the
 /// relative offset decides: the share of the residuals that the curve's columns still explain.
@@ -78,7 +85,7 @@ impl Evaluated {
 /// # Source
 /// Gauss–Newton with QR: Björck (1996), Numerical Methods for Least Squares Problems, ch. 9; relative
 /// offset: Bates and Watts (1981), Technometrics 23. From memory.
-pub fn refine_plain(
+pub(crate) fn refine_plain(
     family: Family,
     data: &Data<'_>,
     mut theta: Coefficients,

@@ -46,7 +46,11 @@ pub(crate) struct Target<'a> {
 
 impl<'a> Target<'a> {
     /// Prepares a family's fit; None when all ages are equal and the family needs a frame.
-    pub fn new(
+    ///
+    /// # Arguments
+    /// `family` — the curve's; `x` — ages (n), days; `raw` — deviations (n), in the unit; `weights`
+    /// — (n), above 0, None: all 1; `workspace` — room to work in.
+    pub(crate) fn new(
         family: Family,
         x: &'a [f64],
         raw: &'a [f64],
@@ -105,8 +109,8 @@ impl<'a> Target<'a> {
 /// Fits one family as the watch does, without anything known beforehand.
 ///
 /// # Arguments
-/// `x` — ages (n), days, finite; `y` — deviations (n), finite, one unit; `workspace` — whatever was
-/// used before, or a new one: it does not change the result.
+/// `family` — the curve's; `x` — ages (n), days, finite; `y` — deviations (n), finite, one unit;
+/// `workspace` — whatever was used before, or a new one: it does not change the result.
 ///
 /// # Outcomes
 /// See [`FitOutcome`]. The curve is the one of a [`crate::drift::fit::fit`] whose residuals were
@@ -122,8 +126,8 @@ pub fn fit_robust(family: Family, x: &[f64], y: &[f64], workspace: &mut Workspac
 /// Fits one family as the watch does, some data weighing more than others.
 ///
 /// # Arguments
-/// As for [`fit_robust`]; `weights` — (n), finite, above 0, of mean 1; None: all alike, to the same bits
-/// as [`fit_robust`].
+/// As for [`fit_robust`]; `weights` — (n), finite, above 0, of mean 1; None: all alike, to the same
+/// bits as [`fit_robust`].
 ///
 /// # Outcomes
 /// Those of [`fit_robust`]. Sums of squares are Σ w r²; the residual standard deviation is in y's unit,

@@ -11,11 +11,18 @@ use nalgebra::Matrix4;
 
 /// Returns the correlation of a fit's residuals, clipped at 3 robust standard deviations, at the median
 /// spacing, bias-corrected.
+///
+/// # Arguments
+/// `fit` — the curve; `x` — the ages it was fitted to (n), days; `y` — the deviations (n);
+/// `spacing` — (n), ratios to the median spacing, from [`crate::drift::serial::spacing_of`].
 pub fn own_correlation(fit: &Fit, x: &[f64], y: &[f64], spacing: &[f64]) -> f64 {
     own_correlation_in(fit, x, y, spacing, &mut Workspace::default())
 }
 
-/// The same in a workspace.
+/// Returns the correlation of a fit's clipped residuals at the median spacing, in a workspace.
+///
+/// # Arguments
+/// As for [`own_correlation`]; `workspace` — room to work in: any, it does not change the result.
 pub fn own_correlation_in(
     fit: &Fit,
     x: &[f64],
@@ -26,7 +33,10 @@ pub fn own_correlation_in(
     lag_correlation(clipped(fit, x, y, workspace), spacing, fit.family.parameter_count())
 }
 
-/// Returns the residuals clipped at 3 robust standard deviations.
+/// Returns the residuals (n), in y's unit, clipped at 3 robust standard deviations.
+///
+/// # Arguments
+/// `fit` — the curve; `x` — the ages it was fitted to (n), days; `y` — the deviations (n).
 pub fn winsorised(fit: &Fit, x: &[f64], y: &[f64]) -> Vec<f64> {
     clipped(fit, x, y, &mut Workspace::default()).to_vec()
 }
@@ -41,7 +51,7 @@ fn clipped<'a>(fit: &Fit, x: &[f64], y: &[f64], workspace: &'a mut Workspace) ->
     residuals
 }
 
-/// What is left of a correlation from each reading to the next: phi^(spacing).
+/// Returns what is left of a correlation from each reading to the next: phi^(spacing).
 ///
 /// # Arguments
 /// `spacing` — ratios to the median spacing, as [`crate::drift::serial::spacing_of`] gives them; `phi`
@@ -57,7 +67,8 @@ pub fn decays(spacing: &[f64], phi: f64) -> Vec<f64> {
 /// V = s² (JᵀJ)⁻¹ JᵀRJ (JᵀJ)⁻¹, s² = RSS/(n − tr[(JᵀJ)⁻¹ JᵀRJ]), R_ij = phi^(|t_i − t_j|/δ).
 ///
 /// # Arguments
-/// `spacing` — ratios to the median spacing δ; `phi` — correlation at δ, 0 ≤ phi < 1.
+/// `fit` — the curve; `x` — the ages it was fitted to (n), days; `spacing` — (n), ratios to the
+/// median spacing δ; `phi` — correlation at δ, 0 ≤ phi < 1.
 ///
 /// # Numerics
 /// Columns scaled to unit length; JᵀRJ by forward recursion, O(n p²). None when columns are dependent.
@@ -70,7 +81,11 @@ pub fn sandwich(fit: &Fit, x: &[f64], spacing: &[f64], phi: f64) -> Option<(Matr
     sandwich_in(fit, x, &decays(spacing, phi), &mut Workspace::default())
 }
 
-/// The same in a workspace, phi^(spacing) given by [`decays`].
+/// Returns the covariance and noise variance of [`sandwich`], in a workspace.
+///
+/// # Arguments
+/// `fit`, `x` — as for [`sandwich`]; `decays` — (n), from [`decays`]; `workspace` — room to work
+/// in: any, it does not change the result.
 pub fn sandwich_in(
     fit: &Fit,
     x: &[f64],

@@ -51,13 +51,19 @@ pub fn spacing_of(x: &[f64]) -> (f64, Vec<f64>) {
 }
 
 /// Returns one spacing in units of the median, held within the documented limits.
-pub fn spacing_ratio(gap_days: f64, median_days: f64) -> f64 {
+///
+/// # Arguments
+/// `gap_days` — one spacing, days; `median_days` — the median spacing, days, > 0.
+pub(crate) fn spacing_ratio(gap_days: f64, median_days: f64) -> f64 {
     let ratio = gap_days / median_days;
     if ratio.is_nan() { 1.0 } else { ratio.clamp(SPACING_RATIO_MIN, SPACING_RATIO_MAX) }
 }
 
-/// Whether the series counts as evenly spaced (see [`REGULAR_TOLERANCE`]).
-pub fn is_regular(spacing: &[f64]) -> bool {
+/// Returns whether the series counts as evenly spaced (see [`REGULAR_TOLERANCE`]).
+///
+/// # Arguments
+/// `spacing` — from [`spacing_of`].
+pub(crate) fn is_regular(spacing: &[f64]) -> bool {
     spacing.iter().skip(1).all(|r| (r - 1.0).abs() <= REGULAR_TOLERANCE)
 }
 
@@ -84,8 +90,12 @@ pub fn lag_correlation(residuals: &[f64], spacing: &[f64], parameters: usize) ->
     lag_correlation_of_clipped(&clipped(residuals), spacing, is_regular(spacing), count(parameters))
 }
 
-/// As [`lag_correlation`], for residuals already clipped and a count of coefficients that may be
-/// a fraction (a part of the window bears a part of the curve).
+/// Estimates phi as [`lag_correlation`], for residuals already clipped and a count of coefficients
+/// that may be a fraction (a part of the window bears a part of the curve).
+///
+/// # Arguments
+/// `residuals` — clipped already, in time order (n); `spacing` — from [`spacing_of`] (n); `regular`
+/// — whether it counts as even; `parameters` — coefficients, may be a fraction.
 pub fn lag_correlation_of_clipped(
     residuals: &[f64],
     spacing: &[f64],
@@ -101,8 +111,11 @@ pub fn lag_correlation_of_clipped(
     if phi.is_finite() { phi.clamp(-PHI_MAX, PHI_MAX) } else { 0.0 }
 }
 
-/// As [`lag_correlation`] for one short series: below 20 residuals the correction,
+/// Estimates phi as [`lag_correlation`], for one short series: below 20 residuals the correction,
 /// which is right to the order of 1/n, would be all there is, and is left out.
+///
+/// # Arguments
+/// As for [`lag_correlation`].
 pub fn lag_correlation_short(residuals: &[f64], spacing: &[f64], parameters: usize) -> f64 {
     if residuals.len() >= CORRECTED_FROM {
         return lag_correlation(residuals, spacing, parameters);
@@ -126,6 +139,9 @@ fn raw_phi(residuals: &[f64], spacing: &[f64], regular: bool) -> Option<f64> {
 }
 
 /// Returns the Durbin–Watson statistic Σ (e_i − e_(i−1))² / Σ e_i²; 2 when all are 0.
+///
+/// # Arguments
+/// `residuals` — in time order, any unit.
 ///
 /// # Source
 /// J. Durbin and G. S. Watson, Testing for serial correlation in least squares regression I,
@@ -160,6 +176,9 @@ pub fn effective_count(n: usize, phi: f64) -> f64 {
 }
 
 /// Returns the median, reordering `values`; 0 of an empty slice.
+///
+/// # Arguments
+/// `values` — any unit and order; their order is lost.
 pub fn median(values: &mut [f64]) -> f64 {
     let m = values.len();
     if m == 0 {

@@ -33,6 +33,9 @@ pub fn normal_score_two_sided(z: f64) -> f64 {
 }
 
 /// Returns the two-sided normal tail P(|Z| ≥ |z|) itself; 0 from about |z| = 38 on.
+///
+/// # Arguments
+/// `z` — normal deviate, sign ignored.
 pub fn normal_two_sided(z: f64) -> f64 {
     erfc(z.abs() / SQRT_2)
 }
@@ -91,6 +94,9 @@ pub fn student_score_two_sided(t: f64, nu: f64) -> f64 {
 }
 
 /// Returns the probability of a score, 10^−q, never below the smallest normal double.
+///
+/// # Arguments
+/// `score` — −log10 p; below 0 counts as 0.
 pub fn probability(score: f64) -> f64 {
     10.0_f64.powf(-score.max(0.0)).max(f64::MIN_POSITIVE)
 }

@@ -20,6 +20,10 @@ pub struct BreuschPagan {
 /// Returns the studentised test. Regressors: the curve's own, without the constant, where it is
 /// linear in its coefficients; else its fitted values.
 ///
+/// # Arguments
+/// `fit` — the curve; `x` — the ages it was fitted to (n), days; `residuals` — y less the curve
+/// (n).
+///
 /// # Returns
 /// None when the squared residuals do not differ, or the regressors do not.
 ///

@@ -19,11 +19,17 @@ pub struct LjungBox {
 
 /// Returns the number of lags to look at: a fifth of the residuals, 1 to 10 (common practice, no
 /// source).
+///
+/// # Arguments
+/// `n` — residuals.
 pub fn usual_lags(n: usize) -> usize {
     (n / 5).clamp(1, LAGS_MAX)
 }
 
 /// Returns the Ljung–Box test over `lags` lags; autocorrelations of the residuals less their mean.
+///
+/// # Arguments
+/// `residuals` — in order of age (n); `lags` — at least 1, below n.
 ///
 /// # Returns
 /// None when the residuals do not differ, or there are no more of them than lags.

@@ -29,7 +29,8 @@ pub struct ResidualTests {
 /// Tests the residuals of a curve.
 ///
 /// # Arguments
-/// `fit` — by plain least squares; `x`, `y` — what it was fitted to, in order of age.
+/// `fit` — by plain least squares; `x`, `y` — the ages (n), days, and deviations (n) it was fitted
+/// to, in order of age.
 pub fn test_residuals(fit: &Fit, x: &[f64], y: &[f64]) -> ResidualTests {
     let residuals = fit.residuals(x, y);
     let basis = Intervals::new(fit, x, 0.95).map(|intervals| intervals.orthonormal_rows(x));

@@ -25,7 +25,8 @@ pub struct Reset {
 /// coefficients.
 ///
 /// # Arguments
-/// `basis` — orthonormal rows spanning the curve's columns.
+/// `fit` — the curve; `x` — the ages it was fitted to (n), days; `residuals` — y less the curve
+/// (n); `basis` — orthonormal rows (n) spanning the curve's columns.
 ///
 /// # Returns
 /// None with too few readings, or when the powers add nothing to the columns.

@@ -26,6 +26,9 @@ pub struct Runs {
 
 /// Returns the runs test about 0; residuals of no sign are left out.
 ///
+/// # Arguments
+/// `residuals` — in order of age.
+///
 /// # Returns
 /// None when all residuals have one sign.
 ///

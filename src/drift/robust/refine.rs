@@ -61,6 +61,9 @@ impl Secant {
 impl Target<'_> {
     /// Refines to where neither curve nor limit moves.
     ///
+    /// # Arguments
+    /// `theta` — where to start, as the shape has it.
+    ///
     /// # Numerics
     /// Newton on Huber's loss by scaled normal equations, the limit taken anew at each step; steps are
     /// halved while they raise the loss. Settled when what is left to go, judged by how fast the steps
@@ -68,7 +71,7 @@ impl Target<'_> {
     ///
     /// # Source
     /// Huber (1981), Robust Statistics, ch. 7. From memory.
-    pub fn refine(&mut self, mut theta: Coefficients) -> Result<Refined, FitOutcome> {
+    pub(super) fn refine(&mut self, mut theta: Coefficients) -> Result<Refined, FitOutcome> {
         let rounding = ROUNDING_SQUARED * dot(self.y, self.y);
         let p = self.family.parameter_count();
         self.evaluate(&theta);

@@ -6,6 +6,13 @@ use crate::drift::workspace::refill;
 pub const CLIP_WINSOR: f64 = 3.0;
 
 /// Returns 1.4826 times the median of |r|: the standard deviation of normal noise, outliers or not.
+///
+/// # Arguments
+/// `residuals` — any unit and order; 0 of none.
+///
+/// # Source
+/// F. R. Hampel, JASA 69, 1974, as in [`crate::drift::serial::robust_sigma`]; about 0, not the
+/// median.
 pub fn robust_scale(residuals: &[f64]) -> f64 {
     robust_scale_in(residuals, &mut Vec::with_capacity(residuals.len()))
 }

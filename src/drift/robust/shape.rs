@@ -22,7 +22,7 @@ const TAU_CLEAR: (f64, f64) = (0.04, 0.5 * TAU_MAX);
 
 impl Target<'_> {
     /// Number of leading coefficients in which the curve is linear.
-    pub fn linear(&self) -> usize {
+    pub(super) fn linear(&self) -> usize {
         match self.family {
             Family::Power => 1,
             Family::OffsetPower | Family::Exponential => 2,
@@ -30,13 +30,16 @@ impl Target<'_> {
         }
     }
 
-    /// What stands before the nonlinear coefficient's column; None in straight families.
-    pub fn factor(&self, theta: &Coefficients) -> Option<f64> {
+    /// Returns what stands before the nonlinear coefficient's column; None in straight families.
+    ///
+    /// # Arguments
+    /// `theta` — coefficients of the shape, in the frame, unused places 0.
+    pub(super) fn factor(&self, theta: &Coefficients) -> Option<f64> {
         (!self.family.is_linear_in_coefficients()).then(|| theta[self.linear() - 1])
     }
 
     /// The columns that do not depend on the coefficients.
-    pub fn fill_constant_columns(&mut self) {
+    pub(super) fn fill_constant_columns(&mut self) {
         let [first, second, third, fourth] = &mut *self.columns;
         if self.family != Family::Power {
             first.fill(1.0);
@@ -66,7 +69,10 @@ impl Target<'_> {
     }
 
     /// Holds a curve against the data: columns and residuals.
-    pub fn evaluate(&mut self, theta: &Coefficients) {
+    ///
+    /// # Arguments
+    /// `theta` — coefficients of the shape, in the frame, unused places 0.
+    pub(super) fn evaluate(&mut self, theta: &Coefficients) {
         if let Some(k) = self.factor(theta).map(|_| theta[self.linear()]) {
             self.fill_columns(k);
             self.weigh(self.curved());
@@ -77,9 +83,13 @@ impl Target<'_> {
         }
     }
 
-    /// The columns that depend on the nonlinear coefficient, not weighted yet; one `exp` for each
-    /// reading. The exponentials themselves stay in the first column of the power, the last of the others.
-    pub fn fill_columns(&mut self, k: f64) {
+    /// Fills the columns that depend on the nonlinear coefficient, not weighted yet; one `exp` for
+    /// each reading. The exponentials themselves stay in the first column of the power, the last of
+    /// the others.
+    ///
+    /// # Arguments
+    /// `k` — the nonlinear coefficient, finite, may be 0.
+    pub(super) fn fill_columns(&mut self, k: f64) {
         let [first, second, third, fourth] = &mut *self.columns;
         if self.family == Family::Power {
             exponentials(first, self.ages, k);
@@ -102,9 +112,12 @@ impl Target<'_> {
         }
     }
 
-    /// The family's own inner coefficients, not finite or not positive where it has passed into a
-    /// plainer one.
-    pub fn inner(&self, theta: &Coefficients) -> Coefficients {
+    /// Returns the family's own inner coefficients, not finite or not positive where it has passed
+    /// into a plainer one.
+    ///
+    /// # Arguments
+    /// `theta` — coefficients of the shape, in the frame, unused places 0.
+    pub(super) fn inner(&self, theta: &Coefficients) -> Coefficients {
         let [level, slope, k, _] = *theta;
         match self.family {
             Family::OffsetPower => [level - slope / k, slope / k, k, 0.0],
@@ -113,8 +126,12 @@ impl Target<'_> {
         }
     }
 
-    /// The nonlinear coefficient of the shape, from the family's own in the units of the data.
-    pub fn nonlinear(&self, outer: &Coefficients) -> Option<f64> {
+    /// Returns the nonlinear coefficient of the shape, from the family's own in the units of the
+    /// data.
+    ///
+    /// # Arguments
+    /// `outer` — coefficients in the units of the data.
+    pub(super) fn nonlinear(&self, outer: &Coefficients) -> Option<f64> {
         match self.family {
             Family::Power => Some(outer[1]),
             Family::OffsetPower => Some(outer[2]),
@@ -124,7 +141,10 @@ impl Target<'_> {
     }
 
     /// Whether the nonlinear coefficient keeps clear of where the family's bounds are.
-    pub fn well_within_bounds(&self, theta: &Coefficients) -> bool {
+    ///
+    /// # Arguments
+    /// `theta` — coefficients of the shape, in the frame, unused places 0.
+    pub(super) fn well_within_bounds(&self, theta: &Coefficients) -> bool {
         let [_, b, k, _] = *theta;
         let clear = |k: f64| EXPONENT.0 + CLEAR < k && k < EXPONENT.1 - CLEAR;
         match self.family {
@@ -136,7 +156,10 @@ impl Target<'_> {
     }
 
     /// Turns the columns into derivatives to the family's own inner coefficients.
-    pub fn own_columns(&mut self, inner: &Coefficients) {
+    ///
+    /// # Arguments
+    /// `inner` — the family's own inner coefficients, from `Target::inner`.
+    pub(super) fn own_columns(&mut self, inner: &Coefficients) {
         let a = inner[self.linear() - 1];
         let [_, second, third, fourth] = &mut *self.columns;
         match self.family {

@@ -53,14 +53,14 @@ impl Grid {
 
 impl Target<'_> {
     /// Least squares for a family linear in its coefficients.
-    pub fn line(&mut self) -> Result<Coefficients, FitOutcome> {
+    pub(super) fn line(&mut self) -> Result<Coefficients, FitOutcome> {
         let p = self.family.parameter_count();
         let solved = solve_columns(&self.columns[..p], self.y, self.scratch);
         Ok(solved.ok_or(FitOutcome::Entangled)?.coefficients)
     }
 
     /// ln|y| against ln x, a line, transformed back. None when y changes sign or touches 0.
-    pub fn log_log_line(&mut self) -> Option<Coefficients> {
+    pub(super) fn log_log_line(&mut self) -> Option<Coefficients> {
         let sign = self.raw[0].signum();
         if !self.raw.iter().all(|v| v * sign > 0.0) {
             return None;
@@ -80,7 +80,7 @@ impl Target<'_> {
     /// # Numerics
     /// On a grid on which each power or exponential follows from another by multiplication; then a
     /// parabola through the best point and its neighbours.
-    pub fn project(&mut self) -> Result<Coefficients, FitOutcome> {
+    pub(super) fn project(&mut self) -> Result<Coefficients, FitOutcome> {
         let mean = self.centred();
         let total = dot(self.clipped, self.clipped);
         if self.clipped.iter().all(|v| v.abs() <= 0.0) {
@@ -104,8 +104,11 @@ impl Target<'_> {
         Ok(self.coefficients(k, mean))
     }
 
-    /// The coefficients with the smallest sum of squares with the nonlinear one given.
-    pub fn project_at(&mut self, k: f64) -> Coefficients {
+    /// Returns the coefficients with the smallest sum of squares with the nonlinear one given.
+    ///
+    /// # Arguments
+    /// `k` — the nonlinear coefficient of the shape, as `Target::nonlinear` gives it.
+    pub(super) fn project_at(&mut self, k: f64) -> Coefficients {
         let mean = self.centred();
         self.coefficients(k, mean)
     }

@@ -152,7 +152,10 @@ impl Baseline {
         self.frozen
     }
 
-    /// How far the baseline rests on the channel's own past, 0 … 1.
+    /// Returns how far the baseline rests on the channel's own past, 0 … 1.
+    ///
+    /// # Arguments
+    /// `points` — n, points in the window.
     pub fn settled(&self, points: usize) -> f64 {
         (self.weight / (FILL_IN_WINDOWS * points.max(1) as f64)).min(1.0)
     }

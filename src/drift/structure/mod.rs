@@ -73,7 +73,11 @@ impl Kind {
         }
     }
 
-    /// What [`Score::size`] is measured in, given the channel's unit.
+    /// Returns what [`Score::size`] is measured in, given the channel's unit; empty for a pure
+    /// number.
+    ///
+    /// # Arguments
+    /// `unit` — the channel's.
     pub fn size_unit(self, unit: &str) -> String {
         match self {
             Kind::Shift | Kind::Step => unit.to_owned(),
@@ -151,7 +155,10 @@ pub struct Examination {
 }
 
 impl Examination {
-    /// The score of a kind, `None` where this look did not reach it.
+    /// Returns the score of a kind, `None` where this look did not reach it.
+    ///
+    /// # Arguments
+    /// `kind` — of structure.
     pub fn score(&self, kind: Kind) -> Option<&Score> {
         match kind {
             Kind::Shift => Some(&self.shift),

@@ -14,7 +14,7 @@ const ROUNDING: f64 = 1e-12;
 /// `y` — readings in time order, their own unit.
 /// # Outcomes
 /// `None` when fewer than two neighbours repeat, or nothing ever changes.
-pub fn resolution_of(y: &[f64]) -> Option<f64> {
+pub(crate) fn resolution_of(y: &[f64]) -> Option<f64> {
     let largest = y.iter().fold(0.0_f64, |m, v| m.max(v.abs()));
     let mut repeats = 0;
     let mut smallest = f64::INFINITY;
@@ -40,7 +40,7 @@ pub fn resolution_of(y: &[f64]) -> Option<f64> {
 /// G. L. Steele, D. Lea and C. H. Flood, Fast splittable pseudorandom number generators, OOPSLA
 /// 2014. Rectangular dither of one step: L. Schuchman, Dither signals and their effect on
 /// quantization noise, IEEE Transactions on Communication Technology 12, 1964.
-pub fn dither(x: f64, resolution: f64) -> f64 {
+pub(crate) fn dither(x: f64, resolution: f64) -> f64 {
     let mut z = x.to_bits().wrapping_add(0x9E37_79B9_7F4A_7C15);
     z = (z ^ (z >> 30)).wrapping_mul(0xBF58_476D_1CE4_E5B9);
     z = (z ^ (z >> 27)).wrapping_mul(0x94D0_49BB_1331_11EB);

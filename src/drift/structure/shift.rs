@@ -30,11 +30,17 @@ pub struct ShiftDetector {
 
 impl ShiftDetector {
     /// Takes the newest point of the window; returns the score, in [0, 100].
+    ///
+    /// # Arguments
+    /// `w` — the whitened window, the newest point in it.
     pub fn update(&mut self, w: &Whitened) -> f64 {
         self.take(w, 1)
     }
 
     /// Takes the newest `count` points in turn, at most the window; returns the score after them.
+    ///
+    /// # Arguments
+    /// `w` — the whitened window; `count` — newest points not yet taken.
     pub fn take(&mut self, w: &Whitened, count: usize) -> f64 {
         let n = w.len();
         for j in n - count.min(n - 1)..n {

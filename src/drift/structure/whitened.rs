@@ -92,6 +92,9 @@ impl Whitened {
     }
 
     /// Rebuilds the window for a new frame in the same memory; `false` as `None` of [`Self::new`].
+    ///
+    /// # Arguments
+    /// As for [`Self::new`].
     pub fn refill(&mut self, frame: Frame, x: &[f64], y: &[f64]) -> bool {
         self.frame = frame;
         self.fill(x, y)
