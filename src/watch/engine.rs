@@ -754,6 +754,18 @@ mod tests {
     }
 
     #[test]
+    fn an_instrument_left_outside_its_tolerance_is_told_by_the_mark_itself() {
+        let rules = WatchSettings { tolerance: Some(0.5), ..rules() };
+        let mut engine = Engine::new(site(rules), ShellTime(START));
+        feed(&mut engine, 0, &[0.1, 0.2, 0.3]);
+        let at = EventTime(START + 3 * STEP_US);
+        let mark = Action::Calibrated { at, as_found: None, as_left: Some(-0.9), note: None };
+        assert!(engine.act("press.PT-1", &mark, 4, ShellTime(at.0)));
+        let says = &engine.observe("press.PT-1").unwrap().alerts.open()[0].claim.words.says;
+        assert!(says.contains("left the deviation at -0.900 bar"), "{says}");
+    }
+
+    #[test]
     fn a_calibration_mark_moves_age_zero_and_begins_anew() {
         let mut engine = Engine::new(site(rules()), ShellTime(START));
         feed(&mut engine, 0, &curve(400, 16, |_| 0.0));

@@ -9,7 +9,7 @@ use crate::watch::finding::Decision;
 use crate::watch::incident::Incident;
 use crate::watch::report;
 use crate::watch::time::{EventTime, ShellTime};
-use crate::watch::wording;
+use crate::watch::wording::{self, Words};
 use serde::{Deserialize, Serialize};
 
 /// Scores above this are not told as smaller probabilities: simulation went no further.
@@ -133,9 +133,20 @@ pub fn new_cycle(
     for concern in OF_THE_WINDOW {
         push(outcome, channel.alerts.end(concern, mark, Ending::Calibrated));
     }
-    let outside = as_left.zip(context.rules.tolerance).is_some_and(|(v, limit)| v.abs() > limit);
-    if !outside {
-        push(outcome, channel.alerts.end(Concern::Tolerance, mark, Ending::Calibrated));
+    match as_left.zip(context.rules.tolerance).filter(|(value, limit)| value.abs() > *limit) {
+        Some((value, limit)) => {
+            let words = wording::left_outside(value, limit, &context.rules.unit);
+            let evidence = Evidence { size: Some(value), at: Some(mark), ..Evidence::default() };
+            raise_or_revise(
+                channel,
+                context,
+                Kind::OutOfTolerance,
+                (evidence, words),
+                mark,
+                outcome,
+            );
+        }
+        None => push(outcome, channel.alerts.end(Concern::Tolerance, mark, Ending::Calibrated)),
     }
     outcome.findings.extend(report::finding_if_any(channel, context));
 }
@@ -250,11 +261,14 @@ fn tolerance_now(
             }
             let words = wording::out_of_tolerance(value, guard, limit, &context.rules.unit);
             let evidence = Evidence { size: Some(value), at: Some(time), ..Evidence::default() };
-            let claim = Claim { kind: Kind::OutOfTolerance, evidence, words };
-            match channel.alerts.revise(claim.clone(), time) {
-                Some(event) => outcome.events.push(event),
-                None => raise(channel, context, claim, time, outcome),
-            }
+            raise_or_revise(
+                channel,
+                context,
+                Kind::OutOfTolerance,
+                (evidence, words),
+                time,
+                outcome,
+            );
         }
         Decision::Pass | Decision::ConditionalPass
             if value.abs() <= limit - RETURN_SHARE * guard.unwrap_or(0.0).min(limit) =>
@@ -278,13 +292,13 @@ fn statement(channel: &mut Channel, context: &Context<'_>, time: EventTime, outc
         push(outcome, channel.alerts.end(Concern::ToleranceAhead, time, Ending::DayPassed));
         return;
     };
-    let (supported, limit_words) = (refit.reach.days_past_newest, refit.reach.limit.words());
+    let (supported, limit) = (refit.reach.days_past_newest, refit.reach.limit);
     if report::gathering(channel, context).is_some() {
         return;
     }
     match counted(&mut channel.patience.refused, said.ahead.is_none(), REFITS_FOR_REACH) {
         Some(true) => {
-            let words = wording::beyond_reach(day, needs, supported, &limit_words);
+            let words = wording::beyond_reach(day, needs, supported, &limit);
             let evidence =
                 Evidence { statistic: Some(needs), size: Some(supported), ..Evidence::default() };
             let evidence = Evidence { at: Some(day), ..evidence };
@@ -313,6 +327,22 @@ fn statement(channel: &mut Channel, context: &Context<'_>, time: EventTime, outc
             push(outcome, channel.alerts.end(Concern::ToleranceAhead, time, ending));
         }
         None => {}
+    }
+}
+
+/// Raises an alert, or tells the open one of its concern anew with what is known now.
+fn raise_or_revise(
+    channel: &mut Channel,
+    context: &Context<'_>,
+    kind: Kind,
+    (evidence, words): (Evidence, Words),
+    time: EventTime,
+    outcome: &mut Outcome,
+) {
+    let claim = Claim { kind, evidence, words };
+    match channel.alerts.revise(claim.clone(), time) {
+        Some(event) => outcome.events.push(event),
+        None => raise(channel, context, claim, time, outcome),
     }
 }
 

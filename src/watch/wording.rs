@@ -4,6 +4,7 @@
 //! escaped, where a line is shown.
 
 use crate::drift::family::Family;
+use crate::drift::reach::Limit;
 use crate::watch::alert::{Ending, Kind};
 use crate::watch::time::EventTime;
 use serde::{Deserialize, Serialize};
@@ -139,7 +140,17 @@ pub fn dependence(found: f64, usual: f64) -> Words {
 }
 
 /// A statement for `asked` needs `needed_d` past the newest reading; `supported_d` are supported.
-pub fn beyond_reach(asked: EventTime, needed_d: f64, supported_d: f64, limit: &str) -> Words {
+pub fn beyond_reach(asked: EventTime, needed_d: f64, supported_d: f64, limit: &Limit) -> Words {
+    let advice: &[&str] = match limit {
+        Limit::NoScatter => {
+            &["Check whether the sender repeats an old value or rounds too coarsely."]
+        }
+        _ => &[
+            "Plan a check against a reference within the supported days.",
+            "Or wait: more readings may carry the statement further.",
+        ],
+    };
+    let limit = limit.words();
     let (needed, supported) = unequal_days(needed_d, supported_d);
     Words {
         says: format!(
@@ -149,10 +160,7 @@ pub fn beyond_reach(asked: EventTime, needed_d: f64, supported_d: f64, limit: &s
             needed,
             supported
         ),
-        check_first: list(&[
-            "Plan a check against a reference within the supported days.",
-            "Or wait: more readings may carry the statement further.",
-        ]),
+        check_first: list(advice),
     }
 }
 
@@ -198,6 +206,18 @@ pub fn out_of_tolerance(value: f64, guard: Option<f64>, limit: f64, unit: &str) 
             "Confirm with a reference.",
             "If confirmed, calibrate, and review what was measured since the last good check.",
         ]),
+    }
+}
+
+/// A calibration left the instrument outside the tolerance.
+pub fn left_outside(value: f64, limit: f64, unit: &str) -> Words {
+    let value = number(value, true);
+    Words {
+        says: format!(
+            "The calibration on record left the deviation at {value} {unit}, outside the tolerance \
+             of ±{limit} {unit}."
+        ),
+        check_first: list(&["Adjust and calibrate again, or record the value as left anew."]),
     }
 }
 
@@ -312,10 +332,12 @@ mod tests {
             step(0.31, "bar", AT),
             bend(-0.002, "bar", AT, Family::Power),
             dependence(0.82, 0.3),
-            beyond_reach(AT, 30.0, 18.4, "backtests at 25 d missed by 2.4 times"),
+            beyond_reach(AT, 30.0, 18.4, &Limit::Missed { at_d: 25.0, times: 2.4 }),
+            beyond_reach(AT, 30.0, 0.0, &Limit::NoScatter),
             tolerance_ahead((0.3, 0.2, 0.4), 0.25, "bar", AT, Some(AT)),
             out_of_tolerance(0.3, Some(0.02), 0.25, "bar"),
             out_of_tolerance(0.3, None, 0.25, "bar"),
+            left_outside(0.3, 0.25, "bar"),
             unusable(None, 3.0, "late, not fitted"),
             no_curve("all ages are 0"),
             silent(AT, 3.0),
