@@ -61,7 +61,7 @@ pub(crate) fn look(w: &Whitened, work: &mut Workspace) -> StepLook {
     StepLook { score: Score::new(Kind::Step, q, size, best.tau, w.points[best.tau].x), removed }
 }
 
-pub(super) fn column(w: &Whitened, tau: usize, j: usize) -> f64 {
+fn column(w: &Whitened, tau: usize, j: usize) -> f64 {
     match j.cmp(&tau) {
         std::cmp::Ordering::Less => 0.0,
         std::cmp::Ordering::Equal => w.points[j].a1,
