@@ -8,6 +8,7 @@ use crate::drift::choose::Choice;
 use crate::drift::fit::Fit;
 use crate::drift::reach::{Limit, Reach};
 use crate::drift::structure;
+use crate::drift::workspace::Workspace;
 use crate::watch::alert::{AlertBook, AlertEvent, Owner};
 use crate::watch::budget::Budget;
 use crate::watch::finding::Finding;
@@ -104,6 +105,15 @@ pub struct Channel {
     stride: f64,
 }
 
+/// Memory that channels take turns in; what it holds never changes a result.
+#[derive(Debug, Default)]
+pub struct Work {
+    /// For fits.
+    pub fits: Workspace,
+    /// For looks at residuals.
+    pub looks: structure::Workspace,
+}
+
 /// What a channel needs to know of the site.
 #[derive(Clone, Copy, Debug)]
 pub struct Context<'a> {
@@ -156,7 +166,7 @@ impl Channel {
         context: &Context<'_>,
         reading: &Reading,
         now: ShellTime,
-        work: &mut structure::Workspace,
+        work: &mut Work,
     ) -> (Taken, Outcome) {
         let mut outcome = Outcome::default();
         let began = self.cycle.is_none();
@@ -264,7 +274,7 @@ impl Channel {
         &mut self,
         context: &Context<'_>,
         newest: EventTime,
-        work: &mut structure::Workspace,
+        work: &mut Work,
         outcome: &mut Outcome,
     ) {
         if self.refit.is_some() && self.window.points().len() < POINTS_TO_FIT {
@@ -280,12 +290,12 @@ impl Channel {
             }
         };
         if due {
-            self.refit(context, newest);
+            self.refit(context, newest, &mut work.fits);
         }
         let turn = self.look(context, newest, due, work, outcome);
         self.follow(context, turn, newest, outcome);
         if due || matches!(turn, Turn::Settled { .. }) {
-            self.begin_anew_at_break(context, newest);
+            self.begin_anew_at_break(context, newest, &mut work.fits);
         }
         if due {
             judge::after_refit(self, context, newest, outcome);
@@ -304,7 +314,7 @@ impl Channel {
         context: &Context<'_>,
         newest: EventTime,
         full: bool,
-        work: &mut structure::Workspace,
+        work: &mut Work,
         outcome: &mut Outcome,
     ) -> Turn {
         let place = Place {
@@ -316,7 +326,7 @@ impl Channel {
             age_zero: self.cycle.map_or(EventTime(0), |cycle| cycle.age_zero),
             points: self.window.points(),
         };
-        let Some((turn, look)) = self.residuals.look(&place, full, work) else {
+        let Some((turn, look)) = self.residuals.look(&place, full, &mut work.looks) else {
             return Turn::Nothing;
         };
         outcome.looks.push((newest, self.points_ever, look));
@@ -352,7 +362,12 @@ impl Channel {
     }
 
     /// After a settled step or bend: the window begins at the break, once enough points follow it.
-    fn begin_anew_at_break(&mut self, context: &Context<'_>, newest: EventTime) {
+    fn begin_anew_at_break(
+        &mut self,
+        context: &Context<'_>,
+        newest: EventTime,
+        fits: &mut Workspace,
+    ) {
         let Some(at) = self.residuals.incident().and_then(Incident::settled_break) else { return };
         let points = self.window.points();
         let after = points.iter().filter(|p| p.time >= at).count();
@@ -363,6 +378,6 @@ impl Channel {
         self.residuals.begin_anew();
         self.refit =
             self.refit.take().map(|refit| Refit { reach: Reach::none(Limit::NoCurve), ..refit });
-        self.refit(context, newest);
+        self.refit(context, newest, fits);
     }
 }

@@ -3,10 +3,9 @@
 //! Readings and actions go in with their journal numbers, effects come out. The same readings in the
 //! same order give the same effects, whether live, replayed or continued after a restart.
 
-use crate::drift::structure::Workspace;
 use crate::watch::alert::{AlertEvent, Concern, Episode};
 use crate::watch::budget::Budget;
-use crate::watch::channel::{Channel, Context, Outcome};
+use crate::watch::channel::{Channel, Context, Outcome, Work};
 use crate::watch::finding::Finding;
 use crate::watch::incident::Look;
 use crate::watch::judge;
@@ -106,7 +105,7 @@ pub struct Engine {
     effects: Vec<Effect>,
     refused: Counts,
     /// Memory that the looks share; holds nothing between them.
-    work: Workspace,
+    work: Work,
 }
 
 impl Engine {
@@ -123,7 +122,7 @@ impl Engine {
             due: None,
             effects: Vec::new(),
             refused: Counts::default(),
-            work: Workspace::default(),
+            work: Work::default(),
         }
     }
 

@@ -16,7 +16,12 @@ use crate::watch::weights::weights;
 
 impl Channel {
     /// Fits every family, chooses, and assesses the reach.
-    pub(super) fn refit(&mut self, context: &Context<'_>, at: EventTime) {
+    pub(super) fn refit(
+        &mut self,
+        context: &Context<'_>,
+        at: EventTime,
+        workspace: &mut Workspace,
+    ) {
         let (x, y) = self.series();
         let current = self.refit.as_ref().and_then(Refit::curve).map(|fit| fit.family);
         let fresh = self.points_ever - self.points_at_refit;
@@ -25,19 +30,18 @@ impl Channel {
         }
         self.points_at_refit = self.points_ever;
         self.points_in_refit = x.len();
-        let mut workspace = Workspace::default();
-        let weights = self.weights(&x, &y, &mut workspace);
+        let weights = self.weights(&x, &y, workspace);
         let data = Data { x: &x, y: &y, weights: weights.as_deref() };
         let (mut fits, mut not_fitted) = (Vec::new(), Vec::new());
         for &family in &context.rules.families {
-            match data.fit(family, &mut workspace) {
+            match data.fit(family, workspace) {
                 FitOutcome::Fitted(fit) => fits.push(*fit),
                 other => {
                     not_fitted.push((family.name().to_owned(), other.why_not().unwrap_or_default()))
                 }
             }
         }
-        let fits = with_those_that_turn(fits, &data, self.residuals.phi(), current, &mut workspace);
+        let fits = with_those_that_turn(fits, &data, self.residuals.phi(), current, workspace);
         let (_, spacing) = spacing_of(&x);
         let mut choice = None;
         let mut standard_errors = [0.0; 4];
@@ -45,7 +49,7 @@ impl Channel {
             let phi = self.residuals.phi();
             let best = choose(&fits, effective_count(x.len(), phi), current);
             let chosen = &fits[best.chosen];
-            let own = own_correlation_in(chosen, &x, &y, &spacing, &mut workspace);
+            let own = own_correlation_in(chosen, &x, &y, &spacing, workspace);
             if chosen.is_exact() {
                 // Rounding errors have structure, and mean nothing.
                 self.residuals.without_curve();
@@ -54,7 +58,7 @@ impl Channel {
                 self.residuals.refitted(&x, &y, curve, self.points_ever, points_between(fresh));
             }
             let decays = decays(&spacing, phi.max(own).clamp(0.0, 0.97));
-            if let Some((v, _)) = sandwich_in(chosen, &x, &decays, &mut workspace) {
+            if let Some((v, _)) = sandwich_in(chosen, &x, &decays, workspace) {
                 standard_errors = chosen.standard_errors_of(&v);
             }
             choice = Some(best);
@@ -62,7 +66,7 @@ impl Channel {
             self.residuals.without_curve();
         }
         let curve = choice.as_ref().map(|best: &Choice| &fits[best.chosen]);
-        let (reach, said) = self.say(context, at, (&x, &y), curve, &mut workspace);
+        let (reach, said) = self.say(context, at, (&x, &y), curve, workspace);
         self.refit = Some(Refit { at, fits, choice, standard_errors, not_fitted, reach, said });
     }
 
@@ -225,9 +229,9 @@ fn points_between(fresh: u64) -> usize {
 mod tests {
     use super::*;
     use crate::drift::robust::fit_robust;
-    use crate::drift::structure::Workspace as Structure;
     use crate::drift::structure::simulate::noise;
     use crate::watch::budget::Budget;
+    use crate::watch::channel::Work;
     use crate::watch::reading::Reading;
     use crate::watch::settings::WatchSettings;
     use crate::watch::settings::tests::watch_settings;
@@ -276,7 +280,7 @@ mod tests {
     }
 
     fn feed(channel: &mut Channel, readings: &[Reading]) {
-        let (rules, mut work) = (rules(), Structure::default());
+        let (rules, mut work) = (rules(), Work::default());
         let budget = Budget { false_alerts_per_year_site: 0.5, channels: 1 };
         let context = Context { site: "saltmarsh", rules: &rules, budget };
         for reading in readings {
